@@ -1,0 +1,1 @@
+"""The bodies of the command line's commands, one module a group."""
