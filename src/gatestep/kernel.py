@@ -61,6 +61,13 @@ BANK = np.dtype(
 compiled = njit(cache=True, nogil=True, error_model="numpy")
 """How every kernel is compiled: cached, without the GIL, IEEE arithmetic, no fastmath."""
 
+
+
+def records(dtype: np.dtype[Any], count: int = 1) -> Any:
+    """``count`` zeroed records whose fields are attributes, compiled or not."""
+    return np.zeros(count, dtype).view(np.recarray)
+
+
 _ONE = np.uint64(1)
 _BLOCK = np.uint64(WIDTH)
 
