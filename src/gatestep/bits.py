@@ -8,8 +8,8 @@ from __future__ import annotations
 
 from typing import Any
 
-import llvmlite.ir as ir
 import numpy as np
+from llvmlite import ir
 from numba import config, types
 from numba.extending import intrinsic
 

@@ -32,6 +32,9 @@ NOTHING = -1
 CLOSED = -2
 """Size reported when the socket can no longer be used."""
 
+SENT, STALLED, GONE = 0, 1, 2
+"""What became of a reply: sent; dropped because the peer reads nothing; peer gone."""
+
 LANE = np.dtype(
     [
         ("socket", "u8"),  # libzmq's address of the loop socket
@@ -58,6 +61,7 @@ _DONT_WAIT = int(zmq.DONTWAIT)
 _SEND_MORE = int(zmq.SNDMORE) | _DONT_WAIT
 _RCVMORE = int(zmq.RCVMORE)
 _EAGAIN = int(zmq.EAGAIN)
+_EHOSTUNREACH = int(zmq.EHOSTUNREACH)
 _EINTR = 4
 _MONOTONIC = 1
 _MAX_MESSAGE = MAX_MESSAGE
@@ -161,7 +165,7 @@ def receive(lane: Any) -> int:
     size = np.int64(_zmq_recv(lane.socket, lane.peer_at, np.uint64(_MAX_PEER), 0))
     if size < 0:
         error = _zmq_errno()
-        return NOTHING if error in (_EAGAIN, _EINTR) else CLOSED
+        return NOTHING if error == _EAGAIN or error == _EINTR else CLOSED
     lane.peer_size = size
     lane.enveloped = 0
     size = 0
@@ -177,14 +181,13 @@ def receive(lane: Any) -> int:
 
 
 @compiled
-def reply(lane: Any, size: int) -> bool:
-    """[hot] Answer the last message's peer with ``lane.out``; False if it has gone."""
+def reply(lane: Any, size: int) -> int:
+    """[hot] Answer the last message's peer with ``lane.out``: SENT, STALLED or GONE."""
     peer_size = np.uint64(lane.peer_size)
-    sent = _zmq_send(lane.socket, lane.peer_at, peer_size, _SEND_MORE) >= 0
-    if sent and lane.enveloped:
-        sent = _zmq_send(lane.socket, lane.peer_at, np.uint64(0), _SEND_MORE) >= 0
-    if sent:
-        sent = _zmq_send(lane.socket, lane.out_at, np.uint64(size), _DONT_WAIT) >= 0
-    if not sent:
+    if _zmq_send(lane.socket, lane.peer_at, peer_size, _SEND_MORE) < 0:
         lane.undelivered += 1
-    return sent
+        return GONE if _zmq_errno() == _EHOSTUNREACH else STALLED
+    if lane.enveloped:
+        _zmq_send(lane.socket, lane.peer_at, np.uint64(0), _SEND_MORE)
+    _zmq_send(lane.socket, lane.out_at, np.uint64(size), _DONT_WAIT)
+    return SENT

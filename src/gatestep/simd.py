@@ -17,8 +17,8 @@ from __future__ import annotations
 from math import factorial
 from typing import Any
 
-import llvmlite.ir as ir
 import numpy as np
+from llvmlite import ir
 from numba import config, types
 from numba.extending import intrinsic
 

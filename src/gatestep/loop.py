@@ -1,0 +1,442 @@
+"""The hot loop: receive, consider, reply, log. One compiled function on one thread.
+
+:func:`run_loop` runs without the interpreter and without its lock until it is
+ordered to stop. What it shares with the rest of the server are messages: orders
+come in over an inproc socket, and blocks of log entries, each led by a copy of the
+loop's own record, go out over another. Orders are taken between two samples, and
+the order of work is always reply first, log after.
+
+Arrays that the loop reads and others prepare: the banks and their tables. A control
+thread writes only banks that are not in force and hands them over with a ``SWAP``.
+"""
+
+from __future__ import annotations
+
+from enum import IntEnum
+from typing import Any, NamedTuple
+
+import numpy as np
+
+from .kernel import BANK, compiled, records, settle
+from .lanes import CLOSED, GONE, MAX_PEER, NOTHING, now_nsec, receive, reply, send, take
+from .specs import MAX_CELLS, RigSpec
+from .states import Event, Fault, State, next_state
+from .tick import (
+    ANSWERED,
+    CELL,
+    HISTORY,
+    LOOP,
+    WAS_MALFORMED,
+    begin_session,
+    consider,
+    refuse,
+    settle_answer,
+    trip,
+)
+from .wire import ANSWER, NIL, SAMPLE, write_answer, write_malformed
+
+
+class Order(IntEnum):
+    """What the loop can be told to do."""
+
+    ARM = 0
+    DISARM = 1
+    RESET = 2
+    STOP = 3
+    SWAP = 4
+    SET_GMAX = 5
+    SET_REVERSAL = 6
+    MARK = 7
+
+
+class Outcome(IntEnum):
+    """What became of an order."""
+
+    DONE = 0
+    TRIPPED = 1
+    WRONG_TICK = 2
+
+
+class Entry(IntEnum):
+    """What a log entry tells."""
+
+    SAMPLE = 0
+    ORDER = 1
+    TRIP = 2
+    HOLD = 3
+    RELEASE = 4
+    CLOCK_JUMP = 5
+
+
+ORDER = np.dtype(
+    [
+        ("number", "i8"),  # echoed in the log entry that tells the outcome
+        ("kind", "i8"),
+        ("cell", "i8"),
+        ("index", "i8"),  # bank for SWAP, conductance for SET_GMAX and SET_REVERSAL
+        ("value", "f8"),
+    ],
+    align=True,
+)
+ENTRY = np.dtype(
+    [
+        ("kind", "i8"),
+        ("nsec", "i8"),  # monotonic time: of arrival for a sample
+        ("seq", "i8"),
+        ("t_us", "f8"),
+        ("in_force", "i8"),
+        ("lag_us", "f8"),
+        ("flags", "i8"),
+        ("service_nsec", "i8"),
+        ("number", "i8"),  # of an order
+        ("code", "i8"),  # kind of an order, fault of a trip, session of a hold
+        ("outcome", "i8"),
+        ("cell", "i8"),
+        ("index", "i8"),
+        ("value", "f8"),
+        ("v_mv", "f8", (MAX_CELLS,)),
+        ("i_pa", "f8", (MAX_CELLS,)),
+    ],
+    align=True,
+)
+
+BLOCK = 128
+"""Most log entries in one message."""
+
+DESK = np.dtype(
+    [
+        ("orders", "u8"),  # libzmq's addresses of the two inproc sockets
+        ("log", "u8"),
+        ("order_at", "u8"),
+        ("block_at", "u8"),
+        ("entries", "i8"),  # waiting in the block
+        ("flushed_nsec", "i8"),
+        ("holder_size", "i8"),
+        ("holder", "u1", (MAX_PEER,)),
+    ],
+    align=True,
+)
+
+_FLUSH_NSEC = 20_000_000
+_STOP_NSEC = 250_000_000
+_ORDERS_A_TURN = 4
+_BLOCK = BLOCK
+_LOOP_SIZE = LOOP.itemsize
+_ENTRY_SIZE = ENTRY.itemsize
+_ORDER_SIZE = ORDER.itemsize
+_IDLE, _TRIPPED = int(State.IDLE), int(State.TRIPPED)
+_ORDER_EVENTS = np.array([Event.ARM, Event.DISARM, Event.RESET], dtype=np.int64)
+_ARM, _RESET, _STOP = int(Order.ARM), int(Order.RESET), int(Order.STOP)
+_MARK, _SWAP = int(Order.MARK), int(Order.SWAP)
+_SET_GMAX, _SET_REVERSAL = int(Order.SET_GMAX), int(Order.SET_REVERSAL)
+_DONE, _WAS_TRIPPED = int(Outcome.DONE), int(Outcome.TRIPPED)
+_WAS_WRONG_TICK = int(Outcome.WRONG_TICK)
+_SAMPLE, _ORDER, _TRIP = int(Entry.SAMPLE), int(Entry.ORDER), int(Entry.TRIP)
+_HOLD, _RELEASE, _CLOCK_JUMP = int(Entry.HOLD), int(Entry.RELEASE), int(Entry.CLOCK_JUMP)
+_NO_FAULT, _SILENCE = int(Fault.NONE), int(Fault.SILENCE)
+
+
+class LoopMemory(NamedTuple):
+    """Everything the hot loop touches, allocated before it starts.
+
+    ``block`` is one buffer: the ``LOOP`` record, then ``BLOCK`` entries, so that a
+    flush is a single send. ``loop`` and ``entries`` are views of it.
+    """
+
+    desk: Any
+    lane: Any
+    block: Any
+    loop: Any
+    entries: Any
+    cells: Any
+    banks: Any
+    table: Any
+    past: Any
+    order: Any
+    sample: Any
+    answer: Any
+
+
+def make_memory(rig: RigSpec, lane: Any, orders: int, log: int, table: Any) -> LoopMemory:
+    """Allocate and set up what the loop needs.
+
+    Parameters
+    ----------
+    rig : RigSpec
+        Limits, interval and budget are taken from it.
+    lane : ndarray of LANE
+        From :func:`gatestep.lanes.make_lane`.
+    orders, log : int
+        ``Socket.underlying`` of the loop's ends of the inproc sockets.
+    table : ndarray of float64
+        Room for the tables of two banks a cell.
+    """
+    block = np.zeros(_LOOP_SIZE + BLOCK * _ENTRY_SIZE, np.uint8)
+    loop = block[:_LOOP_SIZE].view(LOOP).view(np.recarray)
+    entries = block[_LOOP_SIZE:].view(ENTRY).view(np.recarray)
+    order = records(ORDER)
+    desk = records(DESK)
+    desk[0].orders, desk[0].log = orders, log
+    desk[0].order_at, desk[0].block_at = order.ctypes.data, block.ctypes.data
+    _set_up_loop(loop[0], rig)
+    cells = records(CELL, len(rig.cell))
+    for cell, spec in zip(cells, rig.cell, strict=True):
+        limit = spec.limits.current_pa
+        slew = spec.limits.slew_pa_per_ms
+        cell.limit_pa = limit
+        cell.slew_pa = 2.0 * limit if slew is None else slew * rig.loop.interval_us * 1e-3
+        cell.low_mv, cell.high_mv = spec.limits.window_mv
+    for k, cell in enumerate(cells):
+        cell.bank = 2 * k
+    return LoopMemory(
+        desk, lane, block, loop, entries, cells, records(BANK, 2 * len(rig.cell)), table,
+        records(ANSWER, HISTORY), order, records(SAMPLE), records(ANSWER),
+    )  # fmt: skip
+
+
+def _set_up_loop(loop: Any, rig: RigSpec) -> None:
+    loop.cells = len(rig.cell)
+    loop.interval_us = rig.loop.interval_us
+    loop.budget_us = rig.loop.budget
+    whole_ticks = int(np.ceil(rig.loop.budget / rig.loop.interval_us - 1e-9))
+    loop.due_ticks = max(whole_ticks, 1) + (rig.loop.apply == "next-tick")
+    loop.silence_nsec = int(rig.limits.silence_ms * 1e6)
+    loop.late_run_limit = rig.limits.late_run
+    loop.fault_cell = NIL
+    loop.late_through = NIL
+
+
+@compiled
+def _flush(m: Any, now: int) -> None:
+    """[hot] Hand the waiting entries to the log; if it is full they are counted lost."""
+    desk = m.desk[0]
+    size = _LOOP_SIZE + desk.entries * _ENTRY_SIZE
+    if not send(desk.log, desk.block_at, size):
+        m.loop[0].records_lost += desk.entries
+    desk.entries = 0
+    desk.flushed_nsec = now
+
+
+@compiled
+def _new_entry(m: Any, kind: int, now: int) -> Any:
+    """[hot] A fresh log entry of a kind, with the common fields set."""
+    desk, loop = m.desk[0], m.loop[0]
+    if desk.entries == _BLOCK:
+        _flush(m, now)
+    entry = m.entries[np.uint64(desk.entries)]
+    desk.entries += 1
+    entry.kind = kind
+    entry.nsec = now
+    entry.seq = loop.seq if loop.running else np.int64(NIL)
+    entry.number = 0
+    entry.code = 0
+    entry.outcome = 0
+    entry.cell = NIL
+    entry.index = 0
+    entry.value = 0.0
+    return entry
+
+
+@compiled
+def _log_event(m: Any, kind: int, code: int, cell: int, now: int) -> None:
+    """[hot] Log an event and hand it over at once."""
+    entry = _new_entry(m, kind, now)
+    entry.code = code
+    entry.cell = cell
+    _flush(m, now)
+
+
+@compiled
+def _log_sample(m: Any, received: int) -> None:
+    """[hot] Log a sample and its answer."""
+    sample, answer = m.sample[0], m.answer[0]
+    entry = _new_entry(m, _SAMPLE, received)
+    entry.seq = sample.seq
+    entry.t_us = sample.t_us
+    entry.in_force = sample.in_force
+    entry.lag_us = sample.lag_us
+    entry.flags = answer.flags
+    entry.service_nsec = answer.service_nsec
+    for k in range(np.uint64(m.loop[0].cells)):
+        entry.v_mv[k] = sample.v_mv[k]
+        entry.i_pa[k] = answer.i_pa[k]
+
+
+@compiled
+def _is_holder(desk: Any, lane: Any) -> bool:
+    """[hot] Whether the last message came from the rig that holds the loop."""
+    same = desk.holder_size == lane.peer_size
+    for k in range(np.uint64(lane.peer_size)):
+        same = same and desk.holder[k] == lane.peer[k]
+    return same
+
+
+@compiled
+def _take_hold(m: Any, now: int) -> None:
+    """[hot] Remember the last message's peer as the rig that holds the loop."""
+    desk, lane, loop = m.desk[0], m.lane[0], m.loop[0]
+    loop.held = 1
+    loop.session += 1
+    desk.holder_size = lane.peer_size
+    for k in range(np.uint64(lane.peer_size)):
+        desk.holder[k] = lane.peer[k]
+    _log_event(m, _HOLD, loop.session, NIL, now)
+
+
+@compiled
+def _let_go(m: Any, now: int) -> None:
+    """[hot] The rig is lost: trip if armed, and let another take hold."""
+    loop = m.loop[0]
+    before = loop.trips
+    trip(loop, _SILENCE, NIL)
+    if loop.trips != before:
+        _log_event(m, _TRIP, loop.fault, loop.fault_cell, now)
+    loop.held = 0
+    loop.running = 0
+    m.desk[0].holder_size = 0
+    _log_event(m, _RELEASE, loop.session, NIL, now)
+
+
+@compiled
+def _swap(cell: Any, banks: Any, table: Any, bank: int) -> None:
+    """[hot] Put a prepared bank in force, its gates at steady state for the present voltage."""
+    cell.bank = bank
+    if cell.settled:
+        settle(banks[np.uint64(bank)], table, cell.x, cell.v_mv)
+        cell.owed_ticks = 0.0
+
+
+@compiled
+def _change_state(loop: Any, kind: int) -> int:
+    """[hot] Arm, disarm or reset as the transition table says; the outcome."""
+    if kind == _ARM:
+        if loop.state == _TRIPPED:
+            return _WAS_TRIPPED
+        if loop.tick_wrong:
+            return _WAS_WRONG_TICK
+        loop.late_run = 0
+    loop.state = next_state(loop.state, _ORDER_EVENTS[np.uint64(kind)])
+    if loop.state != _TRIPPED:
+        loop.fault = _NO_FAULT
+        loop.fault_cell = NIL
+    return _DONE
+
+
+@compiled
+def _obey(m: Any, now: int) -> int:
+    """[hot] Carry out one order; its outcome."""
+    loop, order = m.loop[0], m.order[0]
+    if order.kind <= _RESET:
+        return _change_state(loop, order.kind)
+    if order.kind == _STOP:
+        loop.state = _IDLE
+        loop.stopping = 1
+        loop.stopped_nsec = now
+        return _DONE
+    if order.kind == _MARK:
+        return _DONE
+    cell = m.cells[np.uint64(order.cell)]
+    bank = m.banks[np.uint64(cell.bank)]
+    if order.kind == _SWAP:
+        _swap(cell, m.banks, m.table, order.index)
+    elif order.kind == _SET_GMAX:
+        bank.gmax_ns[np.uint64(order.index)] = order.value
+    elif order.kind == _SET_REVERSAL:
+        bank.reversal_mv[np.uint64(order.index)] = order.value
+    return _DONE
+
+
+@compiled
+def _take_orders(m: Any) -> None:
+    """[hot] Carry out the orders that have come, a few at most in one turn."""
+    desk, order = m.desk[0], m.order[0]
+    for _ in range(_ORDERS_A_TURN):
+        if take(desk.orders, desk.order_at, _ORDER_SIZE) != _ORDER_SIZE:
+            return
+        now = now_nsec(m.lane[0])
+        outcome = _obey(m, now)
+        entry = _new_entry(m, _ORDER, now)
+        entry.number = order.number
+        entry.code = order.kind
+        entry.outcome = outcome
+        entry.cell = order.cell
+        entry.index = order.index
+        entry.value = order.value
+        _flush(m, now)
+
+
+@compiled
+def _send_answer(m: Any, found: int) -> int:
+    """[hot] Encode the answer, or the one to a malformed message, and send it."""
+    lane = m.lane[0]
+    if found == WAS_MALFORMED:
+        return reply(lane, write_malformed(lane.out))
+    return reply(lane, write_answer(lane.out, m.answer[0], m.loop[0].cells))
+
+
+@compiled
+def _turn_away(m: Any, size: int) -> None:
+    """[hot] Answer a rig that does not hold the loop."""
+    found = refuse(m.loop[0], m.lane[0].message, size, m.sample[0], m.answer[0])
+    _send_answer(m, found)
+
+
+@compiled
+def _answer_holder(m: Any, size: int, received: int) -> None:
+    """[hot] Answer the rig that holds the loop, or now takes hold of it; then log."""
+    lane, loop, sample, answer = m.lane[0], m.loop[0], m.sample[0], m.answer[0]
+    trips, jumps, held = loop.trips, loop.clock_jumps, loop.held
+    if not held:
+        begin_session(loop, m.cells, m.past)
+    found = consider(loop, m.cells, m.banks, m.table, m.past, lane.message, size, sample, answer)
+    if found == ANSWERED:
+        settle_answer(loop, answer, m.past, now_nsec(lane) - received)
+    sent = _send_answer(m, found)
+    if found == WAS_MALFORMED:
+        return
+    loop.heard_nsec = received
+    if not held:
+        _take_hold(m, received)
+    _log_sample(m, received)
+    if loop.trips != trips:
+        _log_event(m, _TRIP, loop.fault, loop.fault_cell, received)
+    if loop.clock_jumps != jumps:
+        _log_event(m, _CLOCK_JUMP, 0, NIL, received)
+    if sent == GONE:
+        _let_go(m, received)
+
+
+@compiled
+def _finished(loop: Any, now: int) -> bool:
+    """[hot] Whether a loop ordered to stop has told the rig 0 pA, or has no rig to tell."""
+    if not loop.stopping:
+        return False
+    told = loop.heard_nsec > loop.stopped_nsec
+    return told or not loop.held or now > loop.stopped_nsec + _STOP_NSEC
+
+
+@compiled
+def run_loop(m: Any) -> int:
+    """[hot] Serve until ordered to stop; ``m`` is a :class:`LoopMemory`.
+
+    Returns 0 after an orderly stop, 1 when the loop socket was lost.
+    """
+    lane, loop, desk = m.lane[0], m.loop[0], m.desk[0]
+    now = now_nsec(lane)
+    while not _finished(loop, now):
+        size = receive(lane)
+        now = now_nsec(lane)
+        if size == CLOSED:
+            return 1
+        if loop.held and now - loop.heard_nsec > loop.silence_nsec:
+            _let_go(m, now)
+        if size != NOTHING:
+            if loop.held and not _is_holder(desk, lane):
+                _turn_away(m, size)
+            else:
+                _answer_holder(m, size, now)
+        _take_orders(m)
+        if desk.entries and now - desk.flushed_nsec > _FLUSH_NSEC:
+            _flush(m, now)
+    _flush(m, now)
+    return 0
