@@ -1,0 +1,145 @@
+"""The control client: what the command line and scripts use to steer a server."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from types import TracebackType
+from typing import Any, Self
+
+import msgpack
+import zmq
+
+from .errors import ControlError, FileError, LinkError
+
+DEFAULT_ENDPOINT = "tcp://127.0.0.1:5791"
+
+
+class Control:
+    """A connection to a server's control socket.
+
+    Parameters
+    ----------
+    endpoint : str
+        The server's ``control.endpoint``.
+    timeout_s : float
+        How long to wait for each answer; ``load`` waits ten times as long.
+    curve_server, curve_client : path, optional
+        For a server with CURVE keys: its public certificate and our secret one.
+
+    Raises
+    ------
+    LinkError
+        From any verb, when no server answers in time.
+    ControlError
+        From any verb, when the server refuses; the message is the server's.
+    """
+
+    def __init__(
+        self,
+        endpoint: str = DEFAULT_ENDPOINT,
+        timeout_s: float = 3.0,
+        curve_server: Path | None = None,
+        curve_client: Path | None = None,
+    ) -> None:
+        self.endpoint, self.timeout_s = endpoint, timeout_s
+        self._context = zmq.Context()
+        self._socket: zmq.Socket[bytes] = self._context.socket(zmq.DEALER)
+        self._socket.setsockopt(zmq.LINGER, 0)
+        if curve_server and curve_client:
+            use_curve(self._socket, curve_server, curve_client)
+        try:
+            self._socket.connect(endpoint)
+        except zmq.ZMQError as fault:
+            self.close()
+            raise LinkError(f"control endpoint {endpoint}: {fault}") from fault
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        fault: BaseException | None,
+        trace: TracebackType | None,
+    ) -> None:
+        self.close()
+
+    def close(self) -> None:
+        """Close the connection."""
+        self._context.destroy(linger=0)
+
+    def ask(self, verb: str, timeout_s: float | None = None, **arguments: Any) -> dict[str, Any]:
+        """Send any verb with its arguments; returns the server's answer."""
+        request = {"verb": verb, **{k: v for k, v in arguments.items() if v is not None}}
+        while self._socket.poll(0):
+            self._socket.recv_multipart()
+        self._socket.send(msgpack.packb(request))
+        if not self._socket.poll(int(1000 * (timeout_s or self.timeout_s))):
+            raise LinkError(
+                f"no gatestep server answers at {self.endpoint}; start one with "
+                "'gatestep serve RIG.toml', or name its control endpoint with --control"
+            )
+        answer: dict[str, Any] = msgpack.unpackb(self._socket.recv_multipart()[-1])
+        if not answer.get("ok"):
+            raise ControlError(str(answer.get("error", "the server refused without a reason")))
+        return answer
+
+    def status(self) -> dict[str, Any]:
+        """State, counters, percentiles and cells."""
+        return self.ask("status")
+
+    def arm(self, force: bool = False) -> dict[str, Any]:
+        """Let the model's current flow."""
+        return self.ask("arm", force=force or None)
+
+    def disarm(self) -> dict[str, Any]:
+        """Go to 0 pA."""
+        return self.ask("disarm")
+
+    def reset(self) -> dict[str, Any]:
+        """Clear a trip."""
+        return self.ask("reset")
+
+    def load(self, model: str, cell: str | None = None) -> dict[str, Any]:
+        """Prepare a model, a shipped one's name or a file, in the cell's other bank."""
+        path = Path(model)
+        if path.suffix == ".toml" and path.exists():
+            model = str(path.resolve())
+        return self.ask("load", timeout_s=10 * self.timeout_s, model=model, cell=cell)
+
+    def swap(self, cell: str | None = None) -> dict[str, Any]:
+        """Put the prepared model in force."""
+        return self.ask("swap", cell=cell)
+
+    def set(self, key: str, value: float, cell: str | None = None) -> dict[str, Any]:
+        """Change a parameter of the model in force, such as ``K.gmax_ns``."""
+        return self.ask("set", key=key, value=value, cell=cell)
+
+    def mark(self, text: str) -> dict[str, Any]:
+        """Put a note into the record."""
+        return self.ask("mark", text=text)
+
+    def stop(self) -> dict[str, Any]:
+        """Stop the server, with 0 pA as its last answer."""
+        return self.ask("stop")
+
+
+def use_curve(socket: zmq.Socket[bytes], server: Path, client: Path) -> None:
+    """Give a client's socket its CURVE keys, before it connects.
+
+    Raises
+    ------
+    FileError
+        When a certificate cannot be read or holds no secret key.
+    """
+    import zmq.auth
+
+    try:
+        server_public, _ = zmq.auth.load_certificate(server)
+        public, secret = zmq.auth.load_certificate(client)
+    except (OSError, ValueError) as fault:
+        raise FileError(f"CURVE certificate: {fault}") from fault
+    if secret is None:
+        raise FileError(f"{client}: holds no secret key; give the client's secret certificate")
+    socket.curve_serverkey = server_public
+    socket.curve_publickey, socket.curve_secretkey = public, secret
