@@ -1,0 +1,445 @@
+"""Gate tables: each gate's kinetics on one even voltage grid, with measured error.
+
+At load time every gate becomes its steady state and its rate 1/tau (per ms) on the
+grid that the kernel interpolates. The table's own error, linear interpolation
+against the formula, is measured at three places inside every cell of the grid; the
+grid is halved until it is within 1e-6 of full scale (1 for a steady state, the
+largest rate on the grid for a rate), or the model is refused. Where a piecewise
+formula or a series of measured points switches, one cell of the grid carries the
+break: its two ends hold the values of either side, and it is reported.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import math
+from collections.abc import Iterator
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from .errors import TableError
+from .formula import Curve, Floats, make_curve
+from .kernel import BANK, OHMIC
+from .simd import WIDTH
+from .specs import ConductanceSpec, GateSpec, ModelSpec
+
+LOW_MV = -200.0
+HIGH_MV = 200.0
+COARSEST_ROWS_PER_MV = 16
+FINEST_ROWS_PER_MV = 256
+BOUND = 1e-6
+"""Largest error of a table against its formula, as a fraction of full scale."""
+BREAK_SHARE = 0.01
+"""Largest share of a grid's cells that may be excepted from the bound as breaks."""
+USUAL_MV = (-120.0, 60.0)
+"""Range for the rate's error relative to its own local value."""
+
+_ROUNDING = 1e-12
+_PARTS = 4  # each cell is sampled at its quarters
+
+
+@dataclass(frozen=True)
+class Break:
+    """A cell of the grid that holds a jump or kink and is excepted from the bound.
+
+    ``inf_jump`` and ``rate_jump_per_ms`` are the values just above ``v_mv`` less
+    those just below; near 0 at a kink.
+    """
+
+    v_mv: float
+    inf_jump: float
+    rate_jump_per_ms: float
+
+
+@dataclass(frozen=True)
+class GateReport:
+    """How well one gate's table follows its formula.
+
+    Errors are fractions of full scale with the voltages where they are worst;
+    ``rate_local_error`` is relative to the rate at the same place, over
+    ``USUAL_MV``. Rates and their errors are 0 for an instantaneous gate.
+    """
+
+    name: str
+    instantaneous: bool
+    inf_error: float
+    inf_error_v_mv: float
+    rate_error: float
+    rate_error_v_mv: float
+    rate_local_error: float
+    rate_full_scale_per_ms: float
+    breaks: tuple[Break, ...]
+
+
+@dataclass(frozen=True)
+class Tables:
+    """A model in the kernel's layout.
+
+    ``gates`` names the gates (``K.n``) in file order, which is the order of the
+    bank's ``state`` and ``power`` and of ``reports``. ``bank`` is one record of
+    :data:`gatestep.kernel.BANK`, ``table`` the flat table of ``rows * stride``
+    values. ``sha256`` covers the bank's layout, the bank as loaded and the table.
+    """
+
+    spec: ModelSpec
+    gates: tuple[str, ...]
+    reports: tuple[GateReport, ...]
+    bank: NDArray[Any]
+    table: Floats
+    step_mv: float
+    sha256: str
+
+
+@dataclass(frozen=True)
+class GateCurves:
+    """A gate's steady state and time constant as its formulas give them.
+
+    ``v_mv`` in mV, ``inf`` in [0, 1], ``tau_ms`` in ms, 0 for an instantaneous gate.
+    """
+
+    name: str
+    instances: int
+    v_mv: Floats
+    inf: Floats
+    tau_ms: Floats
+
+
+@dataclass(frozen=True)
+class Kinetics:
+    """One gate's formulas, checked as they are evaluated."""
+
+    name: str
+    instances: int
+    instantaneous: bool
+    factor: float  # of temperature, on the rates
+    by_rates: bool  # alpha and beta, not inf and tau
+    first: Curve
+    second: Curve
+
+    @property
+    def branching(self) -> bool:
+        """Whether either formula is piecewise."""
+        return self.first.branching or (not self.instantaneous and self.second.branching)
+
+    def branches(self, v_mv: ArrayLike) -> NDArray[np.uint64]:
+        """Signature of the pieces in use at each voltage."""
+        if self.instantaneous:
+            return self.first.branches(v_mv)
+        return self.first.branches(v_mv) * np.uint64(1000003) + self.second.branches(v_mv)
+
+    def at(self, v_mv: ArrayLike) -> tuple[Floats, Floats]:
+        """Steady state in [0, 1] and rate per ms (0 if instantaneous) at voltages in mV.
+
+        Raises
+        ------
+        TableError
+            If a formula gives values that no gate can have, naming gate and voltage.
+        """
+        v = np.asarray(v_mv, dtype=np.float64)
+        if self.by_rates:
+            return self._from_rates(v)
+        inf = self.first(v)
+        self._check("inf", inf, v, 0.0, 1.0)
+        inf = np.clip(inf, 0.0, 1.0)
+        if self.instantaneous:
+            return inf, np.zeros_like(v)
+        tau = self.second(v)
+        self._check("tau", tau, v, 0.0, math.inf)
+        self._refuse(
+            "tau", tau, v, tau <= 0, "must be above 0 ms; an instantaneous gate has tau = 0"
+        )
+        with np.errstate(over="ignore"):
+            rate = self.factor / tau
+        self._check("1/tau", rate, v, 0.0, math.inf)
+        return inf, rate
+
+    def _from_rates(self, v: Floats) -> tuple[Floats, Floats]:
+        alpha, beta = self.first(v), self.second(v)
+        self._check("alpha", alpha, v, 0.0, math.inf)
+        self._check("beta", beta, v, 0.0, math.inf)
+        alpha, beta = np.maximum(alpha, 0.0), np.maximum(beta, 0.0)
+        with np.errstate(over="ignore"):
+            total = alpha + beta
+            rate = self.factor * total
+        self._check("alpha + beta", rate, v, 0.0, math.inf)
+        why = "alpha and beta are both 0 there, which leaves no steady state"
+        self._refuse("alpha + beta", total, v, total <= 0, why)
+        return np.minimum(alpha / total, 1.0), rate
+
+    def _check(self, what: str, values: Floats, v: Floats, low: float, high: float) -> None:
+        why = "must be finite; look for a pole, an overflow, or the root or log of a negative"
+        self._refuse(what, values, v, ~np.isfinite(values), why)
+        outside = (values < low - _ROUNDING) | (values > high + _ROUNDING)
+        why = "must be from 0 to 1" if high == 1 else "must not be negative"
+        self._refuse(what, values, v, outside, f"{why}; max and min can confine a formula")
+
+    def _refuse(
+        self, what: str, values: Floats, v: Floats, bad: NDArray[np.bool_], why: str
+    ) -> None:
+        if bad.any():
+            at = np.flatnonzero(bad.ravel())[0]
+            raise TableError(
+                f"gate {self.name}: {what} is {values.ravel()[at]:.6g} at "
+                f"V = {v.ravel()[at]:.6g} mV; {why}"
+            )
+
+
+@dataclass(frozen=True)
+class _Sampled:
+    """One gate on one grid: its columns and what they miss."""
+
+    inf: Floats
+    rate: Floats
+    report: GateReport
+    broken: NDArray[np.int64]  # excepted cells
+
+    @property
+    def worst(self) -> tuple[float, str, float]:
+        """Error, quantity and voltage of the worst place outside breaks."""
+        r = self.report
+        return max(
+            (r.inf_error, "steady state", r.inf_error_v_mv),
+            (r.rate_error, "rate", r.rate_error_v_mv),
+        )
+
+
+def kinetics_of(model: ModelSpec) -> list[Kinetics]:
+    """Formulas of every gate of a model, in file order.
+
+    Raises
+    ------
+    FormulaError
+        If a formula is not plain arithmetic.
+    """
+    pairs = ((c, g) for c in model.conductance for g in c.gate)
+    return [_kinetics(model, c, g) for c, g in pairs]
+
+
+def _kinetics(model: ModelSpec, conductance: ConductanceSpec, gate: GateSpec) -> Kinetics:
+    name = f"{conductance.name}.{gate.name}"
+    by_rates = gate.alpha is not None
+    keys = ("alpha", "beta") if by_rates else ("inf", "tau")
+    first, second = (
+        make_curve(getattr(gate, key), model.parameters, f"{name} {key}") for key in keys
+    )
+    factor = conductance.rate_factor(gate, model.temperature_c)
+    return Kinetics(name, gate.instances, gate.instantaneous, factor, by_rates, first, second)
+
+
+def curves_of(model: ModelSpec, v_mv: ArrayLike) -> list[GateCurves]:
+    """Steady states and time constants of a model's gates, straight from the formulas.
+
+    Parameters
+    ----------
+    model : ModelSpec
+    v_mv : array
+        Voltages in mV.
+
+    Raises
+    ------
+    FormulaError, TableError
+        If a formula cannot be read, or gives values that no gate can have.
+    """
+    v = np.asarray(v_mv, dtype=np.float64)
+    curves = []
+    for gate in kinetics_of(model):
+        inf, rate = gate.at(v)
+        tau = np.zeros_like(v) if gate.instantaneous else 1.0 / rate
+        curves.append(GateCurves(gate.name, gate.instances, v, inf, tau))
+    return curves
+
+
+def build_tables(model: ModelSpec) -> Tables:
+    """Tabulate a model's gates on the coarsest grid that meets the bound.
+
+    Raises
+    ------
+    FormulaError
+        If a formula is not plain arithmetic.
+    TableError
+        If a formula gives values that no gate can have, or the finest grid misses
+        the bound.
+    """
+    gates = kinetics_of(model)
+    rows_per_mv = COARSEST_ROWS_PER_MV
+    while True:
+        sampled = [_sample(gate, rows_per_mv) for gate in gates]
+        worst = max((s.worst[0] for s in sampled), default=0.0)
+        if worst <= BOUND:
+            break
+        if rows_per_mv == FINEST_ROWS_PER_MV:
+            raise _too_steep(sampled)
+        # Linear interpolation's error falls by 4 with each halving of a smooth curve.
+        halvings = max(1, math.ceil(math.log(worst / BOUND, 4)))
+        rows_per_mv = min(FINEST_ROWS_PER_MV, rows_per_mv << min(halvings, 8))
+    reports = tuple(_finished(g, s, rows_per_mv) for g, s in zip(gates, sampled, strict=True))
+    bank, table = _laid_out(model, gates, sampled, rows_per_mv)
+    digest = hashlib.sha256(repr(BANK.descr).encode() + bank.tobytes() + table.tobytes())
+    names = tuple(gate.name for gate in gates)
+    return Tables(model, names, reports, bank, table, 1.0 / rows_per_mv, digest.hexdigest())
+
+
+def _too_steep(sampled: list[_Sampled]) -> TableError:
+    found = max(sampled, key=lambda s: s.worst[0])
+    error, what, v_mv = found.worst
+    return TableError(
+        f"gate {found.report.name}: on the finest grid, {1 / FINEST_ROWS_PER_MV} mV, the table of "
+        f"its {what} is wrong by {error:.3g} of full scale at V = {v_mv:.6g} mV; at most "
+        f"{BOUND:g} is accepted. Use a gentler slope; a true step is written as "
+        "'a if V < b else c', which costs one cell of the grid"
+    )
+
+
+def _sample(gate: Kinetics, rows_per_mv: int) -> _Sampled:
+    """Evaluate a gate on a grid and measure what interpolation makes of it."""
+    cells = round((HIGH_MV - LOW_MV) * rows_per_mv)
+    v = LOW_MV + np.arange(cells * _PARTS + 1) / (rows_per_mv * _PARTS)
+    inf, rate = gate.at(v)
+    full_scale = float(rate[::_PARTS].max())
+    errors = _missed(inf), _missed(rate) / (full_scale or 1.0)
+    broken = np.zeros(cells, dtype=bool)
+    if gate.branching:
+        switches = np.diff(gate.branches(v).reshape(-1)) != 0
+        broken = switches.reshape(cells, _PARTS).any(axis=1)
+    excepted = broken & (np.maximum(*errors) > BOUND)
+    _check_share(gate, excepted)
+    report = _report(gate, v[::_PARTS], rate[::_PARTS], full_scale, errors, excepted)
+    return _Sampled(inf[::_PARTS].copy(), rate[::_PARTS].copy(), report, np.flatnonzero(excepted))
+
+
+def _missed(values: Floats) -> Floats:
+    """Largest distance of linear interpolation from the values inside each cell."""
+    ends = values[::_PARTS]
+    low, rise = ends[:-1], np.diff(ends)
+    missed = [
+        np.abs(values[part::_PARTS] - (low + part / _PARTS * rise)) for part in range(1, _PARTS)
+    ]
+    worst: Floats = np.max(missed, axis=0)
+    return worst
+
+
+def _check_share(gate: Kinetics, excepted: NDArray[np.bool_]) -> None:
+    count, cells = int(excepted.sum()), excepted.size
+    if count > BREAK_SHARE * cells:
+        raise TableError(
+            f"gate {gate.name}: {count} of {cells} cells of the grid hold a jump or kink of a "
+            f"piecewise formula or of measured points; at most {BREAK_SHARE:.0%} may. Use fewer "
+            "or smoother points"
+        )
+
+
+def _report(
+    gate: Kinetics,
+    v: Floats,
+    rate: Floats,
+    full_scale: float,
+    errors: tuple[Floats, Floats],
+    excepted: NDArray[np.bool_],
+) -> GateReport:
+    inf_errors, rate_errors = (np.where(excepted, 0.0, e) for e in errors)
+    inf_at, rate_at = int(inf_errors.argmax()), int(rate_errors.argmax())
+    usual = (v[:-1] >= USUAL_MV[0]) & (v[:-1] < USUAL_MV[1])
+    lower = np.maximum(np.minimum(rate[:-1], rate[1:]), np.finfo(float).tiny)
+    local = rate_errors[usual] * full_scale / lower[usual]
+    middle = v[:-1] + 0.5 * (v[1] - v[0])
+    return GateReport(
+        name=gate.name,
+        instantaneous=gate.instantaneous,
+        inf_error=float(inf_errors[inf_at]),
+        inf_error_v_mv=float(middle[inf_at]),
+        rate_error=float(rate_errors[rate_at]),
+        rate_error_v_mv=float(middle[rate_at]),
+        rate_local_error=float(local.max()),
+        rate_full_scale_per_ms=full_scale,
+        breaks=(),
+    )
+
+
+def _finished(gate: Kinetics, sampled: _Sampled, rows_per_mv: int) -> GateReport:
+    """The report with its breaks located by bisection between neighbouring samples."""
+    if sampled.broken.size == 0:
+        return sampled.report
+    parts = np.arange(_PARTS + 1) / (rows_per_mv * _PARTS)
+    v = LOW_MV + sampled.broken[:, None] / rows_per_mv + parts
+    signatures = gate.branches(v)
+    # argmax finds the first True: the first sample on another side than the cell's low end.
+    other = (signatures != signatures[:, :1]).argmax(axis=1)
+    row = np.arange(other.size)
+    low, high = v[row, other - 1], v[row, other]
+    below = gate.branches(low)
+    for _ in range(40):
+        middle = 0.5 * (low + high)
+        same = gate.branches(middle) == below
+        low, high = np.where(same, middle, low), np.where(same, high, middle)
+    before, after = gate.at(low), gate.at(high)
+    found = zip(high, after[0] - before[0], after[1] - before[1], strict=True)
+    breaks = tuple(Break(float(at), float(a), float(b)) for at, a, b in found)
+    return GateReport(**{**vars(sampled.report), "breaks": breaks})
+
+
+def _laid_out(
+    model: ModelSpec, gates: list[Kinetics], sampled: list[_Sampled], rows_per_mv: int
+) -> tuple[NDArray[Any], Floats]:
+    """Bank record and table as the kernel reads them."""
+    rows = round((HIGH_MV - LOW_MV) * rows_per_mv) + 1
+    moving = [k for k, gate in enumerate(gates) if not gate.instantaneous]
+    instant = [k for k, gate in enumerate(gates) if gate.instantaneous]
+    dynamic = -(-len(moving) // WIDTH) * WIDTH
+    table = np.zeros((rows, 2 * dynamic + len(instant)))
+    state = np.zeros(len(gates), dtype=np.int64)
+    for column, k in enumerate(moving):
+        table[:, column], table[:, dynamic + column] = sampled[k].inf, sampled[k].rate
+        state[k] = column
+    for column, k in enumerate(instant):
+        table[:, 2 * dynamic + column] = sampled[k].inf
+        state[k] = dynamic + column
+    bank = np.zeros(1, dtype=BANK)[0]
+    bank["v_low_mv"], bank["rows_per_mv"], bank["rows"] = LOW_MV, rows_per_mv, rows
+    bank["stride"], bank["dynamic"], bank["instant"] = table.shape[1], dynamic, len(instant)
+    bank["state"][: len(gates)] = state
+    bank["power"][: len(gates)] = [gate.instances for gate in gates]
+    for field, values in _conductance_fields(model):
+        bank[field][: len(model.conductance)] = values
+    bank["conductances"] = len(model.conductance)
+    flat = table.reshape(-1)
+    flat.flags.writeable = False
+    return bank, flat
+
+
+def _conductance_fields(model: ModelSpec) -> Iterator[tuple[str, list[float]]]:
+    conductances = model.conductance
+    yield "kind", [OHMIC for _ in conductances]
+    yield "gmax_ns", [c.gmax_ns for c in conductances]
+    yield "reversal_mv", [c.reversal_at(model.temperature_c) for c in conductances]
+    yield "gates", [len(c.gate) for c in conductances]
+
+
+def fill_bank(tables: Tables, bank_record: Any, table_out: Floats) -> None:
+    """Write a model into a preallocated bank.
+
+    Parameters
+    ----------
+    tables : Tables
+        The model.
+    bank_record : record of BANK
+        One element of an array of :data:`gatestep.kernel.BANK`, written in place.
+    table_out : 1-D array of float64
+        At least ``tables.table.size`` long; what lies beyond is left as it is.
+
+    Raises
+    ------
+    TableError
+        If the table does not fit; nothing has been written then.
+    """
+    size = tables.table.size
+    if table_out.ndim != 1 or table_out.dtype != np.float64 or table_out.size < size:
+        raise TableError(
+            f"model {tables.spec.title!r} needs a table of {size} values and the bank holds "
+            f"{table_out.size}; use a model with fewer or gentler gates"
+        )
+    table_out[:size] = tables.table
+    for field in BANK.names or ():
+        bank_record[field] = tables.bank[field]
