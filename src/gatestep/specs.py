@@ -288,11 +288,12 @@ class SimCellSpec(Spec):
 
     ``native`` names models whose conductances the cell has of its own.
     ``electrode_mohm`` and ``electrode_pf`` stand between the amplifier and the
-    cell; ``bridge_mohm`` is taken off again by the amplifier. 0 bits means an
-    ideal converter.
+    cell; ``bridge_mohm`` is taken off again by the amplifier. ``start_mv`` is the
+    leak's reversal when not given. 0 bits means an ideal converter, without
+    steps and without a range.
     """
 
-    capacitance_pf: float = Field(default=30.0, gt=0, le=1e5)
+    capacitance_pf: float = Field(default=30.0, ge=1e-3, le=1e5)
     leak_ns: float = Field(default=3.0, ge=0, le=1e5)
     leak_mv: float = Field(default=-65.0, ge=-200, le=200)
     start_mv: float | None = Field(default=None, ge=-200, le=200)
@@ -306,6 +307,20 @@ class SimCellSpec(Spec):
     dac_bits: int = Field(default=0, ge=0, le=32)
     dac_range_pa: tuple[float, float] = (-20_000.0, 20_000.0)
     step: tuple[StepSpec, ...] = ()
+
+    @field_validator("electrode_mohm", "electrode_pf")
+    @classmethod
+    def _electrode_is_not_tiny(cls, value: float) -> float:
+        if 0 < value < 1e-3:
+            raise ValueError("give 0 (none) or at least 0.001")
+        return value
+
+    @field_validator("adc_range_mv", "dac_range_pa")
+    @classmethod
+    def _range_is_ordered(cls, span: tuple[float, float]) -> tuple[float, float]:
+        if not -1e9 <= span[0] < span[1] <= 1e9:
+            raise ValueError("a converter's range is [low, high], low below high")
+        return span
 
 
 class SimulatedSpec(Spec):

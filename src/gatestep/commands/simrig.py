@@ -1,0 +1,160 @@
+"""``gatestep simrig RIG.toml``: the simulated rig as a client of a running server."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from ..simrig import Progress, SimRig
+    from ..simtrace import Summary, Trace
+
+SEGMENT_TICKS = 500_000
+"""Ticks in memory at once when no trace is kept."""
+
+
+def simulate(
+    rig_path: Path,
+    seconds: float | None = None,
+    out: Path | None = None,
+    json_output: bool = False,
+    pace: str | None = None,
+    seed: int | None = None,
+    threshold_mv: float = 0.0,
+    curve_secret: Path | None = None,
+) -> dict[str, Any]:
+    """Run the simulated rig against a running server and print what happened.
+
+    Parameters
+    ----------
+    rig_path : Path
+        The rig file that the server was started with.
+    seconds, pace, seed : optional
+        In place of the rig file's ``[simulated]`` values.
+    out : Path, optional
+        Where to write the whole trace, as npz.
+    json_output : bool
+        Print the figures as JSON.
+    threshold_mv : float
+        A spike is a rise of the membrane through this voltage.
+    curve_secret : Path, optional
+        The rig's own secret CURVE certificate.
+
+    Returns
+    -------
+    dict
+        The figures, as ``--json`` prints them.
+
+    Raises
+    ------
+    FileError
+        When the rig file, a native model or ``out`` cannot be used.
+    LinkError
+        When no server answers.
+    """
+    from ..config import load_rig
+    from ..simrig import SimRig
+    from ..simtrace import Summary
+
+    loaded = load_rig(rig_path)
+    with SimRig(
+        loaded.spec,
+        loaded.path.parent,
+        pace=pace,
+        seconds=seconds,
+        seed=seed,
+        curve_secret=curve_secret,
+    ) as rig:
+        summary = Summary(rig.cell_names, threshold_mv)
+        with _bar(f"simulated rig, {rig.pace}", not json_output) as progress:
+            traces = _run(rig, summary, out is not None, progress)
+        figures = {
+            "rig": str(loaded.path),
+            "endpoint": rig.endpoint,
+            "pace": rig.pace,
+            "interval_us": rig.interval_us,
+            "seed": rig.simulated.seed,
+            **summary.figures(),
+            "counters": rig.counters,
+        }
+    if out is not None:
+        from ..simtrace import Trace
+
+        Trace.joined(traces).save(out)
+        figures["out"] = str(out)
+    print(json.dumps(figures) if json_output else _text(figures))
+    return figures
+
+
+def _run(rig: SimRig, summary: Summary, keep: bool, progress: Progress) -> list[Trace]:
+    """Run in segments; those after the first go on where the one before ended."""
+    total = round(rig.simulated.seconds * 1e6 / rig.interval_us)
+    done = 0
+    traces: list[Trace] = []
+    while done < total or not traces:
+        ticks = total - done if keep else min(SEGMENT_TICKS, total - done)
+        start = done
+        trace = rig.run(
+            ticks * rig.interval_us * 1e-6,
+            progress=lambda now, _, start=start: progress(start + now, total),  # type: ignore[misc]
+        )
+        summary.add(trace)
+        traces = [*traces, trace] if keep else [trace]
+        done += ticks
+    return traces
+
+
+@contextmanager
+def _bar(title: str, shown: bool) -> Iterator[Progress]:
+    """A progress bar on stderr, where there is someone to see it."""
+    from rich.console import Console
+    from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
+
+    console = Console(stderr=True)
+    columns = (TextColumn(title), BarColumn(), TextColumn("{task.percentage:3.0f} %"))
+    bar = Progress(
+        *columns,
+        TimeRemainingColumn(),
+        console=console,
+        transient=True,
+        disable=not (shown and console.is_terminal),
+    )
+    with bar:
+        task = bar.add_task(title, total=None)
+        yield lambda done, total: bar.update(task, completed=done, total=total)
+
+
+def _text(figures: dict[str, Any]) -> str:
+    """The figures as a few lines to read."""
+    lines = [
+        f"simulated rig  {figures['seconds']:g} s, {figures['ticks']} ticks of "
+        f"{figures['interval_us']:g} µs, {figures['pace']}, at {figures['endpoint']}",
+        f"               {figures['simulated']}",
+    ]
+    for cell in figures["cells"]:
+        lines.append(f"{cell['name']:<13}  {_cell_text(cell)}")
+    counts = ("live", "clipped", "late", "missed", "gaps", "tripped", "refused")
+    lines.append("answers        " + ", ".join(f"{figures.get(k, 0)} {k}" for k in counts))
+    trips = figures["round_trip_us"]
+    if trips["p50"] is not None:
+        shown = ", ".join(f"{k} {v:.0f}" for k, v in trips.items())
+        lines.append(f"round trip     {shown} µs (host time)")
+    if figures.get("live", 0) == 0:
+        lines.append("note           no answer was live: the server is not armed (gatestep arm)")
+    if figures.get("refused", 0):
+        lines.append("note           answers were refused: another rig holds or held the loop")
+    if "out" in figures:
+        lines.append(f"trace          {figures['out']}")
+    return "\n".join(lines)
+
+
+def _cell_text(cell: dict[str, Any]) -> str:
+    text = f"{cell['spikes']} spike{'' if cell['spikes'] == 1 else 's'}"
+    if cell["first_spike_ms"] is not None:
+        text += f", first at {cell['first_spike_ms']:.3f} ms"
+    if cell["rate_hz"] is not None:
+        text += f", {cell['rate_hz']:.2f} Hz"
+    return f"{text}; membrane {cell['trough_mv']:.1f} to {cell['peak_mv']:.1f} mV"
