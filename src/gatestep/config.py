@@ -70,7 +70,9 @@ def _check_exposure(spec: RigSpec, path: Path) -> None:
     if spec.network.peers or spec.network.curve_secret:
         return
     sockets = {"loop": spec.loop, "control": spec.control, "feed": spec.feed}
-    open_ones = [f"{k}.endpoint = {s.endpoint}" for k, s in sockets.items() if not is_local(s.endpoint)]
+    open_ones = [
+        f"{k}.endpoint = {s.endpoint}" for k, s in sockets.items() if not is_local(s.endpoint)
+    ]
     if open_ones:
         raise FileError(
             f"{path}: {', '.join(open_ones)}: other machines could connect. Bind 127.0.0.1 or "

@@ -139,13 +139,7 @@ class Watch:
 
     def _event(self, entry: Any) -> LoopEvent:
         kind, code, cell = Entry(int(entry["kind"])), int(entry["code"]), int(entry["cell"])
-        text = {
-            Entry.TRIP: lambda: f"tripped, 0 pA: {self._fault_text(Fault(code), cell)}",
-            Entry.HOLD: lambda: f"a rig took hold of the loop (number {code})",
-            Entry.RELEASE: lambda: f"the rig let go of the loop (number {code})",
-            Entry.CLOCK_JUMP: lambda: "the rig's clock jumped; its tick is measured afresh",
-            Entry.ORDER: lambda: Order(code).name.lower(),
-        }[kind]()
+        text = self._words(kind, code, cell)
         seq = int(entry["seq"])
         return LoopEvent(
             kind.name.lower(),
@@ -155,6 +149,17 @@ class Watch:
             int(entry["outcome"]),
             cell,
         )
+
+    def _words(self, kind: Entry, code: int, cell: int) -> str:
+        if kind == Entry.TRIP:
+            return f"tripped, 0 pA: {self._fault_text(Fault(code), cell)}"
+        if kind == Entry.HOLD:
+            return f"a rig took hold of the loop (number {code})"
+        if kind == Entry.RELEASE:
+            return f"the rig let go of the loop (number {code})"
+        if kind == Entry.CLOCK_JUMP:
+            return "the rig's clock jumped; its tick is measured afresh"
+        return Order(code).name.lower()
 
     def _fault_text(self, fault: Fault, cell: int) -> str:
         text = FAULT_TEXTS[fault]

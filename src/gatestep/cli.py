@@ -1,0 +1,225 @@
+"""The command line. Bodies are in :mod:`gatestep.commands`, imported when called."""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+app = typer.Typer(
+    name="gatestep",
+    help="Give a live cell a conductance it does not have: a measured voltage in, "
+    "a model's current out, in real time.",
+    no_args_is_help=True,
+    add_completion=False,
+    pretty_exceptions_enable=False,
+    rich_markup_mode=None,
+)
+
+Json = Annotated[bool, typer.Option("--json", help="Print JSON for programs.")]
+RigFile = Annotated[Path, typer.Argument(metavar="RIG.toml", help="The rig file.")]
+CellName = Annotated[
+    str | None, typer.Option("--cell", help="Which cell; not needed where there is one.")
+]
+Endpoint = Annotated[
+    str, typer.Option("--control", metavar="ENDPOINT", help="The server's control endpoint.")
+]
+CurveServer = Annotated[
+    Path | None, typer.Option("--curve-server", help="The server's public CURVE certificate.")
+]
+CurveClient = Annotated[
+    Path | None, typer.Option("--curve-client", help="Our secret CURVE certificate.")
+]
+CONTROL = "tcp://127.0.0.1:5791"
+
+
+@app.command()
+def serve(
+    rig: RigFile,
+    arm: Annotated[bool, typer.Option("--arm", help="Arm at once.")] = False,
+    force: Annotated[
+        bool, typer.Option("--force", help="Arm although the check advises against it.")
+    ] = False,
+    json_output: Json = False,
+) -> int:
+    """Run a server until it is stopped; it starts idle, at 0 pA."""
+    from .commands.serve import serve as body
+
+    return body(rig, arm, force, json_output)
+
+
+@app.command()
+def status(
+    control: Endpoint = CONTROL,
+    curve_server: CurveServer = None,
+    curve_client: CurveClient = None,
+    json_output: Json = False,
+) -> int:
+    """Show the server's state, counters, service times and cells."""
+    from .commands.steer import ask
+
+    return ask("status", control, json_output, curve_server, curve_client)
+
+
+@app.command()
+def arm(
+    control: Endpoint = CONTROL,
+    force: Annotated[
+        bool, typer.Option("--force", help="Arm although the check advises against it.")
+    ] = False,
+    curve_server: CurveServer = None,
+    curve_client: CurveClient = None,
+    json_output: Json = False,
+) -> int:
+    """Let the models' currents flow."""
+    from .commands.steer import ask
+
+    return ask("arm", control, json_output, curve_server, curve_client, force=force)
+
+
+@app.command()
+def disarm(
+    control: Endpoint = CONTROL,
+    curve_server: CurveServer = None,
+    curve_client: CurveClient = None,
+    json_output: Json = False,
+) -> int:
+    """Go to 0 pA at once."""
+    from .commands.steer import ask
+
+    return ask("disarm", control, json_output, curve_server, curve_client)
+
+
+@app.command()
+def reset(
+    control: Endpoint = CONTROL,
+    curve_server: CurveServer = None,
+    curve_client: CurveClient = None,
+    json_output: Json = False,
+) -> int:
+    """Clear a trip; the loop is then idle."""
+    from .commands.steer import ask
+
+    return ask("reset", control, json_output, curve_server, curve_client)
+
+
+@app.command()
+def stop(
+    control: Endpoint = CONTROL,
+    curve_server: CurveServer = None,
+    curve_client: CurveClient = None,
+    json_output: Json = False,
+) -> int:
+    """Stop the server; its last answer is 0 pA."""
+    from .commands.steer import ask
+
+    return ask("stop", control, json_output, curve_server, curve_client)
+
+
+@app.command()
+def load(
+    model: Annotated[str, typer.Argument(metavar="MODEL", help="A shipped model or a file.")],
+    cell: CellName = None,
+    control: Endpoint = CONTROL,
+    curve_server: CurveServer = None,
+    curve_client: CurveClient = None,
+    json_output: Json = False,
+) -> int:
+    """Prepare a model beside the one in force; the loop runs on."""
+    from .commands.steer import ask
+
+    return ask("load", control, json_output, curve_server, curve_client, model=model, cell=cell)
+
+
+@app.command()
+def swap(
+    cell: CellName = None,
+    control: Endpoint = CONTROL,
+    curve_server: CurveServer = None,
+    curve_client: CurveClient = None,
+    json_output: Json = False,
+) -> int:
+    """Put the prepared model in force between two samples."""
+    from .commands.steer import ask
+
+    return ask("swap", control, json_output, curve_server, curve_client, cell=cell)
+
+
+@app.command("set")
+def set_parameter(
+    assignment: Annotated[str, typer.Argument(metavar="KEY=VALUE", help="As K.gmax_ns=120.")],
+    cell: CellName = None,
+    control: Endpoint = CONTROL,
+    curve_server: CurveServer = None,
+    curve_client: CurveClient = None,
+    json_output: Json = False,
+) -> int:
+    """Change a parameter of the model in force."""
+    from .commands.steer import ask, split_assignment
+
+    key, value = split_assignment(assignment)
+    return ask(
+        "set", control, json_output, curve_server, curve_client, key=key, value=value, cell=cell
+    )
+
+
+@app.command()
+def mark(
+    text: Annotated[str, typer.Argument(metavar="TEXT", help="The note.")],
+    control: Endpoint = CONTROL,
+    curve_server: CurveServer = None,
+    curve_client: CurveClient = None,
+    json_output: Json = False,
+) -> int:
+    """Put a note at the present sample."""
+    from .commands.steer import ask
+
+    return ask("mark", control, json_output, curve_server, curve_client, text=text)
+
+
+@app.command()
+def models(json_output: Json = False) -> int:
+    """List the shipped models with their sources."""
+    from .commands.models import list_models
+
+    return list_models(json_output) or 0
+
+
+@app.command()
+def curves(
+    model: Annotated[str, typer.Argument(metavar="MODEL", help="A shipped model or a file.")],
+    at: Annotated[str | None, typer.Option("--at", metavar="MV,MV,...", help="Voltages.")] = None,
+    figure: Annotated[
+        Path | None, typer.Option("--figure", help="Draw to this PNG or SVG file.")
+    ] = None,
+    json_output: Json = False,
+) -> int:
+    """Print or draw a model's steady states and time constants."""
+    from .commands.models import show_curves
+
+    return show_curves(model, at, figure, json_output) or 0
+
+
+def main() -> None:
+    """Entry point: run a command, and word every expected fault on one line of stderr."""
+    from .errors import GatestepError
+
+    try:
+        result = app(standalone_mode=False)
+    except typer.Exit as done:
+        sys.exit(done.exit_code)
+    except (KeyboardInterrupt, typer.Abort):
+        print("gatestep: interrupted", file=sys.stderr)
+        sys.exit(130)
+    except GatestepError as fault:
+        print(f"gatestep: {fault}", file=sys.stderr)
+        sys.exit(1)
+    except Exception as fault:
+        show = getattr(fault, "show", None)
+        if show is None:
+            raise
+        show(file=sys.stderr)
+        sys.exit(int(getattr(fault, "exit_code", 2)))
+    sys.exit(int(result or 0))

@@ -1,0 +1,72 @@
+"""Who may connect: CURVE keys, or a list of peers on a private link."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import zmq
+
+from .config import LoadedRig, is_local
+from .errors import FileError
+
+
+class Gatekeeper:
+    """Guards a server's sockets as the rig file's ``[network]`` says.
+
+    Sockets that only this machine can reach are left alone unless CURVE is asked
+    for, which then holds for every socket.
+
+    Raises
+    ------
+    FileError
+        When a certificate is missing or holds no secret key.
+    """
+
+    def __init__(self, context: zmq.Context[zmq.Socket[bytes]], rig: LoadedRig) -> None:
+        self._rig, self._network = rig, rig.spec.network
+        self._authenticator = None
+        if not self._network.peers and not self._network.curve_secret:
+            return
+        from zmq.auth.thread import ThreadAuthenticator
+
+        self._authenticator = ThreadAuthenticator(context)
+        self._authenticator.start()
+        if self._network.peers:
+            self._authenticator.allow("127.0.0.1", "::1", *self._network.peers)
+        else:
+            self._public, self._secret = self._load_keys()
+            clients = self._path(self._network.curve_clients)
+            self._authenticator.configure_curve(domain="*", location=str(clients))
+
+    def guard(self, socket: zmq.Socket[bytes], endpoint: str) -> None:
+        """Set a socket up before it is bound."""
+        if self._authenticator is None:
+            return
+        if self._network.curve_secret:
+            socket.curve_publickey, socket.curve_secretkey = self._public, self._secret
+            socket.curve_server = True
+        elif not is_local(endpoint):
+            socket.setsockopt_string(zmq.ZAP_DOMAIN, "gatestep")
+
+    def close(self) -> None:
+        """Stop the authenticator."""
+        if self._authenticator is not None:
+            self._authenticator.stop()
+
+    def _path(self, name: str | None) -> Path:
+        path = self._rig.folder / str(name)
+        if not path.exists():
+            raise FileError(f"{self._rig.path}: [network] names {path}, which does not exist")
+        return path
+
+    def _load_keys(self) -> tuple[bytes, bytes]:
+        import zmq.auth
+
+        path = self._path(self._network.curve_secret)
+        try:
+            public, secret = zmq.auth.load_certificate(path)
+        except (OSError, ValueError) as fault:
+            raise FileError(f"{path}: {fault}") from fault
+        if secret is None:
+            raise FileError(f"{path}: holds no secret key; give the server's secret certificate")
+        return public, secret

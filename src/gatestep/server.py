@@ -1,0 +1,309 @@
+"""The server: sockets, threads and the order of starting and stopping.
+
+Two threads matter. The hot thread runs :func:`gatestep.loop.run_loop` and nothing
+else. The attending thread, the one that calls :meth:`Server.attend`, carries control
+requests in and answers out, reads the loop's log and feeds the watchers. They share
+no state: orders go one way, log blocks the other. Tables are built on a third.
+"""
+
+from __future__ import annotations
+
+import os
+import threading
+import time
+from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
+from typing import Any
+
+import msgpack
+import numpy as np
+import zmq
+from numba import typeof
+
+from . import __version__
+from .config import LoadedRig, load_rig_models
+from .errors import GatestepError, LinkError
+from .kernel import records
+from .lanes import load_libzmq, make_lane
+from .loop import ORDER, Order, make_memory, run_loop
+from .network import Gatekeeper
+from .shelf import Shelf, make_room
+from .tables import build_tables
+from .verbs import Answer, Built, Confirmed, Verbs, Waiting, refusal
+from .watch import LoopEvent, Watch
+
+Say = Callable[[str], None]
+
+_LOOP_WAIT_MS = 5
+_MAX_INCOMING = 1 << 20
+_LOG_BLOCKS = 2000
+_ORDER_WAIT_S = 3.0
+_QUIET_S = 1.0
+_POLL_MS = 20
+_STATUS_S = 1.0
+
+
+@dataclass(frozen=True)
+class _Caller:
+    """Where an answer goes, and until when it may take."""
+
+    envelope: list[bytes]
+    deadline: float
+
+
+class Server:
+    """One gatestep server.
+
+    Parameters
+    ----------
+    rig : LoadedRig
+    say : callable
+        Takes a line of text for the user; events and warnings.
+
+    Raises
+    ------
+    GatestepError
+        From :meth:`start`: a model that cannot be used, an endpoint that cannot be
+        bound, a libzmq that cannot be found.
+    """
+
+    def __init__(self, rig: LoadedRig, say: Say = lambda _: None) -> None:
+        self.rig, self._say = rig, say
+        self.watch = Watch([c.name for c in rig.spec.cell])
+        self._context = zmq.Context()
+        self._builder = ThreadPoolExecutor(1, thread_name_prefix="tables")
+        self._orders_sent = 0
+        self._waiting: list[tuple[Waiting, _Caller]] = []
+        self._result: list[int] = []
+        self._gatekeeper = Gatekeeper(self._context, rig)
+        self._status_due = 0.0
+        self._stopping = False
+
+    def start(self) -> None:
+        """Prepare everything, compile, bind, and start the hot thread; idle."""
+        models = load_rig_models(self.rig)
+        load_libzmq()
+        self._bind()
+        table = make_room()
+        self._lane = make_lane(self._loop_socket)
+        self._memory = make_memory(
+            self.rig.spec, self._lane, self._orders_in.underlying, self._log_out.underlying, table
+        )
+        self._verbs = Verbs(
+            self.rig,
+            Shelf(self._memory.banks, table),
+            self.watch,
+            self._send_order,
+            self._builder,
+            self._facts(),
+        )
+        for k, model in enumerate(models):
+            self._verbs.put_in_force(k, model, build_tables(model.spec))
+        self._compile()
+        self._thread = threading.Thread(target=self._run, name="hot loop", daemon=True)
+        self._thread.start()
+
+    def attend(self, until: Callable[[], bool] = lambda: False) -> int:
+        """Carry requests and log until the loop ends; returns its result, 0 when orderly.
+
+        When ``until`` turns true the loop is ordered to stop.
+        """
+        poller = zmq.Poller()
+        poller.register(self._control, zmq.POLLIN)
+        poller.register(self._log_in, zmq.POLLIN)
+        while self._thread.is_alive():
+            if until() and not self._stopping:
+                self.order_stop()
+            ready = dict(poller.poll(_POLL_MS))
+            if self._log_in in ready:
+                self._read_log()
+            if self._control in ready:
+                self._take_requests()
+            self._answer_built()
+            self._publish_status()
+        self._read_log()
+        return self._result[0] if self._result else 1
+
+    def arm(self) -> None:
+        """Order the loop to arm, as ``gatestep arm`` does."""
+        self._send_order(Order.ARM, 0, 0, 0.0)
+
+    def order_stop(self) -> None:
+        """Order the loop to answer 0 pA once more and end."""
+        self._stopping = True
+        self._send_order(Order.STOP, 0, 0, 0.0)
+
+    def close(self) -> None:
+        """Stop what still runs and give every socket back."""
+        if hasattr(self, "_thread") and self._thread.is_alive():
+            self.order_stop()
+            self._thread.join(2 * _QUIET_S)
+        self._builder.shutdown(wait=False, cancel_futures=True)
+        self._gatekeeper.close()
+        self._context.destroy(linger=200)
+
+    def endpoints(self) -> dict[str, str]:
+        """The endpoints as bound."""
+        sockets = {"loop": self._loop_socket, "control": self._control, "feed": self._feed}
+        return {k: _bound(s) for k, s in sockets.items()}
+
+    def _bind(self) -> None:
+        spec = self.rig.spec
+        self._loop_socket = self._listen(zmq.ROUTER, spec.loop.endpoint, "loop")
+        self._control = self._listen(zmq.ROUTER, spec.control.endpoint, "control")
+        self._feed = self._listen(zmq.PUB, spec.feed.endpoint, "feed")
+        self._orders_out, self._orders_in = self._pipe("orders")
+        self._log_out, self._log_in = self._pipe("log")
+
+    def _listen(self, kind: int, endpoint: str, name: str) -> zmq.Socket[bytes]:
+        socket: zmq.Socket[bytes] = self._context.socket(kind)
+        socket.setsockopt(zmq.LINGER, 200)
+        socket.setsockopt(zmq.MAXMSGSIZE, _MAX_INCOMING)
+        if name == "loop":
+            socket.setsockopt(zmq.ROUTER_MANDATORY, 1)
+            socket.setsockopt(zmq.RCVTIMEO, _LOOP_WAIT_MS)
+        self._gatekeeper.guard(socket, endpoint)
+        try:
+            socket.bind(endpoint)
+        except zmq.ZMQError as fault:
+            raise LinkError(
+                f"{self.rig.path}: {name}.endpoint = {endpoint}: {fault}; "
+                "is another server running there?"
+            ) from fault
+        return socket
+
+    def _pipe(self, name: str) -> tuple[zmq.Socket[bytes], zmq.Socket[bytes]]:
+        """The two ends, sending and receiving, of a one-way line between threads."""
+        out: zmq.Socket[bytes] = self._context.socket(zmq.PUSH)
+        into: zmq.Socket[bytes] = self._context.socket(zmq.PULL)
+        for socket in (out, into):
+            socket.setsockopt(zmq.LINGER, 0)
+            socket.set_hwm(_LOG_BLOCKS)
+        into.bind(f"inproc://{name}")
+        out.connect(f"inproc://{name}")
+        return out, into
+
+    def _facts(self) -> Answer:
+        spec = self.rig.spec
+        if spec.loop.anticipate is True:
+            self._say(
+                "loop.anticipate = true: this version cannot anticipate; it runs the plain loop"
+            )
+        if spec.record:
+            self._say("[record]: this version keeps no record")
+        return {
+            "version": __version__,
+            "pid": os.getpid(),
+            "rig_file": str(self.rig.path),
+            "lane": "libzmq",
+            "anticipate": False,
+            "recording": False,
+            "interval_us": spec.loop.interval_us,
+            "budget_us": spec.loop.budget,
+            "endpoints": self.endpoints(),
+        }
+
+    def _compile(self) -> None:
+        """Have the loop ready; a start that must compile says so."""
+        notice = threading.Timer(
+            _QUIET_S,
+            self._say,
+            ["compiling the loop; only the first start on a machine does this"],
+        )
+        notice.start()
+        try:
+            run_loop.compile((typeof(self._memory),))
+        finally:
+            notice.cancel()
+
+    def _run(self) -> None:
+        self._result.append(int(run_loop(self._memory)))
+
+    def _send_order(self, kind: Order, cell: int, index: int, value: float) -> int:
+        self._orders_sent += 1
+        order = records(ORDER)
+        order[0].number, order[0].kind = self._orders_sent, kind
+        order[0].cell, order[0].index, order[0].value = cell, index, value
+        self._orders_out.send(order.tobytes())
+        return self._orders_sent
+
+    def _read_log(self) -> None:
+        while self._log_in.poll(0):
+            events, samples = self.watch.take(self._log_in.recv())
+            for event in events:
+                if event.kind == "order":
+                    self._confirm(event)
+                else:
+                    self._say(event.text)
+                self._publish("event", {"kind": event.kind, "seq": event.seq, "text": event.text})
+            self._publish_samples(samples)
+
+    def _take_requests(self) -> None:
+        for _ in range(100):
+            if not self._control.poll(0):
+                return
+            *envelope, body = self._control.recv_multipart()
+            caller = _Caller(envelope, time.monotonic() + _ORDER_WAIT_S)
+            try:
+                request = msgpack.unpackb(body)
+            except Exception as fault:
+                self._reply(caller, refusal(f"request: not MessagePack ({fault})"))
+                continue
+            answer = self._verbs.handle(request)
+            if isinstance(answer, dict):
+                self._reply(caller, answer)
+            else:
+                self._waiting.append((answer, caller))
+
+    def _confirm(self, event: LoopEvent) -> None:
+        """Answer the caller whose order the loop has carried out."""
+        for waiting, caller in self._waiting:
+            if isinstance(waiting, Confirmed) and waiting.number == event.number:
+                self._finish(waiting, caller, event)
+                return
+
+    def _answer_built(self) -> None:
+        """Answer callers whose tables are built, and those who have waited too long."""
+        for waiting, caller in list(self._waiting):
+            if isinstance(waiting, Built) and waiting.future.done():
+                self._finish(waiting, caller, waiting.future)
+            elif isinstance(waiting, Confirmed) and time.monotonic() > caller.deadline:
+                self._waiting.remove((waiting, caller))
+                self._reply(caller, refusal("the loop did not confirm the order in time"))
+
+    def _finish(self, waiting: Waiting, caller: _Caller, result: Any) -> None:
+        self._waiting.remove((waiting, caller))
+        try:
+            answer = waiting.finish(result)
+        except GatestepError as fault:
+            answer = refusal(str(fault))
+        self._reply(caller, answer)
+
+    def _reply(self, caller: _Caller, answer: Answer) -> None:
+        try:
+            self._control.send_multipart([*caller.envelope, msgpack.packb(answer)], zmq.DONTWAIT)
+        except zmq.ZMQError:
+            self._say("a control client left before its answer")
+
+    def _publish(self, topic: str, content: Any) -> None:
+        self._feed.send_multipart([topic.encode(), msgpack.packb(content)], zmq.DONTWAIT)
+
+    def _publish_samples(self, samples: np.ndarray) -> None:
+        thinned = samples[samples["seq"] % self.rig.spec.feed.every == 0]
+        if not len(thinned):
+            return
+        cells = len(self.rig.spec.cell)
+        content = {k: thinned[k].tolist() for k in ("seq", "t_us", "flags", "service_nsec")}
+        content["v_mv"] = thinned["v_mv"][:, :cells].tolist()
+        content["i_pa"] = thinned["i_pa"][:, :cells].tolist()
+        self._publish("sample", content)
+
+    def _publish_status(self) -> None:
+        if time.monotonic() >= self._status_due:
+            self._status_due = time.monotonic() + _STATUS_S
+            self._publish("status", self._verbs.status())
+
+
+def _bound(socket: zmq.Socket[bytes]) -> str:
+    return bytes(socket.getsockopt(zmq.LAST_ENDPOINT)).decode().rstrip("\0")
