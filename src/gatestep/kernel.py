@@ -62,6 +62,8 @@ BANK = np.dtype(
 compiled = njit(cache=True, nogil=True, error_model="numpy")
 """How every kernel is compiled: cached, without the GIL, IEEE arithmetic, no fastmath."""
 
+inner = njit(nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+"""The same for a function that only compiled code calls: it goes into its callers' cache."""
 
 
 def records(dtype: np.dtype[Any], count: int = 1) -> Any:

@@ -21,7 +21,7 @@ import zmq
 from numba import types
 
 from .errors import LinkError
-from .kernel import compiled, records
+from .kernel import compiled, inner, records
 from .wire import MAX_MESSAGE
 
 MAX_PEER = 256
@@ -139,7 +139,7 @@ def take(socket: Any, address: Any, capacity: int) -> int:
     return np.int64(_zmq_recv(socket, address, np.uint64(capacity), _DONT_WAIT))
 
 
-@compiled
+@inner
 def _more(lane: Any) -> bool:
     """[hot] Whether the message goes on in a further frame."""
     lane.size = 8
@@ -148,7 +148,7 @@ def _more(lane: Any) -> bool:
     return lane.more[0] != 0
 
 
-@compiled
+@inner
 def _frame(lane: Any) -> int:
     """[hot] Read the message's next frame into ``lane.message``; its full size."""
     return np.int64(_zmq_recv(lane.socket, lane.message_at, np.uint64(_MAX_MESSAGE), _DONT_WAIT))

@@ -17,7 +17,7 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
-from .kernel import BANK, compiled, records, settle
+from .kernel import BANK, compiled, inner, records, settle
 from .lanes import CLOSED, GONE, MAX_PEER, NOTHING, now_nsec, receive, reply, send, take
 from .specs import MAX_CELLS, RigSpec
 from .states import Event, Fault, State, next_state
@@ -206,7 +206,7 @@ def _set_up_loop(loop: Any, rig: RigSpec) -> None:
     loop.late_through = NIL
 
 
-@compiled
+@inner
 def _flush(m: Any, now: int) -> None:
     """[hot] Hand the waiting entries to the log; if it is full they are counted lost."""
     desk = m.desk[0]
@@ -217,7 +217,7 @@ def _flush(m: Any, now: int) -> None:
     desk.flushed_nsec = now
 
 
-@compiled
+@inner
 def _new_entry(m: Any, kind: int, now: int) -> Any:
     """[hot] A fresh log entry of a kind, with the common fields set."""
     desk, loop = m.desk[0], m.loop[0]
@@ -237,7 +237,7 @@ def _new_entry(m: Any, kind: int, now: int) -> Any:
     return entry
 
 
-@compiled
+@inner
 def _log_event(m: Any, kind: int, code: int, cell: int, now: int) -> None:
     """[hot] Log an event and hand it over at once."""
     entry = _new_entry(m, kind, now)
@@ -246,7 +246,7 @@ def _log_event(m: Any, kind: int, code: int, cell: int, now: int) -> None:
     _flush(m, now)
 
 
-@compiled
+@inner
 def _log_sample(m: Any, received: int) -> None:
     """[hot] Log a sample and its answer."""
     sample, answer = m.sample[0], m.answer[0]
@@ -262,7 +262,7 @@ def _log_sample(m: Any, received: int) -> None:
         entry.i_pa[k] = answer.i_pa[k]
 
 
-@compiled
+@inner
 def _is_holder(desk: Any, lane: Any) -> bool:
     """[hot] Whether the last message came from the rig that holds the loop."""
     same = desk.holder_size == lane.peer_size
@@ -271,7 +271,7 @@ def _is_holder(desk: Any, lane: Any) -> bool:
     return same
 
 
-@compiled
+@inner
 def _take_hold(m: Any, now: int) -> None:
     """[hot] Remember the last message's peer as the rig that holds the loop."""
     desk, lane, loop = m.desk[0], m.lane[0], m.loop[0]
@@ -283,7 +283,7 @@ def _take_hold(m: Any, now: int) -> None:
     _log_event(m, _HOLD, loop.session, NIL, now)
 
 
-@compiled
+@inner
 def _let_go(m: Any, now: int) -> None:
     """[hot] The rig is lost: trip if armed, and let another take hold."""
     loop = m.loop[0]
@@ -297,7 +297,7 @@ def _let_go(m: Any, now: int) -> None:
     _log_event(m, _RELEASE, loop.session, NIL, now)
 
 
-@compiled
+@inner
 def _swap(cell: Any, banks: Any, table: Any, bank: int) -> None:
     """[hot] Put a prepared bank in force, its gates at steady state for the present voltage."""
     cell.bank = bank
@@ -306,7 +306,7 @@ def _swap(cell: Any, banks: Any, table: Any, bank: int) -> None:
         cell.owed_ticks = 0.0
 
 
-@compiled
+@inner
 def _change_state(loop: Any, kind: int) -> int:
     """[hot] Arm, disarm or reset as the transition table says; the outcome."""
     if kind == _ARM:
@@ -322,7 +322,7 @@ def _change_state(loop: Any, kind: int) -> int:
     return _DONE
 
 
-@compiled
+@inner
 def _obey(m: Any, now: int) -> int:
     """[hot] Carry out one order; its outcome."""
     loop, order = m.loop[0], m.order[0]
@@ -346,7 +346,7 @@ def _obey(m: Any, now: int) -> int:
     return _DONE
 
 
-@compiled
+@inner
 def _take_orders(m: Any) -> None:
     """[hot] Carry out the orders that have come, a few at most in one turn."""
     desk, order = m.desk[0], m.order[0]
@@ -365,7 +365,7 @@ def _take_orders(m: Any) -> None:
         _flush(m, now)
 
 
-@compiled
+@inner
 def _send_answer(m: Any, found: int) -> int:
     """[hot] Encode the answer, or the one to a malformed message, and send it."""
     lane = m.lane[0]
@@ -374,14 +374,14 @@ def _send_answer(m: Any, found: int) -> int:
     return reply(lane, write_answer(lane.out, m.answer[0], m.loop[0].cells))
 
 
-@compiled
+@inner
 def _turn_away(m: Any, size: int) -> None:
     """[hot] Answer a rig that does not hold the loop."""
     found = refuse(m.loop[0], m.lane[0].message, size, m.sample[0], m.answer[0])
     _send_answer(m, found)
 
 
-@compiled
+@inner
 def _answer_holder(m: Any, size: int, received: int) -> None:
     """[hot] Answer the rig that holds the loop, or now takes hold of it; then log."""
     lane, loop, sample, answer = m.lane[0], m.loop[0], m.sample[0], m.answer[0]
@@ -406,7 +406,7 @@ def _answer_holder(m: Any, size: int, received: int) -> None:
         _let_go(m, received)
 
 
-@compiled
+@inner
 def _finished(loop: Any, now: int) -> bool:
     """[hot] Whether a loop ordered to stop has told the rig 0 pA, or has no rig to tell."""
     if not loop.stopping:

@@ -14,7 +14,7 @@ from typing import Any
 import numpy as np
 
 from .guard import limited, voltage_fault
-from .kernel import STATES, compiled, current, settle, step
+from .kernel import STATES, compiled, current, inner, settle, step
 from .states import Event, Fault, State, next_state
 from .wire import CLIPPED, GAP, LATE, LIVE, NIL, REFUSED, REPEAT, TRIPPED, read_sample
 
@@ -124,7 +124,7 @@ def trip(loop: Any, fault: int, cell: int) -> None:
     loop.state = after
 
 
-@compiled
+@inner
 def _judge_clock(loop: Any, sample: Any) -> None:
     """[hot] Compare the rig's tick with the interval, over enough ticks to tell.
 
@@ -148,7 +148,7 @@ def _judge_clock(loop: Any, sample: Any) -> None:
     loop.t_us = sample.t_us
 
 
-@compiled
+@inner
 def _judge_lateness(loop: Any, sample: Any, past: Any) -> bool:
     """[hot] Whether the sample shows an answer to have come too late; each counts once.
 
@@ -172,7 +172,7 @@ def _judge_lateness(loop: Any, sample: Any, past: Any) -> bool:
     return late
 
 
-@compiled
+@inner
 def _judge_voltages(loop: Any, cells: Any, sample: Any) -> None:
     """[hot] Trip on a voltage that is not finite or has left its window."""
     for k in range(np.uint64(loop.cells)):
@@ -181,7 +181,7 @@ def _judge_voltages(loop: Any, cells: Any, sample: Any) -> None:
             trip(loop, fault, k)
 
 
-@compiled
+@inner
 def _step_cell(loop: Any, cell: Any, bank: Any, table: Any, v_mv: float) -> float:
     """[hot] Carry one cell's gates to its newest voltage; the model's current, pA."""
     interval_ms = loop.interval_us * 1e-3
@@ -198,7 +198,7 @@ def _step_cell(loop: Any, cell: Any, bank: Any, table: Any, v_mv: float) -> floa
     return wanted
 
 
-@compiled
+@inner
 def _answer_cells(
     loop: Any, cells: Any, banks: Any, table: Any, sample: Any, answer: Any, ticks: int
 ) -> bool:
@@ -216,7 +216,7 @@ def _answer_cells(
     return clipped
 
 
-@compiled
+@inner
 def _silence(loop: Any, cells: Any, answer: Any) -> None:
     """[hot] Make every current of an answer 0 pA, whatever it was."""
     answer.flags &= ~np.int64(LIVE | CLIPPED)
@@ -224,7 +224,7 @@ def _silence(loop: Any, cells: Any, answer: Any) -> None:
         answer.i_pa[k] = 0.0
 
 
-@compiled
+@inner
 def _state_flag(loop: Any) -> int:
     """[hot] The flag that tells the state."""
     if loop.state == _ARMED:
@@ -232,7 +232,7 @@ def _state_flag(loop: Any) -> int:
     return TRIPPED if loop.state == _TRIPPED else 0
 
 
-@compiled
+@inner
 def _repeat(loop: Any, cells: Any, sample: Any, answer: Any, past: Any) -> int:
     """[hot] Answer a sequence number again, without a step.
 

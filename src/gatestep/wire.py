@@ -18,7 +18,7 @@ import numpy as np
 
 from .bits import f32_from_u32, f64_from_u64, u64_from_f64
 from .errors import WireError
-from .kernel import compiled
+from .kernel import compiled, inner
 from .specs import MAX_CELLS
 
 LIVE, CLIPPED, LATE, TRIPPED = 1, 2, 4, 8
@@ -63,7 +63,7 @@ ANSWER = np.dtype(
 _BAD = -1
 
 
-@compiled
+@inner
 def _big_endian(message: Any, at: int, count: int) -> Any:
     """[hot] An unsigned integer of ``count`` bytes."""
     value = np.uint64(0)
@@ -72,14 +72,14 @@ def _big_endian(message: Any, at: int, count: int) -> Any:
     return value
 
 
-@compiled
+@inner
 def _signed(bits: Any, count: int) -> int:
     """[hot] Two's complement of ``count`` bytes."""
     shift = np.uint64(64 - 8 * count)
     return np.int64(bits << shift) >> np.int64(shift)
 
 
-@compiled
+@inner
 def _width(kind: int) -> int:
     """[hot] Payload bytes of an integer or float type byte; 0 for any other byte."""
     if kind < 0xCA or kind > 0xD3:
@@ -89,7 +89,7 @@ def _width(kind: int) -> int:
     return 1 << ((kind - 0xCC) & 3)
 
 
-@compiled
+@inner
 def _read_whole(message: Any, size: int, at: int) -> Any:
     """[hot] ``(value, next)`` of a whole number from 0; ``next`` is -1 when it is none."""
     if at >= size:
@@ -107,7 +107,7 @@ def _read_whole(message: Any, size: int, at: int) -> Any:
     return value, at + 1 + count
 
 
-@compiled
+@inner
 def _read_number(message: Any, size: int, at: int) -> Any:
     """[hot] ``(value, next)`` of an integer or float as float64; ``next`` -1 if neither."""
     if at >= size:
@@ -130,7 +130,7 @@ def _read_number(message: Any, size: int, at: int) -> Any:
     return np.float64(_signed(bits, count)), at + 1 + count
 
 
-@compiled
+@inner
 def _read_array(message: Any, size: int) -> Any:
     """[hot] ``(length, next)`` of an array's header; ``next`` is -1 when it is none."""
     if size < 1:
@@ -145,7 +145,7 @@ def _read_array(message: Any, size: int) -> Any:
     return np.int64(0), _BAD
 
 
-@compiled
+@inner
 def _is_nil(message: Any, size: int, at: int) -> bool:
     """[hot] Whether a nil stands at this place."""
     return at < size and message[np.uint64(at)] == 0xC0
@@ -219,7 +219,7 @@ def read_answer(message: Any, size: int, cells: int, answer: Any) -> bool:
     return at == size
 
 
-@compiled
+@inner
 def _write_bytes(out: Any, at: int, kind: int, bits: Any, count: int) -> int:
     """[hot] A type byte and the low ``count`` bytes of ``bits``; the place after them."""
     out[np.uint64(at)] = np.uint8(kind)
@@ -229,7 +229,7 @@ def _write_bytes(out: Any, at: int, kind: int, bits: Any, count: int) -> int:
     return at + 1 + count
 
 
-@compiled
+@inner
 def _write_whole(out: Any, at: int, value: int) -> int:
     """[hot] A whole number from 0 in its shortest form; the place after it."""
     bits = np.uint64(value)
@@ -245,7 +245,7 @@ def _write_whole(out: Any, at: int, value: int) -> int:
     return _write_bytes(out, at, 0xCF, bits, 8)
 
 
-@compiled
+@inner
 def _write_optional(out: Any, at: int, value: int) -> int:
     """[hot] A whole number, or nil for a negative one; the place after it."""
     if value < 0:
