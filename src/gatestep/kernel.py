@@ -25,8 +25,9 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
-from numba import njit
 
+from .compiling import compiled as compiled
+from .compiling import inner as inner
 from .simd import WIDTH, relax
 from .specs import MAX_CONDUCTANCES, MAX_GATES
 
@@ -58,12 +59,6 @@ BANK = np.dtype(
     align=True,
 )
 """One cell's model, next to its table. Make one with :func:`gatestep.tables.fill_bank`."""
-
-compiled = njit(cache=True, nogil=True, error_model="numpy")
-"""How every kernel is compiled: cached, without the GIL, IEEE arithmetic, no fastmath."""
-
-inner = njit(nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
-"""The same for a function that only compiled code calls: it goes into its callers' cache."""
 
 
 def records(dtype: np.dtype[Any], count: int = 1) -> Any:
