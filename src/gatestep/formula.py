@@ -346,10 +346,11 @@ class _Reader:
             return Apply(name, tuple(operands), below)
         if len(operands) < 2:
             raise self.refusal(tree, f"{name} takes two values or more")
-        first = operands[0]
-        for other in operands[1:]:
-            first = Apply(name, (first, other), below)
-        return first
+        while len(operands) > 1:  # halved each time, so many operands nest little
+            pairs = zip(operands[::2], operands[1::2], strict=False)
+            odd = operands[-1:] if len(operands) % 2 else []
+            operands = [Apply(name, pair, below) for pair in pairs] + odd
+        return operands[0]
 
     def refusal(self, tree: ast.expr, why: str = "") -> FormulaError:
         piece = ast.get_source_segment(self.text, tree) or self.text
@@ -435,11 +436,10 @@ def _carried(name: str, result: Any, x: list[Any], errors: list[Any]) -> Any:
         case "*":
             return np.abs(x[0]) * errors[1] + np.abs(x[1]) * errors[0]
         case "/":
-            return (errors[0] + np.abs(result) * errors[1]) / np.abs(x[1])
+            spread = (errors[0] + np.abs(result) * errors[1]) / np.abs(x[1])
+            return np.where(np.isinf(x[1]), 0.0, spread)
         case "**":
-            base = np.abs(x[0])
-            relative = np.abs(x[1]) * errors[0] / base + np.abs(np.log(base)) * errors[1]
-            return np.abs(result) * relative
+            return _carried_by_power(np.abs(result), np.abs(x[0]), x[1], errors)
         case "exp":
             return np.abs(result) * errors[0]
         case "log":
@@ -449,6 +449,14 @@ def _carried(name: str, result: Any, x: list[Any], errors: list[Any]) -> Any:
         case "min" | "max":
             return np.maximum(errors[0], errors[1])
     return errors[0]
+
+
+def _carried_by_power(size: Any, base: Any, exponent: Any, errors: list[Any]) -> Any:
+    """Error of a power: its ends over the base's spread, as slopes fail at a base of 0."""
+    ends = [base + errors[0], np.maximum(base - errors[0], 0.0)]
+    spread = np.maximum(*(np.abs(np.float_power(end, exponent) - size) for end in ends))
+    steep = np.where(size > 0, np.abs(np.log(base)) * errors[1], 0.0)
+    return spread + size * (_ROUNDING * np.abs(exponent) + steep)
 
 
 def _repaired(tree: Node, v: Floats, value: Floats) -> Floats:
