@@ -202,6 +202,51 @@ def curves(
     return show_curves(model, at, figure, json_output) or 0
 
 
+@app.command()
+def simrig(
+    rig: RigFile,
+    seconds: Annotated[float | None, typer.Option("--seconds", help="How long to run.")] = None,
+    pace: Annotated[str | None, typer.Option("--pace", help="lockstep or real.")] = None,
+    seed: Annotated[int | None, typer.Option("--seed", help="For noise, jitter and drops.")] = None,
+    out: Annotated[Path | None, typer.Option("--out", help="Save the trace as .npz.")] = None,
+    wait: Annotated[
+        float, typer.Option("--wait", metavar="S", help="Wait so long for the server.")
+    ] = 3.0,
+    curve_client: CurveClient = None,
+    json_output: Json = False,
+) -> int:
+    """Run the simulated rig of a rig file as a client of a running server."""
+    from .commands.simrig import simulate
+
+    simulate(
+        rig,
+        seconds,
+        out,
+        json_output,
+        pace=pace,
+        seed=seed,
+        curve_secret=curve_client,
+        wait_s=wait,
+    )
+    return 0
+
+
+@app.command()
+def demo(
+    seconds: Annotated[
+        float, typer.Option("--seconds", metavar="S", help="Length in the rig's time.")
+    ] = 1.8,
+    out: Annotated[Path, typer.Option("--out", metavar="DIR", help="Where files go.")] = Path(
+        "gatestep-demo"
+    ),
+    json_output: Json = False,
+) -> int:
+    """Give a simulated cell conductances through a real loop, and draw what happens."""
+    from .commands.demo import demo as body
+
+    return body(seconds, out, json_output)
+
+
 def main() -> None:
     """Entry point: run a command, and word every expected fault on one line of stderr."""
     from .errors import GatestepError

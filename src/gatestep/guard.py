@@ -9,7 +9,7 @@ from __future__ import annotations
 from math import isfinite
 from typing import Any
 
-from .kernel import compiled
+from .compiling import compiled
 from .states import Fault
 
 _NON_FINITE = int(Fault.NON_FINITE_VOLTAGE)

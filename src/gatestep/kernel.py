@@ -26,8 +26,7 @@ from typing import Any
 
 import numpy as np
 
-from .compiling import compiled as compiled
-from .compiling import inner as inner
+from .compiling import compiled
 from .simd import WIDTH, relax
 from .specs import MAX_CONDUCTANCES, MAX_GATES
 

@@ -20,8 +20,9 @@ import numpy as np
 import zmq
 from numba import types
 
+from .compiling import compiled, inner
 from .errors import LinkError
-from .kernel import compiled, inner, records
+from .kernel import records
 from .wire import MAX_MESSAGE
 
 MAX_PEER = 256
@@ -68,13 +69,17 @@ _MAX_MESSAGE = MAX_MESSAGE
 _MAX_PEER = MAX_PEER
 
 _pointer = types.uintp
-_zmq_recv = types.ExternalFunction("zmq_recv", types.intc(_pointer, _pointer, _pointer, types.intc))
-_zmq_send = types.ExternalFunction("zmq_send", types.intc(_pointer, _pointer, _pointer, types.intc))
-_zmq_getsockopt = types.ExternalFunction(
+_zmq_recv: Any = types.ExternalFunction(
+    "zmq_recv", types.intc(_pointer, _pointer, _pointer, types.intc)
+)
+_zmq_send: Any = types.ExternalFunction(
+    "zmq_send", types.intc(_pointer, _pointer, _pointer, types.intc)
+)
+_zmq_getsockopt: Any = types.ExternalFunction(
     "zmq_getsockopt", types.intc(_pointer, types.intc, _pointer, _pointer)
 )
-_zmq_errno = types.ExternalFunction("zmq_errno", types.intc())
-_clock_gettime = types.ExternalFunction("clock_gettime", types.intc(types.intc, _pointer))
+_zmq_errno: Any = types.ExternalFunction("zmq_errno", types.intc())
+_clock_gettime: Any = types.ExternalFunction("clock_gettime", types.intc(types.intc, _pointer))
 
 
 def load_libzmq() -> Path:

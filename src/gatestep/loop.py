@@ -17,7 +17,8 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
-from .kernel import BANK, compiled, inner, records, settle
+from .compiling import compiled, inner
+from .kernel import BANK, records, settle
 from .lanes import CLOSED, GONE, MAX_PEER, NOTHING, now_nsec, receive, reply, send, take
 from .specs import MAX_CELLS, RigSpec
 from .states import Event, Fault, State, next_state

@@ -11,7 +11,7 @@ from typing import Any
 
 import numpy as np
 
-from .kernel import compiled
+from .compiling import compiled
 
 
 class State(IntEnum):

@@ -13,8 +13,9 @@ from typing import Any
 
 import numpy as np
 
+from .compiling import compiled, inner
 from .guard import limited, voltage_fault
-from .kernel import STATES, compiled, current, inner, settle, step
+from .kernel import STATES, current, settle, step
 from .states import Event, Fault, State, next_state
 from .wire import CLIPPED, GAP, LATE, LIVE, NIL, REFUSED, REPEAT, TRIPPED, read_sample
 

@@ -17,8 +17,8 @@ import msgpack
 import numpy as np
 
 from .bits import f32_from_u32, f64_from_u64, u64_from_f64
+from .compiling import compiled, inner
 from .errors import WireError
-from .kernel import compiled, inner
 from .specs import MAX_CELLS
 
 LIVE, CLIPPED, LATE, TRIPPED = 1, 2, 4, 8
