@@ -33,7 +33,8 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
-from .kernel import BANK, STATES, advance, compiled, conductance, current, follow, records, settle
+from .compiling import compiled, inner
+from .kernel import BANK, STATES, advance, conductance, current, follow, records, settle
 from .specs import SimCellSpec
 from .units import MV_PER_MOHM_PA
 
@@ -155,14 +156,14 @@ def start_cells(sim: Any) -> None:
             settle(sim.banks[b], table, sim.gates[b], cell.v_mv)
 
 
-@compiled
+@inner
 def phi1(z: float) -> float:
     """[hot] ``(exp(z) - 1) / z``, 1 at 0; larger z count as 50, so it stays finite."""
     z = min(z, 50.0)
     return expm1(z) / z if z != 0.0 else 1.0
 
 
-@compiled
+@inner
 def change(cell: Any, g_ns: float, ion_pa: float, i_pa: float, h_ms: float) -> Any:
     """[hot] Exact changes ``(membrane, electrode)`` in mV over ``h_ms``.
 
@@ -197,7 +198,7 @@ def change(cell: Any, g_ns: float, ion_pa: float, i_pa: float, h_ms: float) -> A
     return h_ms * dv, h_ms * de
 
 
-@compiled
+@inner
 def _follow_native(sim: Any, cell: Any, v_mv: float) -> None:
     """[hot] Put the instantaneous native gates at their steady state for ``v_mv``."""
     for k in range(np.uint64(cell.banks)):
@@ -206,7 +207,7 @@ def _follow_native(sim: Any, cell: Any, v_mv: float) -> None:
         follow(sim.banks[b], table, sim.gates[b], v_mv)
 
 
-@compiled
+@inner
 def _advance_native(sim: Any, cell: Any, dt_ms: float) -> None:
     """[hot] Carry the dynamic native gates over ``dt_ms`` at the present voltage."""
     for k in range(np.uint64(cell.banks)):
@@ -215,7 +216,7 @@ def _advance_native(sim: Any, cell: Any, dt_ms: float) -> None:
         advance(sim.banks[b], table, sim.gates[b], cell.v_mv, dt_ms)
 
 
-@compiled
+@inner
 def _membrane(sim: Any, cell: Any) -> Any:
     """[hot] Total conductance in nS and ionic current in pA at the present voltage."""
     g_ns = cell.leak_ns
@@ -227,7 +228,7 @@ def _membrane(sim: Any, cell: Any) -> Any:
     return g_ns, ion_pa
 
 
-@compiled
+@inner
 def _substep(sim: Any, cell: Any, i_pa: float, h_ms: float) -> None:
     """[hot] One sub-step: gates to its middle, then membrane and electrode across it."""
     if cell.banks > 0:
@@ -294,7 +295,7 @@ DROP_STREAM = 17
 """Stream of draws for answers that are lost."""
 
 
-@compiled
+@inner
 def _scrambled(z: Any) -> Any:
     """[hot] The splitmix64 finaliser (Steele, Lea and Flood 2014), uint64 to uint64."""
     z = (z ^ (z >> np.uint64(30))) * _MIX_1

@@ -18,7 +18,8 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
-from .kernel import compiled, records
+from .compiling import compiled, inner
+from .kernel import records
 from .lanes import now_nsec, send
 from .simcell import SUBSTEP_US, SimCells, carry, measured, output
 from .specs import MAX_CELLS
@@ -162,7 +163,7 @@ def make_loop(cells: SimCells, queue: int) -> SimLoop:
     )
 
 
-@compiled
+@inner
 def _take_sample(loop: Any, columns: Any, row: int) -> None:
     """[hot] Read every cell's voltage and make the sample message's contents."""
     rig, sample = loop.rig[0], loop.sample[0]
@@ -189,7 +190,7 @@ def send_sample(loop: Any) -> bool:
     return send(rig.socket, rig.out_at, size)
 
 
-@compiled
+@inner
 def take_and_send(loop: Any, columns: Any, row: int) -> bool:
     """[hot] Take the sample that is due and send it; False when it could not be sent."""
     rig = loop.rig[0]
@@ -201,7 +202,7 @@ def take_and_send(loop: Any, columns: Any, row: int) -> bool:
     return sent
 
 
-@compiled
+@inner
 def decode(loop: Any, size: Any) -> bool:
     """[hot] Decode the message just received; False (and counted) when it is no answer."""
     rig, answer = loop.rig[0], loop.answer[0]
@@ -215,7 +216,7 @@ def decode(loop: Any, size: Any) -> bool:
     return sound
 
 
-@compiled
+@inner
 def note(loop: Any, columns: Any, first: int, nsec: int) -> bool:
     """[hot] Put the answer into its sample's row; whether it is newer than all before."""
     rig, answer = loop.rig[0], loop.answer[0]
@@ -235,7 +236,7 @@ def note(loop: Any, columns: Any, first: int, nsec: int) -> bool:
     return newer
 
 
-@compiled
+@inner
 def enqueue(loop: Any, tick: Any, offset_us: float, lag_us: float) -> None:
     """[hot] Send the answer on its way to the output; those it overtakes are taken out."""
     rig, answer = loop.rig[0], loop.answer[0]
@@ -257,7 +258,7 @@ def enqueue(loop: Any, tick: Any, offset_us: float, lag_us: float) -> None:
     rig.count += 1
 
 
-@compiled
+@inner
 def _let_flow(loop: Any, columns: Any, row: int, span_us: float) -> None:
     """[hot] Carry every cell over a span in which the command does not change."""
     rig = loop.rig[0]
@@ -269,7 +270,7 @@ def _let_flow(loop: Any, columns: Any, row: int, span_us: float) -> None:
         carry(loop.cells, c, i_pa, span_us / 1000.0, SUBSTEP_US)
 
 
-@compiled
+@inner
 def _put_in_force(loop: Any) -> None:
     """[hot] Let the answer at the head of the queue flow from now on."""
     rig = loop.rig[0]
@@ -293,7 +294,7 @@ def fall_silent(loop: Any) -> None:
         rig.now_pa[c] = 0.0
 
 
-@compiled
+@inner
 def play(loop: Any, columns: Any, first: int) -> None:
     """[hot] Let the next tick pass: currents switch when due, the cells live through it."""
     rig = loop.rig[0]

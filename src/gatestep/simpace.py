@@ -15,7 +15,7 @@ import numpy as np
 import zmq
 from numba import types
 
-from .kernel import compiled
+from .compiling import compiled, inner
 from .lanes import now_nsec, take
 from .simcell import DROP_STREAM, JITTER_STREAM, uniform
 from .simloop import decode, enqueue, note, play, take_and_send
@@ -50,7 +50,7 @@ _nanosleep: Any = types.ExternalFunction("nanosleep", types.intc(_pointer, _poin
 _sched_yield: Any = types.ExternalFunction("sched_yield", types.intc())
 
 
-@compiled
+@inner
 def _virtual_arrival(loop: Any) -> Any:
     """[hot] ``(tick, offset_us, lag_us)`` at which the answer reaches the output."""
     rig = loop.rig[0]
@@ -66,7 +66,7 @@ def _virtual_arrival(loop: Any) -> Any:
     return rig.seq + ticks, 0.0, ticks * rig.interval_us
 
 
-@compiled
+@inner
 def _await_answer(loop: Any) -> int:
     """[hot] Wait for the answer to sample ``seq``, at most the socket's time-out."""
     rig, answer = loop.rig[0], loop.answer[0]
@@ -112,7 +112,7 @@ def run_lockstep(loop: Any, columns: Any, first: int, stop: int) -> int:
     return _DONE
 
 
-@compiled
+@inner
 def _take_answers(loop: Any, columns: Any, first: int) -> None:
     """[hot] Take every answer that has come and send it on its way to the output."""
     rig, answer = loop.rig[0], loop.answer[0]
@@ -135,7 +135,7 @@ def _take_answers(loop: Any, columns: Any, first: int) -> None:
                 enqueue(loop, tick + 1, 0.0, (tick + 1 - answer.seq) * rig.interval_us)
 
 
-@compiled
+@inner
 def _wait_until(loop: Any, columns: Any, first: int, edge_nsec: int) -> int:
     """[hot] Take answers until the clock passes ``edge_nsec``; the clock then.
 
@@ -158,7 +158,7 @@ def _wait_until(loop: Any, columns: Any, first: int, edge_nsec: int) -> int:
             _nanosleep(rig.time_at, np.uint64(0))
 
 
-@compiled
+@inner
 def _catch_up(loop: Any, columns: Any, first: int, tick: int) -> None:
     """[hot] Let the cells live up to the start of a tick."""
     while loop.rig[0].played < tick:

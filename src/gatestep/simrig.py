@@ -140,6 +140,8 @@ class SimRig:
         socket.connect(self.endpoint)
         event = monitor.poll(int(CONNECT_S * 1000)) and _event(monitor)
         socket.disable_monitor()
+        # An open monitor would keep the context from ending.
+        monitor.close(linger=0)
         if event != zmq.EVENT_HANDSHAKE_SUCCEEDED:
             found = "refused the handshake" if event else "did not accept a connection"
             raise LinkError(

@@ -143,7 +143,7 @@ class Summary:
     cells: list[str]
     threshold_mv: float = 0.0
     ticks: int = 0
-    seconds: float = 0.0
+    interval_us: float = 0.0
     counts: dict[str, int] = field(default_factory=dict)
     spikes: list[list[float]] = field(default_factory=list)
     peak_mv: list[float] = field(default_factory=list)
@@ -160,7 +160,7 @@ class Summary:
         if trace.ticks == 0:
             return
         self.ticks += trace.ticks
-        self.seconds += trace.ticks * trace.interval_us * 1e-6
+        self.interval_us = trace.interval_us
         found = {"gaps": trace.gaps, "missed": trace.missed, "late": trace.late}
         for name, flag in _FLAGS.items():
             found[name] = trace.flagged(flag)
@@ -208,7 +208,7 @@ class Summary:
         return {
             "simulated": SIMULATED,
             "ticks": self.ticks,
-            "seconds": self.seconds,
+            "seconds": self.ticks * self.interval_us * 1e-6,
             **self.counts,
             "round_trip_us": trips,
             "cells": cells,
