@@ -267,11 +267,10 @@ def test_silent_server_is_a_link_error():
         assert [s[0] for s in there.samples].count(50) == 4
 
 
-def test_no_server_is_a_link_error(monkeypatch):
+def test_no_server_is_a_link_error():
     """Where nobody listens the rig says so and what to start."""
-    monkeypatch.setattr(simrig, "CONNECT_S", 0.2)
     with socket_nobody_has() as endpoint, pytest.raises(LinkError, match="gatestep serve"):
-        SimRig(rig_spec(endpoint))
+        SimRig(rig_spec(endpoint), connect_s=0.2)
 
 
 @contextmanager
@@ -513,12 +512,11 @@ def test_command_prints_figures_and_saves_the_trace(tmp_path, capsys, monkeypatc
     assert "200 live" in text
 
 
-def test_command_errors_are_plain(tmp_path, monkeypatch):
+def test_command_errors_are_plain(tmp_path):
     """No server, no rig file, an output that cannot be written: errors of the project's own."""
-    monkeypatch.setattr(simrig, "CONNECT_S", 0.1)
     with pytest.raises(FileError, match=r"gone\.toml"):
         simulate(tmp_path / "gone.toml")
     with socket_nobody_has() as endpoint, pytest.raises(LinkError, match="gatestep serve"):
-        simulate(write_rig(tmp_path, endpoint))
+        simulate(write_rig(tmp_path, endpoint), wait_s=0.1)
     with server(ohmic(5.0, -50.0)) as there, pytest.raises(FileError, match="--out"):
         simulate(write_rig(tmp_path, there.endpoint), out=tmp_path / "no" / "trace.npz")

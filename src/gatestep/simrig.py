@@ -29,7 +29,7 @@ from .specs import RigSpec, SimCellSpec, SimulatedSpec
 CHUNK = 2_000
 """Ticks between two looks at the interpreter in lockstep: progress and Ctrl-C."""
 CONNECT_S = 3.0
-"""How long a server has to accept the connection."""
+"""How long a server has to accept the connection, if not told."""
 RESEND_MS = 200
 """Lockstep: wait for an answer this long, then send the sample again."""
 RESENDS = 10
@@ -60,6 +60,8 @@ class SimRig:
         Connect here and not to ``loop.endpoint``.
     curve_secret : Path, optional
         The rig's own secret CURVE certificate, for a server that asks for one.
+    connect_s : float
+        How long the server has to accept the connection; it may start meanwhile.
     timeout_ms : float
         The rig's own time-out, after which the output goes to 0 pA.
     resend_ms, resends : int
@@ -69,7 +71,7 @@ class SimRig:
     Raises
     ------
     LinkError
-        When no server accepts the connection within ``CONNECT_S``.
+        When no server accepts the connection within ``connect_s``.
     FileError
         When a native model or an override cannot be used.
     """
@@ -87,6 +89,7 @@ class SimRig:
         drop: float | None = None,
         endpoint: str | None = None,
         curve_secret: Path | None = None,
+        connect_s: float = CONNECT_S,
         timeout_ms: float = TIMEOUT_MS,
         resend_ms: int = RESEND_MS,
         resends: int = RESENDS,
@@ -111,7 +114,7 @@ class SimRig:
         self._context = zmq.Context()
         self._socket = self._context.socket(zmq.DEALER)
         try:
-            self._connect(curve_secret, resend_ms)
+            self._connect(curve_secret, connect_s, resend_ms)
         except BaseException:
             self.close()
             raise
@@ -125,7 +128,7 @@ class SimRig:
         rig.seed, rig.jitter_us, rig.drop = simulated.seed, simulated.jitter_us, simulated.drop
         rig.timeout_us = timeout_ms * 1000.0
 
-    def _connect(self, curve_secret: Path | None, resend_ms: int) -> None:
+    def _connect(self, curve_secret: Path | None, connect_s: float, resend_ms: int) -> None:
         socket = self._socket
         socket.linger = 0
         socket.rcvtimeo = resend_ms
@@ -138,14 +141,14 @@ class SimRig:
             | zmq.EVENT_HANDSHAKE_FAILED_NO_DETAIL
         )
         socket.connect(self.endpoint)
-        event = monitor.poll(int(CONNECT_S * 1000)) and _event(monitor)
+        event = monitor.poll(int(connect_s * 1000)) and _event(monitor)
         socket.disable_monitor()
         # An open monitor would keep the context from ending.
         monitor.close(linger=0)
         if event != zmq.EVENT_HANDSHAKE_SUCCEEDED:
             found = "refused the handshake" if event else "did not accept a connection"
             raise LinkError(
-                f"{self.endpoint}: the server {found} within {CONNECT_S:g} s; "
+                f"{self.endpoint}: the server {found} within {connect_s:g} s; "
                 "start it with: gatestep serve RIG.toml"
             )
         self._loop.rig[0].socket = socket.underlying

@@ -25,6 +25,7 @@ def simulate(
     seed: int | None = None,
     threshold_mv: float = 0.0,
     curve_secret: Path | None = None,
+    wait_s: float = 3.0,
 ) -> dict[str, Any]:
     """Run the simulated rig against a running server and print what happened.
 
@@ -42,6 +43,8 @@ def simulate(
         A spike is a rise of the membrane through this voltage.
     curve_secret : Path, optional
         The rig's own secret CURVE certificate.
+    wait_s : float
+        How long to wait for a server to accept the connection.
 
     Returns
     -------
@@ -67,6 +70,7 @@ def simulate(
         seconds=seconds,
         seed=seed,
         curve_secret=curve_secret,
+        connect_s=wait_s,
     ) as rig:
         summary = Summary(rig.cell_names, threshold_mv)
         with _bar(f"simulated rig, {rig.pace}", not json_output) as progress:
