@@ -11,8 +11,8 @@ from typing import TYPE_CHECKING, Any
 from ..errors import FileError, GatestepError, MissingExtraError
 
 if TYPE_CHECKING:
+    from ..kinetics import GateCurves
     from ..library import LoadedModel
-    from ..tables import GateCurves
 
 GRID_MV = (-200.0, 200.0)
 USUAL_AT_MV = tuple(float(v) for v in range(-100, 41, 10))
@@ -87,8 +87,8 @@ def show_curves(model: str, at: str | None, figure: Path | None, json_output: bo
     GatestepError
         If the voltages, the model or the figure's file cannot be used.
     """
+    from ..kinetics import curves_of
     from ..library import load_model
-    from ..tables import curves_of
 
     voltages = USUAL_AT_MV if at is None else parse_voltages(at)
     loaded = load_model(model)
@@ -209,7 +209,7 @@ def _figure(loaded: LoadedModel, span_mv: tuple[float, float]) -> Any:
         raise MissingExtraError("matplotlib", "figure", "Drawing curves") from None
     import numpy as np
 
-    from ..tables import curves_of
+    from ..kinetics import curves_of
 
     curves = curves_of(loaded.spec, np.linspace(*span_mv, 721))
     figure = Figure(figsize=(10, 5.4), layout="constrained")
