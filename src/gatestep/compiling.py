@@ -34,7 +34,20 @@ _STAMP = _source_stamp()
 
 def compiled(function: Callable[..., Any]) -> Any:
     """Compile a function that Python may call; its machine code is kept on disk."""
-    dispatcher = njit(cache=True, **_COMMON)(function)
+    return _kept(function)
+
+
+def merged(function: Callable[..., Any]) -> Any:
+    """The same for a small function whose code is to stand in the body of each caller.
+
+    A call between compiled functions passes every array as seven values on the
+    stack, which costs more than a small function itself.
+    """
+    return _kept(function, forceinline=True)
+
+
+def _kept(function: Callable[..., Any], **options: Any) -> Any:
+    dispatcher = njit(cache=True, **options, **_COMMON)(function)
     index = getattr(getattr(dispatcher, "_cache", None), "_cache_file", None)
     if index is not None:
         index._source_stamp = _STAMP

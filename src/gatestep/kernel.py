@@ -26,8 +26,8 @@ from typing import Any
 
 import numpy as np
 
-from .compiling import compiled
-from .simd import WIDTH, relax
+from .compiling import merged
+from .simd import WIDTH, relax, relax_pair
 from .specs import MAX_CONDUCTANCES, MAX_GATES
 
 OHMIC = 0
@@ -69,7 +69,7 @@ _ONE = np.uint64(1)
 _BLOCK = np.uint64(WIDTH)
 
 
-@compiled
+@merged
 def locate(bank: Any, v_mv: float) -> Any:
     """[hot] Row below a voltage and the place between it and the next, in [0, 1].
 
@@ -81,7 +81,7 @@ def locate(bank: Any, v_mv: float) -> Any:
     return row, place - row
 
 
-@compiled
+@merged
 def advance(bank: Any, table: Any, x: Any, v_mv: float, dt_ms: float) -> None:
     """[hot] Carry the dynamic gates over ``dt_ms`` with the voltage held at ``v_mv``."""
     row, f = locate(bank, v_mv)
@@ -90,12 +90,14 @@ def advance(bank: Any, table: Any, x: Any, v_mv: float, dt_ms: float) -> None:
     low = np.uint64(bank.base) + np.uint64(row) * stride
     high = low + stride
     block = np.uint64(0)
-    while block < dynamic:
+    while block + _BLOCK < dynamic:
+        relax_pair(table, x, low, high, dynamic, block, f, dt_ms)
+        block += _BLOCK + _BLOCK
+    if block < dynamic:
         relax(table, x, low, high, dynamic, block, f, dt_ms)
-        block += _BLOCK
 
 
-@compiled
+@merged
 def follow(bank: Any, table: Any, x: Any, v_mv: float) -> None:
     """[hot] Put the instantaneous gates at their steady state for ``v_mv``."""
     if bank.instant == 0:
@@ -109,7 +111,7 @@ def follow(bank: Any, table: Any, x: Any, v_mv: float) -> None:
         x[dynamic + k] = a + f * (table[low + stride + k] - a)
 
 
-@compiled
+@merged
 def settle(bank: Any, table: Any, x: Any, v_mv: float) -> None:
     """[hot] Put every gate at its steady state for ``v_mv``."""
     row, f = locate(bank, v_mv)
@@ -121,7 +123,7 @@ def settle(bank: Any, table: Any, x: Any, v_mv: float) -> None:
     follow(bank, table, x, v_mv)
 
 
-@compiled
+@merged
 def current(bank: Any, x: Any, v_mv: float) -> float:
     """[hot] The current the model injects at ``v_mv``, in pA: the sum of -g * (V - E)."""
     total = 0.0
@@ -136,7 +138,7 @@ def current(bank: Any, x: Any, v_mv: float) -> float:
     return total
 
 
-@compiled
+@merged
 def conductance(bank: Any, x: Any) -> float:
     """[hot] The model's total conductance, in nS."""
     total = 0.0
@@ -150,7 +152,7 @@ def conductance(bank: Any, x: Any) -> float:
     return total
 
 
-@compiled
+@merged
 def power(y: float, n: int) -> float:
     """[hot] ``y ** n`` for n from 1 to 15, by squaring."""
     square = y * y
@@ -166,7 +168,7 @@ def power(y: float, n: int) -> float:
     return result
 
 
-@compiled
+@merged
 def step(bank: Any, table: Any, x: Any, v_old_mv: float, v_new_mv: float, dt_ms: float) -> float:
     """[hot] One tick: gates across it, then the current at its end, in pA.
 

@@ -3,7 +3,9 @@
 A gate relaxes over a held voltage as ``x <- inf + (x - inf) * exp(-dt * rate)``.
 With the table's columns side by side, four gates need eight contiguous loads and
 one four-wide exponential, so the block is written as LLVM vector code: it stays
-vectors on every processor, where a compiler would have to guess at aliasing.
+vectors on every processor, where a compiler would have to guess at aliasing. Two
+blocks side by side take the same steps in turn, so that one's waiting is filled by
+the other's work.
 
 The exponential is our own, from plain additions and multiplications without
 contraction, so that each processor gives the same bits: ``exp(-y) = 2**n * exp(r)``
@@ -14,6 +16,7 @@ the true value for y in [0, 708]; larger y count as 708, which gives 3e-308.
 
 from __future__ import annotations
 
+from functools import partial
 from math import factorial
 from typing import Any
 
@@ -36,23 +39,31 @@ _SERIES = [1.0 / factorial(k) for k in range(13)]
 
 
 def _relax_plain(
-    table: Any, x: Any, low: Any, high: Any, dynamic: Any, block: Any, f: Any, dt: Any
+    table: Any,
+    x: Any,
+    low: Any,
+    high: Any,
+    dynamic: Any,
+    block: Any,
+    f: Any,
+    dt: Any,
+    width: int = WIDTH,
 ) -> None:
     """[hot] The same block in numpy, operation for operation."""
     low, high, dynamic, block = int(low), int(high), int(dynamic), int(block)
-    a = table[low + block : low + block + WIDTH]
-    b = table[high + block : high + block + WIDTH]
+    a = table[low + block : low + block + width]
+    b = table[high + block : high + block + width]
     inf = a + f * (b - a)
-    a = table[low + dynamic + block : low + dynamic + block + WIDTH]
-    b = table[high + dynamic + block : high + dynamic + block + WIDTH]
+    a = table[low + dynamic + block : low + dynamic + block + width]
+    b = table[high + dynamic + block : high + dynamic + block + width]
     y = dt * (a + f * (b - a))
     y = np.where(y < _LARGEST, y, _LARGEST)
     t = _ROUNDER - y * _LOG2_E
     n = t - _ROUNDER
     r = -(y + n * _LN2_HIGH) - n * _LN2_LOW
     scale = ((t.view(np.uint64) + np.uint64(1023)) << np.uint64(52)).view(np.float64)
-    old = x[block : block + WIDTH]
-    x[block : block + WIDTH] = inf + (old - inf) * (_polynomial(_Numpy, r) * scale)
+    old = x[block : block + width]
+    x[block : block + width] = inf + (old - inf) * (_polynomial(_Numpy, r) * scale)
 
 
 def _polynomial(o: Any, r: Any) -> Any:
@@ -87,29 +98,28 @@ class _Numpy:
 
 
 class _Vector:
-    """Carrier of LLVM vectors of four doubles: emits instructions."""
+    """Carrier of LLVM vectors of ``width`` doubles: emits instructions."""
 
-    double4 = ir.VectorType(ir.DoubleType(), WIDTH)
-    int4 = ir.VectorType(ir.IntType(64), WIDTH)
-    lanes = ir.VectorType(ir.IntType(32), WIDTH)
-
-    def __init__(self, builder: Any) -> None:
-        self.builder = builder
+    def __init__(self, builder: Any, width: int) -> None:
+        self.builder, self.width = builder, width
+        self.doubles = ir.VectorType(ir.DoubleType(), width)
+        self.wholes = ir.VectorType(ir.IntType(64), width)
+        self.lanes = ir.VectorType(ir.IntType(32), width)
         self.add, self.sub, self.mul = builder.fadd, builder.fsub, builder.fmul
 
     def const(self, value: float) -> Any:
-        return ir.Constant(self.double4, [ir.Constant(ir.DoubleType(), value)] * WIDTH)
+        return ir.Constant(self.doubles, [ir.Constant(ir.DoubleType(), value)] * self.width)
 
     def whole(self, value: int) -> Any:
-        return ir.Constant(self.int4, [ir.Constant(ir.IntType(64), value)] * WIDTH)
+        return ir.Constant(self.wholes, [ir.Constant(ir.IntType(64), value)] * self.width)
 
     def spread(self, scalar: Any) -> Any:
-        empty = ir.Constant(self.double4, ir.Undefined)
+        empty = ir.Constant(self.doubles, ir.Undefined)
         first = self.builder.insert_element(empty, scalar, ir.Constant(ir.IntType(32), 0))
-        return self.builder.shuffle_vector(first, empty, ir.Constant(self.lanes, [0] * WIDTH))
+        return self.builder.shuffle_vector(first, empty, ir.Constant(self.lanes, [0] * self.width))
 
     def address(self, base: Any, index: Any) -> Any:
-        return self.builder.bitcast(self.builder.gep(base, [index]), self.double4.as_pointer())
+        return self.builder.bitcast(self.builder.gep(base, [index]), self.doubles.as_pointer())
 
     def load(self, base: Any, index: Any) -> Any:
         return self.builder.load(self.address(base, index), align=8)
@@ -124,12 +134,12 @@ class _Vector:
         n = self.sub(t, self.const(_ROUNDER))
         r = build.fneg(self.add(y, self.mul(n, self.const(_LN2_HIGH))))
         r = self.sub(r, self.mul(n, self.const(_LN2_LOW)))
-        power = build.add(build.bitcast(t, self.int4), self.whole(1023))
-        scale = build.bitcast(build.shl(power, self.whole(52)), self.double4)
+        power = build.add(build.bitcast(t, self.wholes), self.whole(1023))
+        scale = build.bitcast(build.shl(power, self.whole(52)), self.doubles)
         return self.mul(_polynomial(self, r), scale)
 
 
-def _relax_vector() -> Any:
+def _relax_vector(width: int) -> Any:
     @intrinsic
     def relax(
         _typing: Any,
@@ -146,7 +156,7 @@ def _relax_vector() -> Any:
         signature = types.void(table, x, index, index, index, index, types.float64, types.float64)
 
         def generate(context: Any, builder: Any, sig: Any, args: Any) -> Any:
-            v = _Vector(builder)
+            v = _Vector(builder, width)
             rows = context.make_array(sig.args[0])(context, builder, args[0]).data
             state = context.make_array(sig.args[1])(context, builder, args[1]).data
             low_inf, high_inf = builder.add(args[2], args[5]), builder.add(args[3], args[5])
@@ -165,7 +175,7 @@ def _relax_vector() -> Any:
     return relax
 
 
-relax = _relax_plain if config.DISABLE_JIT else _relax_vector()
+relax = _relax_plain if config.DISABLE_JIT else _relax_vector(WIDTH)
 """[hot] Relax one block of four gates in place.
 
 ``relax(table, x, low, high, dynamic, block, f, dt)``: ``low`` and ``high`` are the
@@ -173,3 +183,8 @@ indices in ``table`` of the two rows around the voltage, ``dynamic`` the padded
 number of dynamic gates, ``block`` the first gate of the block, ``f`` in [0, 1] the
 place between the rows, ``dt`` in ms. No bounds are checked.
 """
+
+relax_pair = (
+    partial(_relax_plain, width=2 * WIDTH) if config.DISABLE_JIT else _relax_vector(2 * WIDTH)
+)
+"""[hot] The same for two blocks, eight gates, from ``block`` on."""
