@@ -107,4 +107,4 @@ def test_all_shipped_models_load_in_order():
     """The list holds every file of the folder, alphabetical, each a valid model."""
     models = shipped_models()
     assert [m.name for m in models] == shipped_names() == sorted(shipped_names())
-    assert len(models) == len(list(shipped_folder().iterdir()))
+    assert len(models) == len(list(shipped_folder().glob("*.toml")))

@@ -78,7 +78,7 @@ def test_the_squid_axon_rests_at_its_resting_potential():
 
     Figures computed from the 1952 equations; the leak's printed reversal, 10.613 mV
     above rest, puts the membrane's own rest 0.004 mV above it (by hand: 1.2201 - 4.3998
-    + 3.1839 = 0.0042 uA/cm2 at rest, over a slope of about 1.16 mS/cm2).
+    + 3.1839 = 0.0042 uA/cm2 at rest, over a slope of about 1.17 mS/cm2).
     """
     spec = load_model("squid-axon").spec
     rest = {c.name: float(c.inf[0]) for c in curves_of(spec, [-65.0])}

@@ -18,6 +18,8 @@ from numpy.typing import NDArray
 
 Floats = NDArray[np.float64]
 
+_CHUNK = 8192  # few enough voltages that a formula's steps stay in the processor's cache
+
 
 @dataclass(frozen=True, slots=True)
 class Number:
@@ -80,15 +82,23 @@ def evaluate(tree: Node, v_mv: Floats) -> Floats:
     Not finite at poles, at overflows, and at roots and logarithms of negatives.
     """
     v = np.array(v_mv, dtype=np.float64).reshape(-1)
-    doubts: list[Any] = []
+    value = np.empty_like(v)
     with np.errstate(all="ignore"):
-        value: Floats = np.array(np.broadcast_to(_value(tree, v, doubts), v.shape))
-        doubtful = ~np.isfinite(value)
-        for doubt in doubts:
-            doubtful |= doubt
-        if doubtful.any():
-            value[doubtful] = _repaired(tree, v[doubtful], value[doubtful])
+        for start in range(0, v.size, _CHUNK):
+            part = slice(start, start + _CHUNK)
+            value[part] = _evaluated(tree, v[part])
     return value.reshape(np.shape(v_mv))
+
+
+def _evaluated(tree: Node, v: Floats) -> Floats:
+    doubts: list[Any] = []
+    value: Floats = np.array(np.broadcast_to(_value(tree, v, doubts), v.shape))
+    doubtful = ~np.isfinite(value)
+    for doubt in doubts:
+        doubtful |= doubt
+    if doubtful.any():
+        value[doubtful] = _repaired(tree, v[doubtful], value[doubtful])
+    return value
 
 
 def signature(tree: Node, v_mv: Floats) -> NDArray[np.uint64]:

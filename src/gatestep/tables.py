@@ -148,7 +148,8 @@ def build_tables(model: ModelSpec) -> Tables:
         rows_per_mv = min(FINEST_ROWS_PER_MV, rows_per_mv << min(halvings, 8))
     reports = tuple(_finished(g, s, rows_per_mv) for g, s in zip(gates, sampled, strict=True))
     bank, table = _laid_out(model, gates, sampled, rows_per_mv)
-    digest = hashlib.sha256(repr(BANK.descr).encode() + bank.tobytes() + table.tobytes())
+    digest = hashlib.sha256(repr(BANK.descr).encode() + bank.tobytes())
+    digest.update(table.data)
     names = tuple(gate.name for gate in gates)
     return Tables(model, names, reports, bank, table, 1.0 / rows_per_mv, digest.hexdigest())
 
