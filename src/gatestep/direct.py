@@ -1,0 +1,417 @@
+"""The direct lane: the compiled loop at the socket itself, with no thread between.
+
+Stream sockets, TCP or UNIX, never blocking, with one ``poll`` that waits for all of
+them. The protocol is in :mod:`gatestep.zmtp`; here are the system calls and the rules
+of who is dropped: a peer that breaks the protocol, does not finish its handshake in
+time, falls silent beyond the time it allowed itself, or leaves its answers unread.
+Nobody is ever waited for.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import ipaddress
+import os
+import socket
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numba import types
+
+from .compiling import compiled, inner
+from .errors import LinkError
+from .kernel import records
+from .wire import MAX_MESSAGE
+from .zmtp import (
+    BROKEN,
+    FREE,
+    MESSAGE,
+    OPEN,
+    PEER,
+    feed,
+    make_room,
+    open_peer,
+    put_answer,
+)
+
+PLACES = 128
+"""Connections at once; when all are taken, one that has not finished its handshake goes."""
+MAX_ALLOWED = 64
+"""Longest list of peer addresses."""
+HANDSHAKE_NSEC = 1_000_000_000
+_CHECK_NSEC = 50_000_000
+
+POLL = np.dtype([("fd", "i4"), ("events", "i2"), ("revents", "i2")])
+DIRECT = np.dtype(
+    [
+        ("listen", "i8"),
+        ("tcp", "i8"),
+        ("wait_ms", "i8"),
+        ("used", "i8"),  # places that have ever been taken; those beyond are free
+        ("serials", "i8"),
+        ("turn", "i8"),  # place that the last message came from
+        ("checked_nsec", "i8"),
+        ("peer_size", "i8"),  # id of the peer of the last message: its serial
+        ("gone", "i8"),  # serial of a connection that has just ended, 0 if none
+        ("undelivered", "i8"),
+        ("allowed", "i8"),  # addresses that may connect; 0: any
+        ("poll_at", "u8"),
+        ("time_at", "u8"),
+        ("address_at", "u8"),
+        ("length_at", "u8"),
+        ("one_at", "u8"),
+        ("peer", "u1", (8,)),
+        ("out", "u1", (MAX_MESSAGE,)),
+        ("message", "u1", (MAX_MESSAGE,)),
+        ("time", "i8", (2,)),
+        ("address", "u1", (128,)),
+        ("length", "u4", (2,)),
+        ("one", "i4", (2,)),
+        ("addresses", "u1", (MAX_ALLOWED * 16,)),
+        ("poll", POLL, (PLACES + 1,)),
+        ("peers", PEER, (PLACES,)),
+        ("incoming_at", "u8", (PLACES,)),
+        ("outgoing_at", "u8", (PLACES,)),
+    ],
+    align=True,
+)
+
+NOTHING, CLOSED = -1, -2
+SENT, STALLED, GONE = 0, 1, 2
+
+_POLLIN, _POLLOUT, _TROUBLE = 1, 4, 8 | 16 | 32
+_NOSIGNAL_DONTWAIT = 0x4000 | 0x40
+_NONBLOCK_CLOEXEC = 0o2000000 | 0o4000
+_IPPROTO_TCP, _TCP_NODELAY = 6, 1
+_MONOTONIC = 1
+_INET, _INET6 = int(socket.AF_INET), int(socket.AF_INET6)
+
+_pointer = types.uintp
+_poll: Any = types.ExternalFunction("poll", types.intc(_pointer, types.ulong, types.intc))
+_recv: Any = types.ExternalFunction(
+    "recv", types.intp(types.intc, _pointer, types.uintp, types.intc)
+)
+_send: Any = types.ExternalFunction(
+    "send", types.intp(types.intc, _pointer, types.uintp, types.intc)
+)
+_close: Any = types.ExternalFunction("close", types.intc(types.intc))
+_accept4: Any = types.ExternalFunction(
+    "accept4", types.intc(types.intc, _pointer, _pointer, types.intc)
+)
+_setsockopt: Any = types.ExternalFunction(
+    "setsockopt", types.intc(types.intc, types.intc, types.intc, _pointer, types.uint)
+)
+_clock_gettime: Any = types.ExternalFunction("clock_gettime", types.intc(types.intc, _pointer))
+
+
+def make_direct(listener: socket.socket, wait_ms: int, allowed: tuple[str, ...]) -> Any:
+    """A ``DIRECT`` record array of length 1 for a listening socket.
+
+    Parameters
+    ----------
+    listener : socket.socket
+        Listening, TCP or UNIX; it stays the caller's to close.
+    wait_ms : int
+        Longest that :func:`receive` waits.
+    allowed : tuple of str
+        IPv4 or IPv6 addresses that may connect over TCP; empty for any.
+    """
+    lane = records(DIRECT)
+    record = lane[0]
+    listener.setblocking(False)
+    record.listen, record.wait_ms = listener.fileno(), wait_ms
+    record.tcp = listener.family != socket.AF_UNIX
+    record.one[0] = 1
+    record.allowed = len(allowed)
+    for k, address in enumerate(allowed[:MAX_ALLOWED]):
+        record.addresses[16 * k : 16 * k + 16] = np.frombuffer(_as_ipv6(address), np.uint8)
+    base = int(lane.ctypes.data)
+    offsets = {name: base + field[1] for name, field in DIRECT.fields.items()}  # type: ignore[union-attr]
+    for name in ("poll", "time", "address", "length", "one"):
+        record[f"{name}_at"] = offsets[name]
+    inside = {name: field[1] for name, field in PEER.fields.items()}  # type: ignore[union-attr]
+    places = offsets["peers"] + PEER.itemsize * np.arange(PLACES, dtype=np.uint64)
+    record.incoming_at[:] = places + np.uint64(inside["incoming"])
+    record.outgoing_at[:] = places + np.uint64(inside["outgoing"])
+    return lane
+
+
+def _as_ipv6(address: str) -> bytes:
+    """Sixteen bytes of an address; an IPv4 one is mapped."""
+    parsed = ipaddress.ip_address(address)
+    return (b"\0" * 10 + b"\xff\xff" if parsed.version == 4 else b"") + parsed.packed
+
+
+def listen(endpoint: str) -> socket.socket:
+    """Bind and listen at ``tcp://ADDRESS:PORT`` or ``ipc://PATH``; the file is mode 0600.
+
+    Raises
+    ------
+    LinkError
+        When the endpoint cannot be bound.
+    """
+    try:
+        return (
+            _listen_unix(endpoint[6:]) if endpoint.startswith("ipc://") else _listen_tcp(endpoint)
+        )
+    except OSError as fault:
+        raise LinkError(f"{endpoint}: {fault.strerror or fault}") from fault
+
+
+def _listen_tcp(endpoint: str) -> socket.socket:
+    host, _, port = endpoint.removeprefix("tcp://").rpartition(":")
+    host = host.strip("[]")
+    family = socket.AF_INET6 if ":" in host else socket.AF_INET
+    listener = socket.socket(family, socket.SOCK_STREAM)
+    listener.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
+    listener.bind(("" if host == "*" else host, int(port)))
+    listener.listen(PLACES)
+    return listener
+
+
+def _listen_unix(name: str) -> socket.socket:
+    """A stale socket file is replaced; one that answers is not."""
+    listener = socket.socket(socket.AF_UNIX, socket.SOCK_STREAM)
+    if Path(name).is_socket():
+        with socket.socket(socket.AF_UNIX, socket.SOCK_STREAM) as probe:
+            with contextlib.suppress(ConnectionRefusedError):
+                probe.connect(name)
+                raise OSError("another server listens there")
+        Path(name).unlink()
+    mask = os.umask(0o177)
+    try:
+        listener.bind(name)
+    finally:
+        os.umask(mask)
+    listener.listen(PLACES)
+    return listener
+
+
+@inner
+def _now(lane: Any) -> int:
+    """[hot] The monotonic clock, in nanoseconds."""
+    _clock_gettime(_MONOTONIC, lane.time_at)
+    return lane.time[0] * 1_000_000_000 + lane.time[1]
+
+
+@inner
+def _drop(lane: Any, place: int) -> None:
+    """[hot] End a connection and note its serial for whoever held the loop through it."""
+    peer = lane.peers[np.uint64(place)]
+    _close(np.int32(peer.fd))
+    lane.gone = peer.serial
+    peer.phase = FREE
+    peer.fd = -1
+
+
+@inner
+def _write_out(lane: Any, place: int) -> bool:
+    """[hot] Send what is pending, as far as the socket takes it; False when it is broken."""
+    peer = lane.peers[np.uint64(place)]
+    size = np.uint64(peer.pending)
+    address = lane.outgoing_at[np.uint64(place)]
+    sent = np.int64(_send(np.int32(peer.fd), address, size, _NOSIGNAL_DONTWAIT))
+    if sent <= 0:
+        return False
+    rest = peer.pending - sent
+    for k in range(np.uint64(rest)):
+        peer.outgoing[k] = peer.outgoing[np.uint64(sent) + k]
+    peer.pending = rest
+    return True
+
+
+@inner
+def _read_in(lane: Any, place: int, now: int) -> bool:
+    """[hot] Take what has come; False when the connection has ended."""
+    peer = lane.peers[np.uint64(place)]
+    room = np.uint64(make_room(peer))
+    address = lane.incoming_at[np.uint64(place)] + np.uint64(peer.end)
+    got = np.int64(_recv(np.int32(peer.fd), address, room, _NOSIGNAL_DONTWAIT))
+    if got <= 0:
+        return False
+    peer.end += got
+    peer.heard_nsec = now
+    return True
+
+
+@inner
+def _may_connect(lane: Any) -> bool:
+    """[hot] Whether the address just accepted is on the list, or there is none."""
+    if lane.allowed == 0:
+        return True
+    family = np.int64(lane.address[0]) + 256 * np.int64(lane.address[1])
+    found = False
+    for k in range(np.uint64(lane.allowed)):
+        same = True
+        for j in range(np.uint64(16)):
+            if family == _INET6:
+                byte = lane.address[np.uint64(8) + j]
+            elif j < 10:
+                byte = np.uint8(0)
+            elif j < 12:
+                byte = np.uint8(255)
+            else:
+                byte = lane.address[j - np.uint64(8)]
+            same = same and byte == lane.addresses[np.uint64(16) * k + j]
+        found = found or same
+    return found
+
+
+@inner
+def _free_place(lane: Any) -> int:
+    """[hot] A free place, or one taken from the oldest unfinished handshake; -1 if none."""
+    oldest = -1
+    for k in range(PLACES):
+        peer = lane.peers[np.uint64(k)]
+        if peer.phase == FREE:
+            lane.used = max(lane.used, k + 1)
+            return k
+        if peer.phase != OPEN and (
+            oldest < 0 or peer.opened_nsec < lane.peers[np.uint64(oldest)].opened_nsec
+        ):
+            oldest = k
+    if oldest >= 0:
+        _drop(lane, oldest)
+    return oldest
+
+
+@inner
+def _accept(lane: Any, now: int) -> None:
+    """[hot] Take one waiting connection and greet it."""
+    lane.length[0] = 128
+    fd = _accept4(np.int32(lane.listen), lane.address_at, lane.length_at, _NONBLOCK_CLOEXEC)
+    if fd < 0:
+        return
+    place = _free_place(lane) if _may_connect(lane) else -1
+    if place < 0:
+        _close(fd)
+        return
+    if lane.tcp:
+        _setsockopt(fd, _IPPROTO_TCP, _TCP_NODELAY, lane.one_at, 4)
+    lane.serials += 1
+    open_peer(lane.peers[np.uint64(place)], np.int64(fd), lane.serials, now)
+    if not _write_out(lane, place):
+        _drop(lane, place)
+
+
+@inner
+def _check_times(lane: Any, now: int) -> None:
+    """[hot] Drop who has not finished the handshake in time or is silent beyond its TTL."""
+    lane.checked_nsec = now
+    for k in range(np.uint64(lane.used)):
+        peer = lane.peers[k]
+        if peer.phase == FREE:
+            continue
+        unfinished = peer.phase != OPEN and now - peer.opened_nsec > HANDSHAKE_NSEC
+        silent = peer.ttl_nsec > 0 and now - peer.heard_nsec > peer.ttl_nsec
+        if unfinished or silent:
+            _drop(lane, np.int64(k))
+            return
+
+
+@inner
+def _take_message(lane: Any, place: int) -> int:
+    """[hot] Read on in a connection's bytes: a message's size, or ``NOTHING``."""
+    peer = lane.peers[np.uint64(place)]
+    found = feed(peer)
+    if found == BROKEN or (peer.pending and not _write_out(lane, place)):
+        _drop(lane, place)
+        return NOTHING
+    if found != MESSAGE:
+        return NOTHING
+    lane.turn = place
+    for k in range(np.uint64(min(peer.size, MAX_MESSAGE))):
+        lane.message[k] = peer.message[k]
+    lane.peer_size = 8
+    for k in range(np.uint64(8)):
+        lane.peer[k] = np.uint8((np.uint64(peer.serial) >> (np.uint64(8) * k)) & np.uint64(255))
+    return peer.size
+
+
+@inner
+def _wait(lane: Any) -> int:
+    """[hot] Poll the listener and every connection; how many have something."""
+    lane.poll[0].fd = np.int32(lane.listen)
+    lane.poll[0].events = np.int16(_POLLIN)
+    for k in range(np.uint64(lane.used)):
+        peer, entry = lane.peers[k], lane.poll[k + np.uint64(1)]
+        entry.fd = np.int32(peer.fd if peer.phase != FREE else -1)
+        entry.events = np.int16(_POLLIN | (_POLLOUT if peer.pending else 0))
+        entry.revents = np.int16(0)
+    return _poll(lane.poll_at, np.uint64(lane.used + 1), np.int32(lane.wait_ms))
+
+
+@inner
+def _serve_ready(lane: Any, place: int, revents: int, now: int) -> int:
+    """[hot] Do what a connection's poll result asks for: a message's size, or ``NOTHING``."""
+    peer = lane.peers[np.uint64(place)]
+    if peer.phase == FREE:
+        return NOTHING
+    broken = False
+    if revents & _POLLOUT and peer.pending:
+        broken = not _write_out(lane, place)
+    if not broken and revents & _POLLIN:
+        broken = not _read_in(lane, place, now)
+    elif revents & _TROUBLE:
+        broken = True
+    if broken:
+        _drop(lane, place)
+        return NOTHING
+    return _take_message(lane, place)
+
+
+@compiled
+def receive(lane: Any) -> int:
+    """[hot] Wait for a message, at most ``wait_ms``: its size, ``NOTHING`` or ``CLOSED``.
+
+    A size over ``MAX_MESSAGE`` means that it was too long or came in too many frames.
+    After any return ``gone`` may name a connection that has ended.
+    """
+    lane.gone = 0
+    if lane.peers[np.uint64(lane.turn)].phase == OPEN:
+        size = _take_message(lane, lane.turn)
+        if size != NOTHING or lane.gone:
+            return size
+    ready = _wait(lane)
+    now = _now(lane)
+    if now - lane.checked_nsec > _CHECK_NSEC:
+        _check_times(lane, now)
+    if ready <= 0:
+        return NOTHING
+    used = lane.used
+    for k in range(1, used + 1):
+        # Everyone else before the peer that was served last.
+        place = (lane.turn + k) % used
+        revents = np.int64(lane.poll[np.uint64(place + 1)].revents)
+        if revents:
+            size = _serve_ready(lane, place, revents, now)
+            if size != NOTHING or lane.gone:
+                return size
+    if lane.poll[0].revents:
+        _accept(lane, now)
+    return NOTHING
+
+
+@compiled
+def reply(lane: Any, size: int) -> int:
+    """[hot] Answer the last message's peer with ``lane.out``: SENT, STALLED or GONE."""
+    place = lane.turn
+    peer = lane.peers[np.uint64(place)]
+    if peer.phase != OPEN:
+        return GONE
+    waited = peer.pending
+    fits = put_answer(peer, lane.out, size, peer.enveloped)
+    if not fits or (waited == 0 and not _write_out(lane, place)):
+        lane.undelivered += 1
+        _drop(lane, place)
+        return GONE
+    return SENT if peer.pending == 0 else STALLED
+
+
+@compiled
+def close_all(lane: Any) -> None:
+    """[hot] End every connection."""
+    for k in range(np.uint64(lane.used)):
+        if lane.peers[k].phase != FREE:
+            _drop(lane, np.int64(k))
