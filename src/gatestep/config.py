@@ -69,10 +69,12 @@ def _check_exposure(spec: RigSpec, path: Path) -> None:
     """Refuse a socket that others could reach without keys or a list of peers."""
     if spec.network.peers or spec.network.curve_secret:
         return
-    sockets = {"loop": spec.loop, "control": spec.control, "feed": spec.feed}
-    open_ones = [
-        f"{k}.endpoint = {s.endpoint}" for k, s in sockets.items() if not is_local(s.endpoint)
-    ]
+    named = {
+        "loop": spec.loop.endpoint,
+        "control": spec.control.endpoint,
+        "feed": spec.feed.endpoint,
+    }
+    open_ones = [f"{k}.endpoint = {e}" for k, e in named.items() if not is_local(e)]
     if open_ones:
         raise FileError(
             f"{path}: {', '.join(open_ones)}: other machines could connect. Bind 127.0.0.1 or "

@@ -9,7 +9,6 @@ Nobody is ever waited for.
 
 from __future__ import annotations
 
-import contextlib
 import ipaddress
 import os
 import socket
@@ -174,10 +173,8 @@ def _listen_unix(name: str) -> socket.socket:
     """A stale socket file is replaced; one that answers is not."""
     listener = socket.socket(socket.AF_UNIX, socket.SOCK_STREAM)
     if Path(name).is_socket():
-        with socket.socket(socket.AF_UNIX, socket.SOCK_STREAM) as probe:
-            with contextlib.suppress(ConnectionRefusedError):
-                probe.connect(name)
-                raise OSError("another server listens there")
+        if _answers(name):
+            raise OSError("another server listens there")
         Path(name).unlink()
     mask = os.umask(0o177)
     try:
@@ -186,6 +183,12 @@ def _listen_unix(name: str) -> socket.socket:
         os.umask(mask)
     listener.listen(PLACES)
     return listener
+
+
+def _answers(name: str) -> bool:
+    """Whether somebody listens at a UNIX socket."""
+    with socket.socket(socket.AF_UNIX, socket.SOCK_STREAM) as probe:
+        return probe.connect_ex(name) == 0
 
 
 @inner
