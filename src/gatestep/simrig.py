@@ -61,7 +61,8 @@ class SimRig:
     curve_secret : Path, optional
         The rig's own secret CURVE certificate, for a server that asks for one.
     connect_s : float
-        How long the server has to accept the connection; it may start meanwhile.
+        How long the server has to accept the connection and, in lockstep, to give its
+        first answer; it may start meanwhile.
     timeout_ms : float
         The rig's own time-out, after which the output goes to 0 pA.
     resend_ms, resends : int
@@ -106,6 +107,7 @@ class SimRig:
         self.simulated = with_changes(spec, {k: v for k, v in changes.items() if v is not None})
         self.endpoint = endpoint or spec.loop.endpoint
         self.resends = resends
+        self._first_answer_by = time.monotonic() + connect_s
         self._folder = Path() if folder is None else folder
         load_libzmq()
         cells = make_cells(self.simulated.cell, load_native(self.simulated.cell, self._folder))
@@ -192,6 +194,8 @@ class SimRig:
     ) -> Trace:
         """Run on from where the last run ended: same cells, same clock, next ``seq``.
 
+        Between two runs the rig's clock stands still, in real pace as well.
+
         Parameters
         ----------
         seconds : float, optional
@@ -274,10 +278,14 @@ class SimRig:
                 raise self._broken(Status(status))
 
     def _resend(self, tries: int) -> None:
+        never = self._loop.rig[0].answered == 0
+        if never and tries > self.resends and time.monotonic() < self._first_answer_by:
+            # A server accepts connections a little before it is ready to answer.
+            return
         if tries > self.resends:
             raise LinkError(
                 f"{self.endpoint}: no answer to sample {self._loop.rig[0].seq}, sent "
-                f"{tries} times; the output is at 0 pA. See whether the server still runs "
+                f"{self.resends + 1} times; the output is at 0 pA. See whether the server runs "
                 "(gatestep status), then start again"
             )
         self._loop.rig[0].resent += 1

@@ -8,12 +8,16 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from ..errors import FileError
+
 if TYPE_CHECKING:
     from ..simrig import Progress, SimRig
     from ..simtrace import Summary, Trace
 
 SEGMENT_TICKS = 500_000
 """Ticks in memory at once when no trace is kept."""
+MOST_KEPT_TICKS = 20_000_000
+"""Longest trace that is kept whole; about 2 GB with one cell."""
 
 
 def simulate(
@@ -63,6 +67,8 @@ def simulate(
     from ..simtrace import Summary
 
     loaded = load_rig(rig_path)
+    if out is not None and not out.resolve().parent.is_dir():
+        raise FileError(f"{out}: its folder does not exist; make it or choose another --out")
     with SimRig(
         loaded.spec,
         loaded.path.parent,
@@ -74,7 +80,7 @@ def simulate(
     ) as rig:
         summary = Summary(rig.cell_names, threshold_mv)
         with _bar(f"simulated rig, {rig.pace}", not json_output) as progress:
-            traces = _run(rig, summary, out is not None, progress)
+            trace = _run(rig, summary, out is not None, progress)
         figures = {
             "rig": str(loaded.path),
             "endpoint": rig.endpoint,
@@ -85,20 +91,22 @@ def simulate(
             "counters": rig.counters,
         }
     if out is not None:
-        from ..simtrace import Trace
-
-        Trace.joined(traces).save(out)
+        trace.save(out)
         figures["out"] = str(out)
     print(json.dumps(figures) if json_output else _text(figures))
     return figures
 
 
-def _run(rig: SimRig, summary: Summary, keep: bool, progress: Progress) -> list[Trace]:
-    """Run in segments; those after the first go on where the one before ended."""
+def _run(rig: SimRig, summary: Summary, keep: bool, progress: Progress) -> Trace:
+    """Run in segments, or in one when its trace is kept; the last trace."""
     total = round(rig.simulated.seconds * 1e6 / rig.interval_us)
+    if keep and total > MOST_KEPT_TICKS:
+        raise FileError(
+            f"--out: a trace of {total} ticks is too long, at most {MOST_KEPT_TICKS} are kept; "
+            "give fewer --seconds or leave --out away"
+        )
     done = 0
-    traces: list[Trace] = []
-    while done < total or not traces:
+    while True:
         ticks = total - done if keep else min(SEGMENT_TICKS, total - done)
         start = done
         trace = rig.run(
@@ -106,9 +114,9 @@ def _run(rig: SimRig, summary: Summary, keep: bool, progress: Progress) -> list[
             progress=lambda now, _, start=start: progress(start + now, total),  # type: ignore[misc]
         )
         summary.add(trace)
-        traces = [*traces, trace] if keep else [trace]
         done += ticks
-    return traces
+        if done >= total:
+            return trace
 
 
 @contextmanager
