@@ -12,6 +12,7 @@ import msgpack
 import numpy as np
 import pytest
 import zmq
+from zmq.auth import create_certificates, load_certificate
 
 from gatestep import simrig
 from gatestep.commands.simrig import simulate
@@ -19,7 +20,15 @@ from gatestep.errors import FileError, LinkError
 from gatestep.simcell import DROP_STREAM, JITTER_STREAM, uniform
 from gatestep.simrig import SimRig
 from gatestep.simtrace import Summary, Trace
-from gatestep.specs import CellSpec, LoopSpec, RigSpec, SimCellSpec, SimulatedSpec, StepSpec
+from gatestep.specs import (
+    CellSpec,
+    LoopSpec,
+    NetworkSpec,
+    RigSpec,
+    SimCellSpec,
+    SimulatedSpec,
+    StepSpec,
+)
 
 TICK_US = 20.0
 LIVE, REPEAT, MALFORMED = 1, 32, 128
@@ -33,12 +42,15 @@ def ohmic(g_ns, reversal_mv):
 class PlainServer(threading.Thread):
     """A ROUTER in plain pyzmq and msgpack; ``behave`` may replace what it sends."""
 
-    def __init__(self, currents, behave=None):
+    def __init__(self, currents, behave=None, curve_keys=None):
         super().__init__(daemon=True)
         self.currents, self.behave = currents, behave
         self.samples, self.answers = [], {}
         self.context = zmq.Context()
         self.socket = self.context.socket(zmq.ROUTER)
+        if curve_keys is not None:
+            self.socket.curve_publickey, self.socket.curve_secretkey = curve_keys
+            self.socket.curve_server = True
         port = self.socket.bind_to_random_port("tcp://127.0.0.1")
         self.endpoint = f"tcp://127.0.0.1:{port}"
         self.over = threading.Event()
@@ -63,8 +75,8 @@ class PlainServer(threading.Thread):
 
 
 @contextmanager
-def server(currents, behave=None):
-    thread = PlainServer(currents, behave)
+def server(currents, behave=None, curve_keys=None):
+    thread = PlainServer(currents, behave, curve_keys)
     thread.start()
     try:
         yield thread
@@ -281,6 +293,25 @@ def socket_nobody_has():
     with socket.socket() as held:
         held.bind(("127.0.0.1", 0))
         yield f"tcp://127.0.0.1:{held.getsockname()[1]}"
+
+
+def test_encrypted_server_is_reached_with_keys_only(tmp_path):
+    """With CURVE keys in the rig file the rig needs its own certificate, and then works."""
+    secret = [create_certificates(tmp_path, name)[1] for name in ("server", "rig")]
+    plain = rig_spec(ANYWHERE)
+    spec = plain.model_copy(
+        update={"network": NetworkSpec(curve_secret="server.key_secret", curve_clients=".")}
+    )
+    with server(lambda *_: [9.0], curve_keys=load_certificate(secret[0])) as there:
+        where = {"folder": tmp_path, "endpoint": there.endpoint}
+        with SimRig(spec, curve_secret=tmp_path / "rig.key_secret", **where) as rig:
+            assert rig.run(0.001).flagged(LIVE) == 50
+        with pytest.raises(LinkError, match="certificate"):
+            SimRig(spec, **where)
+        with pytest.raises(LinkError, match="no secret key"):
+            SimRig(spec, curve_secret=tmp_path / "rig.key", **where)
+        with pytest.raises(LinkError, match=r"within 0\.3 s"):
+            SimRig(plain, connect_s=0.3, **where)
 
 
 def test_malformed_is_a_link_error():
