@@ -235,7 +235,7 @@ def simrig(
 def demo(
     seconds: Annotated[
         float, typer.Option("--seconds", metavar="S", help="Length in the rig's time.")
-    ] = 1.8,
+    ] = 1.2,
     out: Annotated[Path, typer.Option("--out", metavar="DIR", help="Where files go.")] = Path(
         "gatestep-demo"
     ),

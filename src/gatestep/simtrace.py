@@ -114,6 +114,22 @@ class Trace:
             ) from error
 
     @classmethod
+    def load(cls, path: Path) -> Self:
+        """Read a trace that :meth:`save` wrote.
+
+        Raises
+        ------
+        FileError
+            When the file is missing or holds no trace.
+        """
+        try:
+            with np.load(path) as held:
+                found = {f.name: held[f.name] for f in fields(cls)}
+        except (OSError, KeyError, ValueError) as error:
+            raise FileError(f"{path}: no trace of the simulated rig ({error})") from error
+        return cls(**{k: v if v.ndim else float(v) for k, v in found.items()})
+
+    @classmethod
     def joined(cls, traces: list[Trace]) -> Self:
         """One trace of several that follow each other."""
         columns = {
