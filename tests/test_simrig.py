@@ -2,105 +2,32 @@
 
 from __future__ import annotations
 
-import json
 import math
-import threading
 import time
-from contextlib import contextmanager
 
 import msgpack
 import numpy as np
 import pytest
-import zmq
+from plain_server import (
+    ANYWHERE,
+    LIVE,
+    MALFORMED,
+    REPEAT,
+    TICK_US,
+    exchange,
+    ohmic,
+    rig_spec,
+    server,
+    socket_nobody_has,
+)
 from zmq.auth import create_certificates, load_certificate
 
 from gatestep import simrig
-from gatestep.commands.simrig import simulate
 from gatestep.errors import FileError, LinkError
 from gatestep.simcell import DROP_STREAM, JITTER_STREAM, uniform
 from gatestep.simrig import SimRig
-from gatestep.simtrace import Summary, Trace
-from gatestep.specs import (
-    CellSpec,
-    LoopSpec,
-    NetworkSpec,
-    RigSpec,
-    SimCellSpec,
-    SimulatedSpec,
-    StepSpec,
-)
-
-TICK_US = 20.0
-LIVE, REPEAT, MALFORMED = 1, 32, 128
-
-
-def ohmic(g_ns, reversal_mv):
-    """Currents of a virtual leak for a sample."""
-    return lambda _, voltages: [-g_ns * (v - reversal_mv) for v in voltages]
-
-
-class PlainServer(threading.Thread):
-    """A ROUTER in plain pyzmq and msgpack; ``behave`` may replace what it sends."""
-
-    def __init__(self, currents, behave=None, curve_keys=None):
-        super().__init__(daemon=True)
-        self.currents, self.behave = currents, behave
-        self.samples, self.answers = [], {}
-        self.context = zmq.Context()
-        self.socket = self.context.socket(zmq.ROUTER)
-        if curve_keys is not None:
-            self.socket.curve_publickey, self.socket.curve_secretkey = curve_keys
-            self.socket.curve_server = True
-        port = self.socket.bind_to_random_port("tcp://127.0.0.1")
-        self.endpoint = f"tcp://127.0.0.1:{port}"
-        self.over = threading.Event()
-
-    def run(self):
-        while not self.over.is_set():
-            if self.socket.poll(20):
-                peer, body = self.socket.recv_multipart()
-                for answer in self.answer(msgpack.unpackb(body)):
-                    self.socket.send_multipart([peer, answer])
-        self.socket.close(0)
-        self.context.term()
-
-    def answer(self, sample):
-        self.samples.append(sample)
-        seq = sample[0]
-        flags = LIVE | (REPEAT if seq in self.answers else 0)
-        if seq not in self.answers:
-            self.answers[seq] = self.currents(seq, sample[4:])
-        plain = msgpack.packb([seq, flags, 1000, *self.answers[seq]])
-        return [plain] if self.behave is None else self.behave(self, sample, plain)
-
-
-@contextmanager
-def server(currents, behave=None, curve_keys=None):
-    thread = PlainServer(currents, behave, curve_keys)
-    thread.start()
-    try:
-        yield thread
-    finally:
-        thread.over.set()
-        thread.join()
-
-
-def rig_spec(endpoint, cells=1, apply="next-tick", interval_us=TICK_US, cell=None, **simulated):
-    return RigSpec(
-        loop=LoopSpec(endpoint=endpoint, interval_us=interval_us, apply=apply),
-        cell=tuple(CellSpec(name=f"c{k}", model="none", capacitance_pf=30) for k in range(cells)),
-        simulated=SimulatedSpec(cell=(cell or SimCellSpec(),) * cells, **simulated),
-    )
-
-
-def exchange(spec, currents, seconds, behave=None, **options):
-    """Run once against a fresh server; the trace, the server, the rig's counters."""
-    with server(currents, behave) as there, SimRig(spec, endpoint=there.endpoint, **options) as rig:
-        trace = rig.run(seconds)
-        return trace, there, rig.counters
-
-
-ANYWHERE = "tcp://127.0.0.1:5790"
+from gatestep.simtrace import Trace
+from gatestep.specs import CellSpec, LoopSpec, NetworkSpec, RigSpec, SimCellSpec, StepSpec
 
 
 def test_virtual_leak_adds_to_the_cells_own():
@@ -285,16 +212,6 @@ def test_no_server_is_a_link_error():
         SimRig(rig_spec(endpoint), connect_s=0.2)
 
 
-@contextmanager
-def socket_nobody_has():
-    """An endpoint that is bound but does not listen."""
-    import socket
-
-    with socket.socket() as held:
-        held.bind(("127.0.0.1", 0))
-        yield f"tcp://127.0.0.1:{held.getsockname()[1]}"
-
-
 def test_encrypted_server_is_reached_with_keys_only(tmp_path):
     """With CURVE keys in the rig file the rig needs its own certificate, and then works."""
     secret = [create_certificates(tmp_path, name)[1] for name in ("server", "rig")]
@@ -475,79 +392,3 @@ def test_real_pace_without_any_answer_is_a_link_error():
     spec = rig_spec(ANYWHERE, interval_us=1000.0, pace="real")
     with pytest.raises(LinkError, match="none of 50 samples"):
         exchange(spec, lambda *_: [50.0], 0.05, lambda *_: [])
-
-
-def test_spikes_are_interpolated_upward_crossings():
-    """Spike times are where a triangle wave rises through the threshold, exactly."""
-    t = np.arange(0, 100, 0.5)
-    v = 40.0 * np.abs((t / 10.0) % 2 - 1) - 20.0
-    trace = make_trace(t, v)
-    np.testing.assert_allclose(trace.spikes(0, 0.0), [15, 35, 55, 75, 95])
-    np.testing.assert_allclose(trace.spikes(0, 5.0), [16.25, 36.25, 56.25, 76.25, 96.25])
-
-
-def make_trace(t_ms, v_mv, trips_nsec=None):
-    n = t_ms.size
-    v = np.asarray(v_mv)[:, None]
-    trips = np.full(n, 1000) if trips_nsec is None else trips_nsec
-    ones = np.ones(n, dtype=np.int64)
-    return Trace(t_ms, v, v, v, v, v, ones, trips.astype(np.int64), ones, np.zeros(n), 500.0, 500.0)
-
-
-def test_summary_does_not_depend_on_segments():
-    """Spikes across a cut are found once, and percentiles are numpy's to 1 %."""
-    rng = np.random.default_rng(2)
-    t = np.arange(0, 2000, 0.5)
-    v = 40.0 * np.sin(t / 7.3)
-    trips = rng.lognormal(11, 1, t.size)
-    whole, cut = Summary(["a"]), Summary(["a"])
-    whole.add(make_trace(t, v, trips))
-    for part in np.split(np.arange(t.size), np.sort(rng.choice(t.size, 60, replace=False))):
-        cut.add(make_trace(t[part], v[part], trips[part]))
-    assert whole.figures() == cut.figures()
-    for p in (50, 95, 99):
-        assert whole.round_trip_us(p) == pytest.approx(np.percentile(trips, p) / 1e3, rel=0.02)
-    assert len(whole.spikes[0]) == make_trace(t, v).spikes().size
-
-
-def write_rig(folder, endpoint, seconds=0.004):
-    path = folder / "rig.toml"
-    path.write_text(
-        f'[loop]\nendpoint = "{endpoint}"\ninterval_us = 20\n'
-        '[[cell]]\nname = "a"\nmodel = "./none.toml"\ncapacitance_pf = 30\n'
-        f"[simulated]\nseconds = {seconds}\n"
-        "[[simulated.cell]]\nnoise_mv = 0.1\n"
-    )
-    return path
-
-
-def test_command_prints_figures_and_saves_the_trace(tmp_path, capsys, monkeypatch):
-    """``simrig --json --out`` prints what the trace holds and says that it is simulated."""
-    monkeypatch.setattr("gatestep.commands.simrig.SEGMENT_TICKS", 70)
-    with server(ohmic(5.0, -50.0)) as there:
-        rig = write_rig(tmp_path, there.endpoint)
-        simulate(rig, out=tmp_path / "trace.npz", json_output=True)
-        figures = json.loads(capsys.readouterr().out)
-    with np.load(tmp_path / "trace.npz") as saved:
-        assert "simulated" in str(saved["about"])
-        assert saved["v_mv"].shape == (200, 1)
-        assert figures["cells"][0]["peak_mv"] == saved["v_mv"].max()
-    assert figures["ticks"] == figures["live"] == 200
-    assert figures["missed"] == figures["gaps"] == figures["late"] == 0
-    assert "simulated" in figures["simulated"]
-    assert sorted(p.name for p in tmp_path.iterdir()) == ["rig.toml", "trace.npz"]
-    with server(ohmic(5.0, -50.0)) as there:
-        simulate(write_rig(tmp_path, there.endpoint))
-        text = capsys.readouterr().out
-    assert "simulated" in text
-    assert "200 live" in text
-
-
-def test_command_errors_are_plain(tmp_path):
-    """No server, no rig file, an output that cannot be written: errors of the project's own."""
-    with pytest.raises(FileError, match=r"gone\.toml"):
-        simulate(tmp_path / "gone.toml")
-    with socket_nobody_has() as endpoint, pytest.raises(LinkError, match="gatestep serve"):
-        simulate(write_rig(tmp_path, endpoint), wait_s=0.1)
-    with server(ohmic(5.0, -50.0)) as there, pytest.raises(FileError, match="--out"):
-        simulate(write_rig(tmp_path, there.endpoint), out=tmp_path / "no" / "trace.npz")
