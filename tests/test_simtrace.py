@@ -87,3 +87,17 @@ def test_command_errors_are_plain(tmp_path):
         simulate(write_rig(tmp_path, endpoint), wait_s=0.1)
     with server(ohmic(5.0, -50.0)) as there, pytest.raises(FileError, match="--out"):
         simulate(write_rig(tmp_path, there.endpoint), out=tmp_path / "no" / "trace.npz")
+
+
+def test_saved_traces_are_read_back(tmp_path):
+    """Reading gives what was written; a file that is no trace is refused."""
+    trace = make_trace(np.arange(5.0), np.arange(5.0) - 60)
+    trace.save(tmp_path / "t.npz")
+    again = Trace.load(tmp_path / "t.npz")
+    for name, value in vars(trace).items():
+        np.testing.assert_array_equal(getattr(again, name), value)
+    np.savez(tmp_path / "other.npz", v_mv=np.zeros(3))
+    (tmp_path / "text.npz").write_text("not an archive")
+    for wrong in ("other.npz", "text.npz", "missing.npz"):
+        with pytest.raises(FileError, match=wrong):
+            Trace.load(tmp_path / wrong)

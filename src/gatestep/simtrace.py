@@ -124,15 +124,17 @@ class Trace:
         """
         try:
             with np.load(path) as held:
-                found = {f.name: held[f.name] for f in fields(cls)}
+                found: dict[str, Any] = {f.name: held[f.name] for f in fields(cls)}
         except (OSError, KeyError, ValueError) as error:
             raise FileError(f"{path}: no trace of the simulated rig ({error})") from error
-        return cls(**{k: v if v.ndim else float(v) for k, v in found.items()})
+        for name in ("interval_us", "budget_us"):
+            found[name] = float(found[name])
+        return cls(**found)
 
     @classmethod
     def joined(cls, traces: list[Trace]) -> Self:
         """One trace of several that follow each other."""
-        columns = {
+        columns: dict[str, Any] = {
             f.name: np.concatenate([getattr(t, f.name) for t in traces])
             for f in fields(cls)
             if isinstance(getattr(traces[0], f.name), np.ndarray)
