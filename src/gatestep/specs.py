@@ -26,12 +26,14 @@ MAX_GATES = 256
 MAX_GMAX_NS = 1e6
 MAX_REVERSAL_MV = 300.0
 MAX_CURRENT_PA = 1e6
+USUAL_PRIORITY = 50
 
 Name = Annotated[str, StringConstraints(pattern=r"^[A-Za-z][A-Za-z0-9_\-]{0,31}$")]
 Formula = Annotated[str, StringConstraints(min_length=1, max_length=500)]
 Finite = Annotated[float, Field(allow_inf_nan=False)]
 Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
 Celsius = Annotated[float, Field(ge=-5, le=60)]
+Cpu = Annotated[int, Field(ge=0, le=1023)]
 
 
 class Spec(BaseModel):
@@ -269,6 +271,48 @@ class LimitsSpec(Spec):
     late_run: int = Field(default=20, ge=1, le=1_000_000)
 
 
+class HostSpec(Spec):
+    """What the operating system is asked to do for the loop; Linux only.
+
+    ``policy``, ``priority`` and ``cpus`` are the hot thread's; libzmq's I/O threads,
+    where they stand between the wire and the loop, get the same policy and priority,
+    and ``io_cpus`` (as ``cpus`` when not given).
+    """
+
+    policy: Literal["other", "fifo", "rr"] = "other"
+    priority: int = Field(default=USUAL_PRIORITY, ge=1, le=99)
+    cpus: tuple[Cpu, ...] = ()
+    io_cpus: tuple[Cpu, ...] | None = None
+    lock_memory: bool = False
+    timer_slack_nsec: int | None = Field(default=None, ge=1, le=1_000_000_000)
+    hold_c_states: bool = False
+
+    @field_validator("cpus", "io_cpus")
+    @classmethod
+    def _cpus_are_distinct(cls, cpus: tuple[int, ...] | None) -> tuple[int, ...] | None:
+        _refuse_twins("CPU", [str(cpu) for cpu in cpus or ()])
+        return cpus
+
+    @model_validator(mode="after")
+    def _priority_has_a_use(self) -> Self:
+        if self.policy == "other" and self.priority != USUAL_PRIORITY:
+            raise ValueError(
+                f'priority = {self.priority} has no effect with policy = "other"; '
+                'give policy = "fifo" or "rr", or leave priority out'
+            )
+        return self
+
+    @property
+    def real_time(self) -> bool:
+        """Whether a real-time policy is asked for."""
+        return self.policy != "other"
+
+    @property
+    def cpus_of_io(self) -> tuple[int, ...]:
+        """CPUs of the lane's I/O threads; none means any."""
+        return self.cpus if self.io_cpus is None else self.io_cpus
+
+
 class StepSpec(Spec):
     """A step of stimulus current that the simulated rig adds by itself."""
 
@@ -349,6 +393,7 @@ class RigSpec(Spec):
     record: RecordSpec | None = None
     network: NetworkSpec = Field(default_factory=NetworkSpec)
     limits: LimitsSpec = Field(default_factory=LimitsSpec)
+    host: HostSpec = Field(default_factory=HostSpec)
     cell: tuple[CellSpec, ...] = Field(min_length=1, max_length=MAX_CELLS)
     simulated: SimulatedSpec | None = None
 
