@@ -36,12 +36,14 @@ OHMIC = 0
 STATES = MAX_GATES + WIDTH
 """Length of a cell's gate state: every gate, and padding."""
 
+# No field may be named like an attribute of a numpy scalar ("base", "flags"): where
+# nothing is compiled, that attribute would be read in its place.
 BANK = np.dtype(
     [
         ("v_low_mv", "f8"),  # voltage of row 0
         ("rows_per_mv", "f8"),  # inverse of the grid's step
         ("rows", "i8"),  # at least 2
-        ("base", "i8"),  # index of row 0 in the table
+        ("start", "i8"),  # index of row 0 in the table
         ("stride", "i8"),  # values in a row: 2 * dynamic + instant
         ("dynamic", "i8"),  # dynamic gates, padded to a multiple of 4
         ("instant", "i8"),  # instantaneous gates
@@ -87,7 +89,7 @@ def advance(bank: Any, table: Any, x: Any, v_mv: float, dt_ms: float) -> None:
     row, f = locate(bank, v_mv)
     stride = np.uint64(bank.stride)
     dynamic = np.uint64(bank.dynamic)
-    low = np.uint64(bank.base) + np.uint64(row) * stride
+    low = np.uint64(bank.start) + np.uint64(row) * stride
     high = low + stride
     block = np.uint64(0)
     while block + _BLOCK < dynamic:
@@ -105,7 +107,7 @@ def follow(bank: Any, table: Any, x: Any, v_mv: float) -> None:
     row, f = locate(bank, v_mv)
     stride = np.uint64(bank.stride)
     dynamic = np.uint64(bank.dynamic)
-    low = np.uint64(bank.base) + np.uint64(row) * stride + dynamic + dynamic
+    low = np.uint64(bank.start) + np.uint64(row) * stride + dynamic + dynamic
     for k in range(np.uint64(bank.instant)):
         a = table[low + k]
         x[dynamic + k] = a + f * (table[low + stride + k] - a)
@@ -116,7 +118,7 @@ def settle(bank: Any, table: Any, x: Any, v_mv: float) -> None:
     """[hot] Put every gate at its steady state for ``v_mv``."""
     row, f = locate(bank, v_mv)
     stride = np.uint64(bank.stride)
-    low = np.uint64(bank.base) + np.uint64(row) * stride
+    low = np.uint64(bank.start) + np.uint64(row) * stride
     for k in range(np.uint64(bank.dynamic)):
         a = table[low + k]
         x[k] = a + f * (table[low + stride + k] - a)

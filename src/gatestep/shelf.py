@@ -70,7 +70,7 @@ class Shelf:
         self.prepared[cell] = None
         base = self._find_room(tables.table.size, model.name)
         fill_bank(tables, self._banks[bank], self._table[base : base + tables.table.size])
-        self._banks[bank].base = base
+        self._banks[bank].start = base
         ready = Ready(model, tables, bank, base)
         self.prepared[cell] = ready
         return ready
