@@ -21,6 +21,7 @@ from numba import types
 from .compiling import compiled, inner
 from .errors import LinkError
 from .kernel import records
+from .lanebase import GONE, NOTHING, SENT, STALLED, now_nsec
 from .wire import MAX_MESSAGE
 from .zmtp import (
     BROKEN,
@@ -51,7 +52,8 @@ DIRECT = np.dtype(
         ("serials", "i8"),
         ("turn", "i8"),  # place that the last message came from
         ("checked_nsec", "i8"),
-        ("peer_size", "i8"),  # id of the peer of the last message: its serial
+        ("peer_size", "i8"),  # id of the peer of the last message: its serial in bytes
+        ("peer_serial", "i8"),
         ("gone", "i8"),  # serial of a connection that has just ended, 0 if none
         ("undelivered", "i8"),
         ("allowed", "i8"),  # addresses that may connect; 0: any
@@ -76,14 +78,10 @@ DIRECT = np.dtype(
     align=True,
 )
 
-NOTHING, CLOSED = -1, -2
-SENT, STALLED, GONE = 0, 1, 2
-
 _POLLIN, _POLLOUT, _TROUBLE = 1, 4, 8 | 16 | 32
 _NOSIGNAL_DONTWAIT = 0x4000 | 0x40
 _NONBLOCK_CLOEXEC = 0o2000000 | 0o4000
 _IPPROTO_TCP, _TCP_NODELAY = 6, 1
-_MONOTONIC = 1
 _INET, _INET6 = int(socket.AF_INET), int(socket.AF_INET6)
 
 _pointer = types.uintp
@@ -101,26 +99,23 @@ _accept4: Any = types.ExternalFunction(
 _setsockopt: Any = types.ExternalFunction(
     "setsockopt", types.intc(types.intc, types.intc, types.intc, _pointer, types.uint)
 )
-_clock_gettime: Any = types.ExternalFunction("clock_gettime", types.intc(types.intc, _pointer))
 
 
-def make_direct(listener: socket.socket, wait_ms: int, allowed: tuple[str, ...]) -> Any:
-    """A ``DIRECT`` record array of length 1 for a listening socket.
+def make_direct(wait_ms: int, allowed: tuple[str, ...] = ()) -> Any:
+    """A ``DIRECT`` record array of length 1; give it a listener with :func:`attach_direct`.
+
+    The array must outlive every use: the record holds addresses into itself.
 
     Parameters
     ----------
-    listener : socket.socket
-        Listening, TCP or UNIX; it stays the caller's to close.
     wait_ms : int
-        Longest that :func:`receive` waits.
+        Longest that :func:`receive_direct` waits.
     allowed : tuple of str
         IPv4 or IPv6 addresses that may connect over TCP; empty for any.
     """
     lane = records(DIRECT)
     record = lane[0]
-    listener.setblocking(False)
-    record.listen, record.wait_ms = listener.fileno(), wait_ms
-    record.tcp = listener.family != socket.AF_UNIX
+    record.listen, record.wait_ms = -1, wait_ms
     record.one[0] = 1
     record.allowed = len(allowed)
     for k, address in enumerate(allowed[:MAX_ALLOWED]):
@@ -134,6 +129,13 @@ def make_direct(listener: socket.socket, wait_ms: int, allowed: tuple[str, ...])
     record.incoming_at[:] = places + np.uint64(inside["incoming"])
     record.outgoing_at[:] = places + np.uint64(inside["outgoing"])
     return lane
+
+
+def attach_direct(lane: Any, listener: socket.socket) -> None:
+    """Let the lane take connections from a listening socket, which stays the caller's."""
+    listener.setblocking(False)
+    lane[0].listen = listener.fileno()
+    lane[0].tcp = listener.family != socket.AF_UNIX
 
 
 def _as_ipv6(address: str) -> bytes:
@@ -189,13 +191,6 @@ def _answers(name: str) -> bool:
     """Whether somebody listens at a UNIX socket."""
     with socket.socket(socket.AF_UNIX, socket.SOCK_STREAM) as probe:
         return probe.connect_ex(name) == 0
-
-
-@inner
-def _now(lane: Any) -> int:
-    """[hot] The monotonic clock, in nanoseconds."""
-    _clock_gettime(_MONOTONIC, lane.time_at)
-    return lane.time[0] * 1_000_000_000 + lane.time[1]
 
 
 @inner
@@ -326,6 +321,7 @@ def _take_message(lane: Any, place: int) -> int:
     lane.turn = place
     for k in range(np.uint64(min(peer.size, MAX_MESSAGE))):
         lane.message[k] = peer.message[k]
+    lane.peer_serial = peer.serial
     lane.peer_size = 8
     for k in range(np.uint64(8)):
         lane.peer[k] = np.uint8((np.uint64(peer.serial) >> (np.uint64(8) * k)) & np.uint64(255))
@@ -365,8 +361,8 @@ def _serve_ready(lane: Any, place: int, revents: int, now: int) -> int:
 
 
 @compiled
-def receive(lane: Any) -> int:
-    """[hot] Wait for a message, at most ``wait_ms``: its size, ``NOTHING`` or ``CLOSED``.
+def receive_direct(lane: Any) -> int:
+    """[hot] Wait for a message, at most ``wait_ms``: its size, or ``NOTHING``.
 
     A size over ``MAX_MESSAGE`` means that it was too long or came in too many frames.
     After any return ``gone`` may name a connection that has ended.
@@ -377,7 +373,7 @@ def receive(lane: Any) -> int:
         if size != NOTHING or lane.gone:
             return size
     ready = _wait(lane)
-    now = _now(lane)
+    now = now_nsec(lane)
     if now - lane.checked_nsec > _CHECK_NSEC:
         _check_times(lane, now)
     if ready <= 0:
@@ -397,7 +393,7 @@ def receive(lane: Any) -> int:
 
 
 @compiled
-def reply(lane: Any, size: int) -> int:
+def reply_direct(lane: Any, size: int) -> int:
     """[hot] Answer the last message's peer with ``lane.out``: SENT, STALLED or GONE."""
     place = lane.turn
     peer = lane.peers[np.uint64(place)]
@@ -413,7 +409,7 @@ def reply(lane: Any, size: int) -> int:
 
 
 @compiled
-def close_all(lane: Any) -> None:
+def close_direct(lane: Any) -> None:
     """[hot] End every connection."""
     for k in range(np.uint64(lane.used)):
         if lane.peers[k].phase != FREE:

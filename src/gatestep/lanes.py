@@ -1,198 +1,72 @@
-"""Bytes in and out of the hot loop without the interpreter.
+"""The loop's way in and out, whichever lane it takes.
 
-The libzmq lane calls, from compiled code, the very libzmq that pyzmq has loaded,
-on sockets that pyzmq made: ``Socket.underlying`` is the address libzmq knows them
-by. The functions are declared as external symbols rather than pointers, so numba's
-on-disk cache keeps working.
+Above this module there is one code path. The lane is known by the type of its record,
+so each loop is compiled with the lane it uses and carries nothing of the other:
 
-Above the lane there is one code path: :func:`receive` gives a message and the peer
-it came from, :func:`reply` answers that peer. Neither ever waits for a peer.
+- *libzmq lane* (:mod:`gatestep.zmqlane`): libzmq's own threads do the sockets.
+- *direct lane* (:mod:`gatestep.direct`): the loop speaks ZMTP at the socket itself.
+
+A lane's record has, whatever else: ``message`` and ``out``, ``peer`` with
+``peer_size`` (who sent the last message), ``peer_serial`` (its connection, 0 where the
+lane is not told when connections end), ``gone`` (serial of a connection that has just
+ended), ``undelivered``, and ``time`` with ``time_at``.
 """
 
 from __future__ import annotations
 
-import re
-from pathlib import Path
 from typing import Any
 
-import llvmlite.binding as llvm
-import numpy as np
-import zmq
-from numba import types
+from numba.extending import overload
 
-from .compiling import compiled, inner
-from .errors import LinkError
-from .kernel import records
-from .wire import MAX_MESSAGE
+from .direct import close_direct, receive_direct, reply_direct
+from .zmqlane import receive_zmq, reply_zmq
 
-MAX_PEER = 256
-"""A routing id is at most 255 bytes."""
-
-NOTHING = -1
-"""Size reported when no message has come within the socket's time-out."""
-CLOSED = -2
-"""Size reported when the socket can no longer be used."""
-
-SENT, STALLED, GONE = 0, 1, 2
-"""What became of a reply: sent; dropped because the peer reads nothing; peer gone."""
-
-LANE = np.dtype(
-    [
-        ("socket", "u8"),  # libzmq's address of the loop socket
-        ("message_at", "u8"),  # addresses and contents of the buffers below
-        ("peer_at", "u8"),
-        ("out_at", "u8"),
-        ("more_at", "u8"),
-        ("size_at", "u8"),
-        ("time_at", "u8"),
-        ("peer_size", "i8"),  # of the peer that sent the last message
-        ("enveloped", "i8"),  # whether an empty frame stood before the message (REQ)
-        ("undelivered", "i8"),  # answers whose peer had gone or did not read
-        ("message", "u1", (MAX_MESSAGE,)),
-        ("peer", "u1", (MAX_PEER,)),
-        ("out", "u1", (MAX_MESSAGE,)),
-        ("more", "i4", (2,)),
-        ("size", "u8"),
-        ("time", "i8", (2,)),
-    ],
-    align=True,
-)
-
-_DONT_WAIT = int(zmq.DONTWAIT)
-_SEND_MORE = int(zmq.SNDMORE) | _DONT_WAIT
-_RCVMORE = int(zmq.RCVMORE)
-_EAGAIN = int(zmq.EAGAIN)
-_EHOSTUNREACH = int(zmq.EHOSTUNREACH)
-_EINTR = 4
-_MONOTONIC = 1
-_MAX_MESSAGE = MAX_MESSAGE
-_MAX_PEER = MAX_PEER
-
-_pointer = types.uintp
-_zmq_recv: Any = types.ExternalFunction(
-    "zmq_recv", types.intc(_pointer, _pointer, _pointer, types.intc)
-)
-_zmq_send: Any = types.ExternalFunction(
-    "zmq_send", types.intc(_pointer, _pointer, _pointer, types.intc)
-)
-_zmq_getsockopt: Any = types.ExternalFunction(
-    "zmq_getsockopt", types.intc(_pointer, types.intc, _pointer, _pointer)
-)
-_zmq_errno: Any = types.ExternalFunction("zmq_errno", types.intc())
-_clock_gettime: Any = types.ExternalFunction("clock_gettime", types.intc(types.intc, _pointer))
+_OPTIONS = {"nogil": True, "error_model": "numpy", "_nrt": False}
 
 
-def load_libzmq() -> Path:
-    """Make the libzmq that pyzmq uses known to compiled code; returns its path.
-
-    Raises
-    ------
-    LinkError
-        When the library cannot be found.
-    """
-    for path in _libzmq_candidates():
-        if path.exists():
-            llvm.load_library_permanently(str(path))
-            return path
-    raise LinkError(
-        "libzmq: the library that pyzmq carries was not found; "
-        "reinstall it with: pip install --force-reinstall pyzmq"
-    )
+def _is_direct(lane: Any) -> bool:
+    """Whether a record, or numba's type of one, is the direct lane's."""
+    fields = getattr(lane, "fields", None) or lane.dtype.fields
+    return "listen" in fields
 
 
-def _libzmq_candidates() -> list[Path]:
-    """Where libzmq may be: what this process has mapped, then beside pyzmq."""
-    maps = Path("/proc/self/maps")
-    mapped = re.findall(r"(/\S*libzmq\S*)", maps.read_text()) if maps.exists() else []
-    site = Path(zmq.__file__).resolve().parent
-    beside = [*site.parent.glob("pyzmq.libs/libzmq*"), *site.glob(".dylibs/libzmq*")]
-    extension = sorted(site.glob("backend/cython/_zmq*"))
-    return [Path(p) for p in dict.fromkeys(mapped)] + beside + extension
-
-
-def make_lane(socket: zmq.Socket[bytes]) -> Any:
-    """A ``LANE`` record array of length 1 for a bound ROUTER socket.
-
-    The array must outlive every use: the record holds addresses into itself.
-    """
-    lane = records(LANE)
-    base = int(lane.ctypes.data)
-    offsets = {name: base + field[1] for name, field in LANE.fields.items()}  # type: ignore[union-attr]
-    record = lane[0]
-    record.socket = socket.underlying
-    for name in ("message", "peer", "out", "more", "size", "time"):
-        record[f"{name}_at"] = offsets[name]
-    return lane
-
-
-@compiled
-def now_nsec(lane: Any) -> int:
-    """[hot] The monotonic clock, in nanoseconds."""
-    _clock_gettime(_MONOTONIC, lane.time_at)
-    return lane.time[0] * 1_000_000_000 + lane.time[1]
-
-
-@compiled
-def send(socket: Any, address: Any, size: int) -> bool:
-    """[hot] Send one single-frame message without waiting; False when it cannot be."""
-    return _zmq_send(socket, address, np.uint64(size), _DONT_WAIT) >= 0
-
-
-@compiled
-def take(socket: Any, address: Any, capacity: int) -> int:
-    """[hot] Size of a single-frame message if one is there, else ``NOTHING``."""
-    return np.int64(_zmq_recv(socket, address, np.uint64(capacity), _DONT_WAIT))
-
-
-@inner
-def _more(lane: Any) -> bool:
-    """[hot] Whether the message goes on in a further frame."""
-    lane.size = 8
-    lane.more[0] = 0
-    _zmq_getsockopt(lane.socket, _RCVMORE, lane.more_at, lane.size_at)
-    return lane.more[0] != 0
-
-
-@inner
-def _frame(lane: Any) -> int:
-    """[hot] Read the message's next frame into ``lane.message``; its full size."""
-    return np.int64(_zmq_recv(lane.socket, lane.message_at, np.uint64(_MAX_MESSAGE), _DONT_WAIT))
-
-
-@compiled
 def receive(lane: Any) -> int:
-    """[hot] Wait for a message, at most the socket's receive time-out.
+    """[hot] Wait for a message, a few ms at most.
 
-    Returns the message's size in ``lane.message``; a size over ``MAX_MESSAGE``
-    means that it was too long or came in too many frames. ``NOTHING`` when none came,
-    ``CLOSED`` when the socket is gone. The peer's id is left in ``lane.peer``.
+    Returns the message's size in ``lane.message``; a size over ``MAX_MESSAGE`` means
+    that it was too long or came in too many frames. ``NOTHING`` when none came,
+    ``CLOSED`` when the lane can no longer be used.
     """
-    size = np.int64(_zmq_recv(lane.socket, lane.peer_at, np.uint64(_MAX_PEER), 0))
-    if size < 0:
-        error = _zmq_errno()
-        return NOTHING if error == _EAGAIN or error == _EINTR else CLOSED
-    lane.peer_size = size
-    lane.enveloped = 0
-    size = 0
-    if _more(lane):
-        size = _frame(lane)
-        if size == 0 and _more(lane):
-            lane.enveloped = 1
-            size = _frame(lane)
-    while _more(lane):
-        _frame(lane)
-        size = _MAX_MESSAGE + 1
-    return size
+    return int(receive_direct(lane) if _is_direct(lane) else receive_zmq(lane))
 
 
-@compiled
 def reply(lane: Any, size: int) -> int:
     """[hot] Answer the last message's peer with ``lane.out``: SENT, STALLED or GONE."""
-    peer_size = np.uint64(lane.peer_size)
-    if _zmq_send(lane.socket, lane.peer_at, peer_size, _SEND_MORE) < 0:
-        lane.undelivered += 1
-        return GONE if _zmq_errno() == _EHOSTUNREACH else STALLED
-    if lane.enveloped:
-        _zmq_send(lane.socket, lane.peer_at, np.uint64(0), _SEND_MORE)
-    _zmq_send(lane.socket, lane.out_at, np.uint64(size), _DONT_WAIT)
-    return SENT
+    return int(reply_direct(lane, size) if _is_direct(lane) else reply_zmq(lane, size))
+
+
+def close_lane(lane: Any) -> None:
+    """[hot] End what connections the loop itself has."""
+    if _is_direct(lane):
+        close_direct(lane)
+
+
+@overload(receive, strict=False, jit_options=_OPTIONS)
+def _receive(lane: Any) -> Any:
+    if _is_direct(lane):
+        return lambda lane: receive_direct(lane)
+    return lambda lane: receive_zmq(lane)
+
+
+@overload(reply, strict=False, jit_options=_OPTIONS)
+def _reply(lane: Any, size: Any) -> Any:
+    if _is_direct(lane):
+        return lambda lane, size: reply_direct(lane, size)
+    return lambda lane, size: reply_zmq(lane, size)
+
+
+@overload(close_lane, strict=False, jit_options=_OPTIONS)
+def _close_lane(lane: Any) -> Any:
+    if _is_direct(lane):
+        return lambda lane: close_direct(lane)
+    return lambda lane: None

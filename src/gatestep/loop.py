@@ -19,7 +19,8 @@ import numpy as np
 
 from .compiling import compiled, inner
 from .kernel import BANK, records, settle
-from .lanes import CLOSED, GONE, MAX_PEER, NOTHING, now_nsec, receive, reply, send, take
+from .lanebase import CLOSED, GONE, MAX_PEER, NOTHING, now_nsec
+from .lanes import close_lane, receive, reply
 from .specs import MAX_CELLS, RigSpec
 from .states import Event, Fault, State, next_state
 from .tick import (
@@ -35,6 +36,7 @@ from .tick import (
     trip,
 )
 from .wire import ANSWER, NIL, SAMPLE, write_answer, write_malformed
+from .zmqlane import send, take
 
 
 class Order(IntEnum):
@@ -112,6 +114,7 @@ DESK = np.dtype(
         ("block_at", "u8"),
         ("entries", "i8"),  # waiting in the block
         ("flushed_nsec", "i8"),
+        ("holder_serial", "i8"),
         ("holder_size", "i8"),
         ("holder", "u1", (MAX_PEER,)),
     ],
@@ -165,8 +168,8 @@ def make_memory(rig: RigSpec, lane: Any, orders: int, log: int, table: Any) -> L
     ----------
     rig : RigSpec
         Limits, interval and budget are taken from it.
-    lane : ndarray of LANE
-        From :func:`gatestep.lanes.make_lane`.
+    lane : ndarray of ZMQ_LANE or DIRECT
+        From :func:`gatestep.zmqlane.make_zmq_lane` or :func:`gatestep.direct.make_direct`.
     orders, log : int
         ``Socket.underlying`` of the loop's ends of the inproc sockets.
     table : ndarray of float64
@@ -278,6 +281,7 @@ def _take_hold(m: Any, now: int) -> None:
     desk, lane, loop = m.desk[0], m.lane[0], m.loop[0]
     loop.held = 1
     loop.session += 1
+    desk.holder_serial = lane.peer_serial
     desk.holder_size = lane.peer_size
     for k in range(np.uint64(lane.peer_size)):
         desk.holder[k] = lane.peer[k]
@@ -408,6 +412,13 @@ def _answer_holder(m: Any, size: int, received: int) -> None:
 
 
 @inner
+def _is_lost(desk: Any, lane: Any, loop: Any, now: int) -> bool:
+    """[hot] Whether the rig's connection has ended, or it has been silent for too long."""
+    ended = lane.gone != 0 and lane.gone == desk.holder_serial
+    return ended or now - loop.heard_nsec > loop.silence_nsec
+
+
+@inner
 def _finished(loop: Any, now: int) -> bool:
     """[hot] Whether a loop ordered to stop has told the rig 0 pA, or has no rig to tell."""
     if not loop.stopping:
@@ -429,7 +440,7 @@ def run_loop(m: Any) -> int:
         now = now_nsec(lane)
         if size == CLOSED:
             return 1
-        if loop.held and now - loop.heard_nsec > loop.silence_nsec:
+        if loop.held and _is_lost(desk, lane, loop, now):
             _let_go(m, now)
         if size != NOTHING:
             if loop.held and not _is_holder(desk, lane):
@@ -439,5 +450,6 @@ def run_loop(m: Any) -> int:
         _take_orders(m)
         if desk.entries and now - desk.flushed_nsec > _FLUSH_NSEC:
             _flush(m, now)
+    close_lane(lane)
     _flush(m, now)
     return 0

@@ -9,6 +9,8 @@ import zmq
 from .config import LoadedRig, is_local
 from .errors import FileError
 
+_LOOPBACK = ("127.0.0.1", "::1")
+
 
 class Gatekeeper:
     """Guards a server's sockets as the rig file's ``[network]`` says.
@@ -32,7 +34,7 @@ class Gatekeeper:
         self._authenticator = ThreadAuthenticator(context)
         self._authenticator.start()
         if self._network.peers:
-            self._authenticator.allow("127.0.0.1", "::1", *self._network.peers)
+            self._authenticator.allow(*_LOOPBACK, *self._network.peers)
         else:
             self._public, self._secret = self._load_keys()
             clients = self._path(self._network.curve_clients)
@@ -47,6 +49,12 @@ class Gatekeeper:
             socket.curve_server = True
         elif not is_local(endpoint):
             socket.setsockopt_string(zmq.ZAP_DOMAIN, "gatestep")
+
+    def loop_peers(self, endpoint: str) -> tuple[str, ...]:
+        """Addresses that may connect to the loop socket in the direct lane; empty for any."""
+        if is_local(endpoint) or not self._network.peers:
+            return ()
+        return (*_LOOPBACK, *self._network.peers)
 
     def close(self) -> None:
         """Stop the authenticator."""

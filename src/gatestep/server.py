@@ -24,19 +24,20 @@ from numba import typeof
 from . import __version__
 from .config import LoadedRig, load_rig_models
 from .errors import GatestepError, LinkError
+from .hosttune import HostTuning
 from .kernel import records
-from .lanes import load_libzmq, make_lane
 from .loop import ORDER, Order, make_memory, run_loop
+from .loopport import LoopPort, bound_endpoint, bound_socket, choose_lane
 from .network import Gatekeeper
 from .shelf import Shelf, make_room
+from .states import State
 from .tables import build_tables
 from .verbs import Answer, Built, Confirmed, Verbs, Waiting, refusal
 from .watch import LoopEvent, Watch
+from .zmqlane import load_libzmq
 
 Say = Callable[[str], None]
 
-_LOOP_WAIT_MS = 5
-_MAX_INCOMING = 1 << 20
 _LOG_BLOCKS = 2000
 _ORDER_WAIT_S = 3.0
 _QUIET_S = 1.0
@@ -72,6 +73,9 @@ class Server:
         self.rig, self._say = rig, say
         self.watch = Watch([c.name for c in rig.spec.cell])
         self._context = zmq.Context()
+        self._host = HostTuning(rig.spec.host, say)
+        if choose_lane(rig) == "libzmq":
+            self._host.set_up_io(self._context)
         self._builder = ThreadPoolExecutor(1, thread_name_prefix="tables")
         self._orders_sent = 0
         self._waiting: list[tuple[Waiting, _Caller]] = []
@@ -84,12 +88,19 @@ class Server:
         """Prepare everything, compile, bind, and start the hot thread; idle."""
         models = load_rig_models(self.rig)
         load_libzmq()
-        self._bind()
+        self._port = LoopPort(self.rig, self._context, self._gatekeeper)
+        self._orders_out, self._orders_in = self._pipe("orders")
+        self._log_out, self._log_in = self._pipe("log")
         table = make_room()
-        self._lane = make_lane(self._loop_socket)
         self._memory = make_memory(
-            self.rig.spec, self._lane, self._orders_in.underlying, self._log_out.underlying, table
+            self.rig.spec,
+            self._port.lane,
+            self._orders_in.underlying,
+            self._log_out.underlying,
+            table,
         )
+        self._compile()
+        self._bind()
         self._verbs = Verbs(
             self.rig,
             Shelf(self._memory.banks, table),
@@ -100,9 +111,9 @@ class Server:
         )
         for k, model in enumerate(models):
             self._verbs.put_in_force(k, model, build_tables(model.spec))
-        self._compile()
         self._thread = threading.Thread(target=self._run, name="hot loop", daemon=True)
         self._thread.start()
+        self._host.confirm()
 
     def attend(self, until: Callable[[], bool] = lambda: False) -> int:
         """Carry requests and log until the loop ends; returns its result, 0 when orderly.
@@ -122,6 +133,7 @@ class Server:
                 self._take_requests()
             self._answer_built()
             self._publish_status()
+            self._host.follow(self.watch.state == State.ARMED)
         self._read_log()
         return self._result[0] if self._result else 1
 
@@ -140,38 +152,34 @@ class Server:
             self.order_stop()
             self._thread.join(2 * _QUIET_S)
         self._builder.shutdown(wait=False, cancel_futures=True)
+        if hasattr(self, "_port"):
+            self._port.close()
         self._gatekeeper.close()
+        self._host.release()
         self._context.destroy(linger=200)
 
     def endpoints(self) -> dict[str, str]:
         """The endpoints as bound."""
-        sockets = {"loop": self._loop_socket, "control": self._control, "feed": self._feed}
-        return {k: _bound(s) for k, s in sockets.items()}
+        return {
+            "loop": self._port.endpoint,
+            "control": bound_endpoint(self._control),
+            "feed": bound_endpoint(self._feed),
+        }
 
     def _bind(self) -> None:
-        spec = self.rig.spec
-        self._loop_socket = self._listen(zmq.ROUTER, spec.loop.endpoint, "loop")
-        self._control = self._listen(zmq.ROUTER, spec.control.endpoint, "control")
-        self._feed = self._listen(zmq.PUB, spec.feed.endpoint, "feed")
-        self._orders_out, self._orders_in = self._pipe("orders")
-        self._log_out, self._log_in = self._pipe("log")
-
-    def _listen(self, kind: int, endpoint: str, name: str) -> zmq.Socket[bytes]:
-        socket: zmq.Socket[bytes] = self._context.socket(kind)
-        socket.setsockopt(zmq.LINGER, 200)
-        socket.setsockopt(zmq.MAXMSGSIZE, _MAX_INCOMING)
-        if name == "loop":
-            socket.setsockopt(zmq.ROUTER_MANDATORY, 1)
-            socket.setsockopt(zmq.RCVTIMEO, _LOOP_WAIT_MS)
-        self._gatekeeper.guard(socket, endpoint)
+        spec, keeper = self.rig.spec, self._gatekeeper
+        name = "loop"
         try:
-            socket.bind(endpoint)
-        except zmq.ZMQError as fault:
+            self._port.bind()
+            name = "control"
+            endpoint = spec.control.endpoint
+            self._control = bound_socket(self._context, zmq.ROUTER, endpoint, keeper)
+            name = "feed"
+            self._feed = bound_socket(self._context, zmq.PUB, spec.feed.endpoint, keeper)
+        except LinkError as fault:
             raise LinkError(
-                f"{self.rig.path}: {name}.endpoint = {endpoint}: {fault}; "
-                "is another server running there?"
+                f"{self.rig.path}: {name}.endpoint = {fault}; is another server running there?"
             ) from fault
-        return socket
 
     def _pipe(self, name: str) -> tuple[zmq.Socket[bytes], zmq.Socket[bytes]]:
         """The two ends, sending and receiving, of a one-way line between threads."""
@@ -196,12 +204,13 @@ class Server:
             "version": __version__,
             "pid": os.getpid(),
             "rig_file": str(self.rig.path),
-            "lane": "libzmq",
+            "lane": self._port.kind,
             "anticipate": False,
             "recording": False,
             "interval_us": spec.loop.interval_us,
             "budget_us": spec.loop.budget,
             "endpoints": self.endpoints(),
+            "host": self._host.report,
         }
 
     def _compile(self) -> None:
@@ -218,6 +227,7 @@ class Server:
             notice.cancel()
 
     def _run(self) -> None:
+        self._host.tune_thread()
         self._result.append(int(run_loop(self._memory)))
 
     def _send_order(self, kind: Order, cell: int, index: int, value: float) -> int:
@@ -303,7 +313,3 @@ class Server:
         if time.monotonic() >= self._status_due:
             self._status_due = time.monotonic() + _STATUS_S
             self._publish("status", self._verbs.status())
-
-
-def _bound(socket: zmq.Socket[bytes]) -> str:
-    return bytes(socket.getsockopt(zmq.LAST_ENDPOINT)).decode().rstrip("\0")

@@ -20,10 +20,11 @@ import numpy as np
 
 from .compiling import compiled, inner
 from .kernel import records
-from .lanes import now_nsec, send
+from .lanebase import now_nsec
 from .simcell import SUBSTEP_US, SimCells, carry, measured, output
 from .specs import MAX_CELLS
 from .wire import ANSWER, MAX_MESSAGE, NIL, SAMPLE, read_answer, write_sample
+from .zmqlane import send
 
 SIMLOOP = np.dtype(
     [

@@ -16,10 +16,11 @@ import zmq
 from numba import types
 
 from .compiling import compiled, inner
-from .lanes import now_nsec, take
+from .lanebase import now_nsec
 from .simcell import DROP_STREAM, JITTER_STREAM, uniform
 from .simloop import decode, enqueue, note, play, take_and_send
 from .wire import MAX_MESSAGE, NIL
+from .zmqlane import take
 
 
 class Status(IntEnum):

@@ -19,7 +19,7 @@ import zmq
 from pydantic import ValidationError
 
 from .errors import FileError, LinkError
-from .lanes import load_libzmq
+from .zmqlane import load_libzmq
 from .simcell import make_cells
 from .simloop import Columns, fall_silent, make_columns, make_loop, send_sample
 from .simpace import Status, run_lockstep, run_real
