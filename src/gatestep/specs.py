@@ -194,6 +194,7 @@ class LoopSpec(Spec):
     budget_us: float | None = Field(default=None, gt=0, le=1e6)
     apply: Literal["next-tick", "on-arrival"] = "next-tick"
     anticipate: Literal["auto"] | bool = "auto"
+    lane: Literal["auto", "direct", "libzmq"] = "auto"
 
     @property
     def budget(self) -> float:
@@ -407,6 +408,8 @@ class RigSpec(Spec):
             ):
                 raise ValueError(f"endpoint {endpoint!r} is not tcp://ADDRESS:PORT or ipc://PATH")
         _refuse_twins("endpoint", endpoints)
+        if self.loop.lane == "direct" and self.network.curve_secret:
+            raise ValueError("loop.lane = 'direct' cannot do CURVE; use 'auto' or 'libzmq'")
         simulated = self.simulated
         if simulated and simulated.cell and len(simulated.cell) != len(self.cell):
             raise ValueError(
