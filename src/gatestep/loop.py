@@ -135,9 +135,12 @@ _MARK, _SWAP = int(Order.MARK), int(Order.SWAP)
 _SET_GMAX, _SET_REVERSAL = int(Order.SET_GMAX), int(Order.SET_REVERSAL)
 _DONE, _WAS_TRIPPED = int(Outcome.DONE), int(Outcome.TRIPPED)
 _WAS_WRONG_TICK = int(Outcome.WRONG_TICK)
-_SAMPLE, _ORDER, _TRIP = int(Entry.SAMPLE), int(Entry.ORDER), int(Entry.TRIP)
-_HOLD, _RELEASE, _CLOCK_JUMP = int(Entry.HOLD), int(Entry.RELEASE), int(Entry.CLOCK_JUMP)
-_NO_FAULT, _SILENCE = int(Fault.NONE), int(Fault.SILENCE)
+# Typed, so that compiled callers share one body: a plain literal makes a type of its own.
+_SAMPLE, _ORDER, _TRIP = (np.int64(e) for e in (Entry.SAMPLE, Entry.ORDER, Entry.TRIP))
+_HOLD, _RELEASE, _CLOCK_JUMP = (
+    np.int64(e) for e in (Entry.HOLD, Entry.RELEASE, Entry.CLOCK_JUMP)
+)
+_NO_FAULT, _SILENCE = np.int64(Fault.NONE), np.int64(Fault.SILENCE)
 
 
 class LoopMemory(NamedTuple):
@@ -406,7 +409,7 @@ def _answer_holder(m: Any, size: int, received: int) -> None:
     if loop.trips != trips:
         _log_event(m, _TRIP, loop.fault, loop.fault_cell, received)
     if loop.clock_jumps != jumps:
-        _log_event(m, _CLOCK_JUMP, 0, NIL, received)
+        _log_event(m, _CLOCK_JUMP, np.int64(0), NIL, received)
     if sent == GONE:
         _let_go(m, received)
 

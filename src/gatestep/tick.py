@@ -91,11 +91,12 @@ ANSWERED, WAS_REPEAT, WAS_MALFORMED = 0, 1, 2
 
 _LAST = np.int64(HISTORY - 1)
 _IDLE, _ARMED, _TRIPPED = int(State.IDLE), int(State.ARMED), int(State.TRIPPED)
-_FAULT = int(Event.FAULT)
-_NONE = int(Fault.NONE)
-_LATE_RUN = int(Fault.RUN_OF_LATE_ANSWERS)
-_WRONG_TICK = int(Fault.WRONG_TICK)
-_BAD_CURRENT = int(Fault.NON_FINITE_CURRENT)
+_FAULT = np.int64(Event.FAULT)
+# Typed, so that compiled callers share one body: a plain literal makes a type of its own.
+_NONE = np.int64(Fault.NONE)
+_LATE_RUN = np.int64(Fault.RUN_OF_LATE_ANSWERS)
+_WRONG_TICK = np.int64(Fault.WRONG_TICK)
+_BAD_CURRENT = np.int64(Fault.NON_FINITE_CURRENT)
 
 
 @compiled

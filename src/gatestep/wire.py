@@ -37,7 +37,7 @@ FLAG_NAMES = {
 MAX_MESSAGE = 512
 """Longest sample or answer in bytes; eight cells need 108."""
 
-NIL = -1
+NIL = np.int64(-1)
 """Stands for nil in the ``in_force`` and ``lag_us`` of a decoded sample."""
 
 SAMPLE = np.dtype(
@@ -60,7 +60,11 @@ ANSWER = np.dtype(
     align=True,
 )
 
-_BAD = -1
+_BAD = np.int64(-1)
+# Typed, so that compiled callers share one body: a plain literal makes a type of its own.
+_UINT8, _UINT16, _UINT32, _UINT64 = (np.int64(kind) for kind in (0xCC, 0xCD, 0xCE, 0xCF))
+_FLOAT64 = np.int64(0xCB)
+_1, _2, _4, _8 = (np.int64(count) for count in (1, 2, 4, 8))
 
 
 @inner
@@ -139,9 +143,9 @@ def _read_array(message: Any, size: int) -> Any:
     if 0x90 <= kind <= 0x9F:
         return kind - 0x90, 1
     if kind == 0xDC and size >= 3:
-        return np.int64(_big_endian(message, 1, 2)), 3
+        return np.int64(_big_endian(message, _1, _2)), 3
     if kind == 0xDD and size >= 5:
-        return np.int64(_big_endian(message, 1, 4)), 5
+        return np.int64(_big_endian(message, _1, _4)), 5
     return np.int64(0), _BAD
 
 
@@ -237,12 +241,12 @@ def _write_whole(out: Any, at: int, value: int) -> int:
         out[np.uint64(at)] = np.uint8(value)
         return at + 1
     if value < 0x100:
-        return _write_bytes(out, at, 0xCC, bits, 1)
+        return _write_bytes(out, at, _UINT8, bits, _1)
     if value < 0x10000:
-        return _write_bytes(out, at, 0xCD, bits, 2)
+        return _write_bytes(out, at, _UINT16, bits, _2)
     if value < 0x100000000:
-        return _write_bytes(out, at, 0xCE, bits, 4)
-    return _write_bytes(out, at, 0xCF, bits, 8)
+        return _write_bytes(out, at, _UINT32, bits, _4)
+    return _write_bytes(out, at, _UINT64, bits, _8)
 
 
 @inner
@@ -258,11 +262,11 @@ def _write_optional(out: Any, at: int, value: int) -> int:
 def write_answer(out: Any, answer: Any, cells: int) -> int:
     """[hot] Encode an answer; returns its size in bytes."""
     out[0] = np.uint8(0x93 + cells)
-    at = _write_optional(out, 1, answer.seq)
+    at = _write_optional(out, _1, answer.seq)
     at = _write_whole(out, at, answer.flags)
     at = _write_whole(out, at, answer.service_nsec)
     for k in range(np.uint64(cells)):
-        at = _write_bytes(out, at, 0xCB, u64_from_f64(answer.i_pa[k]), 8)
+        at = _write_bytes(out, at, _FLOAT64, u64_from_f64(answer.i_pa[k]), _8)
     return at
 
 
@@ -271,20 +275,20 @@ def write_malformed(out: Any) -> int:
     """[hot] Encode the answer to a malformed message, ``[nil, 128, 0]``."""
     out[0] = np.uint8(0x93)
     out[1] = np.uint8(0xC0)
-    return _write_whole(out, _write_whole(out, 2, MALFORMED), 0)
+    return _write_whole(out, _write_whole(out, _2, np.int64(MALFORMED)), np.int64(0))
 
 
 @compiled
 def write_sample(out: Any, sample: Any, cells: int) -> int:
     """[hot] Encode a sample, times in whole microseconds; returns its size in bytes."""
     out[0] = np.uint8(0x94 + cells)
-    at = _write_whole(out, 1, sample.seq)
+    at = _write_whole(out, _1, sample.seq)
     at = _write_whole(out, at, np.int64(sample.t_us + 0.5))
     at = _write_optional(out, at, sample.in_force)
     lag = np.int64(sample.lag_us + 0.5) if sample.lag_us >= 0.0 else np.int64(NIL)
     at = _write_optional(out, at, lag)
     for k in range(np.uint64(cells)):
-        at = _write_bytes(out, at, 0xCB, u64_from_f64(sample.v_mv[k]), 8)
+        at = _write_bytes(out, at, _FLOAT64, u64_from_f64(sample.v_mv[k]), _8)
     return at
 
 
