@@ -17,6 +17,8 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
     rich_markup_mode=None,
 )
+bench_app = typer.Typer(help="Measure on this machine.", no_args_is_help=True)
+app.add_typer(bench_app, name="bench")
 
 Json = Annotated[bool, typer.Option("--json", help="Print JSON for programs.")]
 RigFile = Annotated[Path, typer.Argument(metavar="RIG.toml", help="The rig file.")]
@@ -229,6 +231,21 @@ def simrig(
         wait_s=wait,
     )
     return 0
+
+
+@bench_app.command("step")
+def bench_step(
+    rounds: Annotated[int, typer.Option("--rounds", help="Alternating rounds.")] = 60,
+    ticks: Annotated[int, typer.Option("--ticks", help="Ticks in each round.")] = 20_000,
+    figure: Annotated[
+        Path | None, typer.Option("--figure", help="Draw to this PNG or SVG file.")
+    ] = None,
+    json_output: Json = False,
+) -> int:
+    """Measure the model's step, beside the same squid axon written in C."""
+    from .commands.bench import bench_step as body
+
+    return body(rounds, ticks, figure, json_output)
 
 
 @app.command()
