@@ -68,6 +68,7 @@ class LoopPort:
         socket = bound_socket(self._context, zmq.ROUTER, self.endpoint, self._gatekeeper)
         socket.setsockopt(zmq.ROUTER_MANDATORY, 1)
         socket.setsockopt(zmq.RCVTIMEO, WAIT_MS)
+        self._socket = socket  # a socket that nobody holds is closed
         self.lane[0].socket = socket.underlying
         self.endpoint = bound_endpoint(socket)
 
