@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import ipaddress
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -61,8 +62,11 @@ def is_local(endpoint: str) -> bool:
     """Whether only this machine can reach an endpoint."""
     if endpoint.startswith("ipc://"):
         return True
-    host = endpoint.removeprefix("tcp://").rpartition(":")[0]
-    return host in {"localhost", "[::1]"} or host.startswith("127.")
+    host = endpoint.removeprefix("tcp://").rpartition(":")[0].strip("[]")
+    try:
+        return host == "localhost" or ipaddress.ip_address(host).is_loopback
+    except ValueError:
+        return False  # a name, or an interface: whoever it resolves to
 
 
 def _check_exposure(spec: RigSpec, path: Path) -> None:

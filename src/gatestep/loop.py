@@ -137,10 +137,9 @@ _DONE, _WAS_TRIPPED = int(Outcome.DONE), int(Outcome.TRIPPED)
 _WAS_WRONG_TICK = int(Outcome.WRONG_TICK)
 # Typed, so that compiled callers share one body: a plain literal makes a type of its own.
 _SAMPLE, _ORDER, _TRIP = (np.int64(e) for e in (Entry.SAMPLE, Entry.ORDER, Entry.TRIP))
-_HOLD, _RELEASE, _CLOCK_JUMP = (
-    np.int64(e) for e in (Entry.HOLD, Entry.RELEASE, Entry.CLOCK_JUMP)
-)
+_HOLD, _RELEASE, _CLOCK_JUMP = (np.int64(e) for e in (Entry.HOLD, Entry.RELEASE, Entry.CLOCK_JUMP))
 _NO_FAULT, _SILENCE = np.int64(Fault.NONE), np.int64(Fault.SILENCE)
+_DISCONNECTED = np.int64(Fault.DISCONNECTED)
 
 
 class LoopMemory(NamedTuple):
@@ -292,11 +291,11 @@ def _take_hold(m: Any, now: int) -> None:
 
 
 @inner
-def _let_go(m: Any, now: int) -> None:
+def _let_go(m: Any, fault: int, now: int) -> None:
     """[hot] The rig is lost: trip if armed, and let another take hold."""
     loop = m.loop[0]
     before = loop.trips
-    trip(loop, _SILENCE, NIL)
+    trip(loop, fault, NIL)
     if loop.trips != before:
         _log_event(m, _TRIP, loop.fault, loop.fault_cell, now)
     loop.held = 0
@@ -411,14 +410,15 @@ def _answer_holder(m: Any, size: int, received: int) -> None:
     if loop.clock_jumps != jumps:
         _log_event(m, _CLOCK_JUMP, np.int64(0), NIL, received)
     if sent == GONE:
-        _let_go(m, received)
+        _let_go(m, _DISCONNECTED, received)
 
 
 @inner
-def _is_lost(desk: Any, lane: Any, loop: Any, now: int) -> bool:
-    """[hot] Whether the rig's connection has ended, or it has been silent for too long."""
-    ended = lane.gone != 0 and lane.gone == desk.holder_serial
-    return ended or now - loop.heard_nsec > loop.silence_nsec
+def _lost(desk: Any, lane: Any, loop: Any, now: int) -> int:
+    """[hot] How the rig has been lost: its connection ended, or silent for too long."""
+    if lane.gone != 0 and lane.gone == desk.holder_serial:
+        return _DISCONNECTED
+    return _SILENCE if now - loop.heard_nsec > loop.silence_nsec else _NO_FAULT
 
 
 @inner
@@ -443,8 +443,10 @@ def run_loop(m: Any) -> int:
         now = now_nsec(lane)
         if size == CLOSED:
             return 1
-        if loop.held and _is_lost(desk, lane, loop, now):
-            _let_go(m, now)
+        if loop.held:
+            lost = _lost(desk, lane, loop, now)
+            if lost != _NO_FAULT:
+                _let_go(m, lost, now)
         if size != NOTHING:
             if loop.held and not _is_holder(desk, lane):
                 _turn_away(m, size)

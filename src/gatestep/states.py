@@ -41,6 +41,7 @@ class Fault(IntEnum):
     RUN_OF_LATE_ANSWERS = 4
     WRONG_TICK = 5
     NON_FINITE_CURRENT = 6
+    DISCONNECTED = 7
 
 
 FAULT_TEXTS = {
@@ -50,6 +51,7 @@ FAULT_TEXTS = {
     Fault.VOLTAGE_OUT_OF_WINDOW: "a measured voltage left the cell's limits.window_mv",
     Fault.RUN_OF_LATE_ANSWERS: "answers reached the output late for limits.late_run ticks on end",
     Fault.WRONG_TICK: "the rig's clock shows a tick over 1 % away from loop.interval_us",
+    Fault.DISCONNECTED: "the rig's connection ended",
     Fault.NON_FINITE_CURRENT: "the model gave a current that is not a finite number",
 }
 

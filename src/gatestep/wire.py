@@ -278,15 +278,24 @@ def write_malformed(out: Any) -> int:
     return _write_whole(out, _write_whole(out, _2, np.int64(MALFORMED)), np.int64(0))
 
 
+@inner
+def _write_time(out: Any, at: int, value_us: float) -> int:
+    """[hot] A time from 0: in its shortest form where whole, nil where NIL, else a float."""
+    if value_us < 0.0:
+        return _write_optional(out, at, NIL)
+    if value_us < 2.0**53 and value_us == np.floor(value_us):
+        return _write_whole(out, at, np.int64(value_us))
+    return _write_bytes(out, at, _FLOAT64, u64_from_f64(value_us), _8)
+
+
 @compiled
 def write_sample(out: Any, sample: Any, cells: int) -> int:
-    """[hot] Encode a sample, times in whole microseconds; returns its size in bytes."""
+    """[hot] Encode a sample; returns its size in bytes."""
     out[0] = np.uint8(0x94 + cells)
     at = _write_whole(out, _1, sample.seq)
-    at = _write_whole(out, at, np.int64(sample.t_us + 0.5))
+    at = _write_time(out, at, sample.t_us)
     at = _write_optional(out, at, sample.in_force)
-    lag = np.int64(sample.lag_us + 0.5) if sample.lag_us >= 0.0 else np.int64(NIL)
-    at = _write_optional(out, at, lag)
+    at = _write_time(out, at, sample.lag_us)
     for k in range(np.uint64(cells)):
         at = _write_bytes(out, at, _FLOAT64, u64_from_f64(sample.v_mv[k]), _8)
     return at
