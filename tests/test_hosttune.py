@@ -35,7 +35,13 @@ def thread_stat(thread: int) -> dict:
     folder = Path("/proc/self/task") / str(thread)
     fields = (folder / "stat").read_text().rpartition(")")[2].split()
     allowed = re.search(r"^Cpus_allowed_list:\s*(\S+)", (folder / "status").read_text(), re.M)[1]
-    return {"priority": int(fields[37]), "policy": int(fields[38]), "cpus": allowed}
+    settings = {"priority": int(fields[37]), "policy": int(fields[38]), "cpus": allowed}
+    return {"id": thread, **settings}
+
+
+def own_stat() -> dict:
+    """The settings of the thread that asks."""
+    return thread_stat(threading.get_native_id())
 
 
 def tuned(host: HostSpec, look=lambda: None) -> tuple[HostTuning, list[str], object]:
@@ -130,8 +136,7 @@ def test_host_settings_are_read(tmp_path):
 def test_the_policy_reported_is_the_policy_in_force(policy, number):
     """Allowed or not, "applied" means that the thread has policy and priority (sched(7))."""
     host = HostSpec(policy=policy, priority=7)
-    look = lambda: thread_stat(threading.get_native_id())  # noqa: E731 (one expression)
-    tuning, said, seen = tuned(host, look)
+    tuning, said, seen = tuned(host, own_stat)
     found = entry(tuning, "policy")
     assert found["applied"] == ((seen["policy"], seen["priority"]) == (number, 7))
     assert (f"{policy} 7" in found["detail"]) == found["applied"]
@@ -140,24 +145,26 @@ def test_the_policy_reported_is_the_policy_in_force(policy, number):
 
 def test_the_cpus_reported_are_those_of_the_thread():
     """A thread asked to stay on one CPU does, and a CPU that does not exist is not reported."""
-    look = lambda: thread_stat(threading.get_native_id())["cpus"]  # noqa: E731
-    tuning, said, seen = tuned(HostSpec(cpus=(HERE[-1],)), look)
-    assert seen == str(HERE[-1])
+    tuning, said, seen = tuned(HostSpec(cpus=(HERE[-1],)), own_stat)
+    assert seen["cpus"] == str(HERE[-1])
     assert entry(tuning, "cpus")["applied"]
     assert said == []
-    tuning, said, seen = tuned(HostSpec(cpus=(ABSENT_CPU,)), look)
+    tuning, said, seen = tuned(HostSpec(cpus=(ABSENT_CPU,)), own_stat)
     found = entry(tuning, "cpus")
     assert not found["applied"]
-    assert f"CPUs {seen}" in found["detail"]
+    assert f"CPUs {seen['cpus']}" in found["detail"]
     assert "[host] cpus = [...]" in found["remedy"]
     assert said == [f"[host] cpus not in force: {found['detail']}. {found['remedy']}"]
-    tuning, _, _ = tuned(HostSpec(cpus=(HERE[0], ABSENT_CPU)), look)
+    tuning, _, _ = tuned(HostSpec(cpus=(HERE[0], ABSENT_CPU)), own_stat)
     assert not entry(tuning, "cpus")["applied"], "half of what was asked is not what was asked"
 
 
 def test_the_timer_slack_reported_is_the_threads():
     """The slack is set in the thread itself (procfs: timerslack_ns) and in no other."""
-    slack = lambda thread: int(Path(f"/proc/{thread}/timerslack_ns").read_text())  # noqa: E731
+
+    def slack(thread: int) -> int:
+        return int(Path(f"/proc/{thread}/timerslack_ns").read_text())
+
     before = slack(os.getpid())
     tuning, _, seen = tuned(
         HostSpec(timer_slack_nsec=12_345), lambda: slack(threading.get_native_id())
@@ -190,11 +197,10 @@ def test_memory_is_locked_without_being_touched_and_released_again():
 
 def test_without_settings_nothing_changes():
     """The default asks for nothing, and says how the hot thread runs."""
-    thread = threading.get_native_id
-    tuning, said, seen = tuned(HostSpec(), lambda: (thread(), thread_stat(thread())))
+    tuning, said, seen = tuned(HostSpec(), own_stat)
     assert [e["setting"] for e in tuning.report] == ["policy"]
-    assert entry(tuning, "policy")["applied"] == (seen[1]["policy"] == 0)
-    assert f"hot thread {seen[0]}: other" in entry(tuning, "policy")["detail"]
+    assert entry(tuning, "policy")["applied"] == (seen["policy"] == 0)
+    assert f"hot thread {seen['id']}: other" in entry(tuning, "policy")["detail"]
     assert said == []
     context = zmq.Context()
     tuning.set_up_io(context)
@@ -349,7 +355,7 @@ def set_up(host: HostSpec) -> tuple[HostTuning, list[dict], list[str]]:
     tuning, context = HostTuning(host, said.append), zmq.Context(2)
     before = threads_named()
     tuning.set_up_io(context)
-    threads = [thread_stat(t) | {"id": t} for t in sorted(threads_named("ZMQbg/IO") - before)]
+    threads = [thread_stat(t) for t in sorted(threads_named("ZMQbg/IO") - before)]
     server, client = context.socket(zmq.REP), context.socket(zmq.REQ)
     client.connect(f"tcp://127.0.0.1:{server.bind_to_random_port('tcp://127.0.0.1')}")
     client.send(b"x")
