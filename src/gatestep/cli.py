@@ -233,6 +233,14 @@ def simrig(
     return 0
 
 
+@app.command()
+def check(rig: RigFile, json_output: Json = False) -> int:
+    """Check files, host and the loop's bound before anything is armed."""
+    from .commands.check import check as body
+
+    return body(rig, json_output)
+
+
 @bench_app.command("step")
 def bench_step(
     rounds: Annotated[int, typer.Option("--rounds", help="Alternating rounds.")] = 60,
@@ -246,6 +254,51 @@ def bench_step(
     from .commands.bench import bench_step as body
 
     return body(rounds, ticks, figure, json_output)
+
+
+@bench_app.command("loop")
+def bench_loop(
+    rig: RigFile,
+    seconds: Annotated[
+        float,
+        typer.Option("--seconds", metavar="S", help="At the tick rate, and again flat out."),
+    ] = 5.0,
+    rounds: Annotated[int, typer.Option("--rounds", help="Alternating rounds in all.")] = 5,
+    load: Annotated[
+        bool, typer.Option("--load", help="Again with every core kept busy, side by side.")
+    ] = False,
+    burners: Annotated[
+        int | None, typer.Option("--burners", help="Busy threads, if not one a core.")
+    ] = None,
+    spin: Annotated[
+        bool, typer.Option("--spin", help="Never sleep while an answer is awaited.")
+    ] = False,
+    realtime: Annotated[
+        bool, typer.Option("--realtime", help="Keep sampling whatever the load, like a device.")
+    ] = False,
+    figure: Annotated[
+        Path | None, typer.Option("--figure", help="Draw to this PNG or SVG file.")
+    ] = None,
+    save: Annotated[
+        Path | None, typer.Option("--save", metavar="FILE", help="Write the result as JSON.")
+    ] = None,
+    compare: Annotated[
+        Path | None, typer.Option("--compare", metavar="FILE", help="A result to set beside it.")
+    ] = None,
+    json_output: Json = False,
+) -> int:
+    """Measure round trips, jitter and service times of a rig file's loop.
+
+    The running server is measured when it is idle and no rig holds it; without one, a
+    private server is started, armed with no cell, and ended. In each round the client
+    samples by the clock, then flat out. Two results differ in a percentile where the
+    medians of their rounds lie further apart than the two half-ranges together.
+    """
+    from .commands.bench_loop import bench_loop as body
+
+    return body(
+        rig, seconds, rounds, load, burners, spin, realtime, figure, save, compare, json_output
+    )
 
 
 @app.command()
