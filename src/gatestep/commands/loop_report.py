@@ -230,9 +230,12 @@ def draw(result: dict[str, Any], before: dict[str, Any] | None, path: Path) -> N
     figure = Figure(figsize=(9, 5.5), layout="constrained")
     axes = figure.subplots()
     if before is not None:
-        _draw_result(axes, before, "before: ", alpha=0.45)
-    _draw_result(axes, result, "now: " if before else "", alpha=1.0)
+        # Only what matters most: eight curves are too many to tell apart.
+        _draw_result(axes, before, "before: ", 0.45, ("tick",))
+    _draw_result(axes, result, "now: " if before else "", 1.0, tuple(KINDS))
     _dress(axes, result)
+    if axes.get_lines():
+        figure.legend(frameon=False, fontsize=9, loc="outside lower center", ncols=3)
     temporary = path.with_name(f".{path.stem}.part{path.suffix}")
     try:
         figure.savefig(temporary, dpi=150)
@@ -242,8 +245,10 @@ def draw(result: dict[str, Any], before: dict[str, Any] | None, path: Path) -> N
         raise FileError(f"--figure {path}: cannot be written ({fault.strerror})") from fault
 
 
-def _draw_result(axes: Axes, result: dict[str, Any], prefix: str, alpha: float) -> None:
-    for kind, words in KINDS.items():
+def _draw_result(
+    axes: Axes, result: dict[str, Any], prefix: str, alpha: float, kinds: tuple[str, ...]
+) -> None:
+    for kind in kinds:
         for condition, series in _series(result, kind):
             if not series["answered"]:
                 continue
@@ -260,7 +265,7 @@ def _draw_result(axes: Axes, result: dict[str, Any], prefix: str, alpha: float) 
                 linestyle="-" if kind == "tick" else (0, (4, 2)),
                 linewidth=1.8 if kind == "tick" else 1.2,
                 alpha=alpha,
-                label=f"{prefix}{condition}, {words}",
+                label=f"{prefix}{condition}, {KINDS[kind]}",
             )
 
 
@@ -295,8 +300,6 @@ def _dress(axes: Axes, result: dict[str, Any]) -> None:
         )
     axes.set_ylim(top=1.5)
     axes.spines[["top", "right"]].set_visible(False)
-    if axes.get_lines():
-        axes.legend(frameon=False, fontsize=9, loc="upper right")
     server = result["server"]
     axes.set_title(
         f"{rig['file']}: tick {rig['interval_us']:g} µs, {server['lane']} lane, "
