@@ -17,7 +17,7 @@ from gatestep import hostfacts, remedies
 from gatestep.cli import main
 from gatestep.commands import check as command
 from gatestep.hostfacts import FACTS, Finding, Host, host_findings
-from gatestep.specs import CellSpec, HostSpec
+from gatestep.specs import CellSpec, HostSpec, LoopSpec
 
 CPU = "sys/devices/system/cpu"
 CLOCK = "sys/devices/system/clocksource/clocksource0"
@@ -329,6 +329,17 @@ def test_a_model_is_set_beside_the_bound(interval_us, apply, verdict):
     assert finding.more["largest_ns"] == pytest.approx(4689.0)
     assert ("half a tick of delay" in finding.found) == (apply == "on-arrival")
     assert (finding.remedy is None) == (verdict == "ok")
+
+
+def test_the_remedy_for_a_large_model_is_one_that_a_rig_file_can_have():
+    """A tick that halves the share where it is allowed, and always a factor on gmax."""
+    assert command._smaller_share(20.0, 1.0).startswith("loop.interval_us = 10, and")
+    assert command._smaller_share(20.0, 4.0) == (
+        "smaller gmax_ns in the model, 0.12 times what they are"
+    )
+    LoopSpec(interval_us=command.SHORTEST_TICK_US)
+    with pytest.raises(ValueError, match="interval_us"):
+        LoopSpec(interval_us=command.SHORTEST_TICK_US - 0.01)
 
 
 def test_the_largest_conductance_counts_what_is_taken_away_too(tmp_path):

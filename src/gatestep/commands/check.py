@@ -17,10 +17,19 @@ if TYPE_CHECKING:
     from ..config import LoadedRig
     from ..library import LoadedModel
     from ..specs import CellSpec
+    from ..tables import Tables
 
 DELAY_TICKS = {"next-tick": 1.0, "on-arrival": 0.5}
 """From a sample to its current's start, in ticks, as ``loop.apply`` lets it be."""
 
+SHORTEST_TICK_US = 5.0
+"""The shortest ``loop.interval_us`` that a rig file may have."""
+
+_TABLES_MATTER = "The loop follows a model's tables, not its formulas."
+_BOUND_MATTERS = (
+    "Beyond the bound the loop itself rings, on a cell that is a capacitance alone; "
+    "gates seldom all open at once, so this is the worst case."
+)
 _LOOKS = {"ok": "green", "weak": "yellow", "missing": "bold red"}
 
 
@@ -86,23 +95,30 @@ def read_files(rig_file: Path) -> Checked:
 
 def _read_model(cell: CellSpec, rig: LoadedRig) -> tuple[LoadedModel | None, Finding]:
     """A cell's model with its tables built, and what there is to say of it."""
-    from ..library import load_model, shipped_folder
+    from ..library import load_model
     from ..tables import build_tables
 
-    name, why = f"model of {cell.name}", "The loop follows its tables, not its formulas."
     try:
         model = load_model(cell.model, relative_to=rig.folder)
         tables = build_tables(model.spec)
     except GatestepError as fault:
         remedy = f"mend it, or choose another (gatestep models): [[cell]] {cell.name}, model"
-        return None, Finding(name, "missing", str(fault), why, remedy)
+        name = f"model of {cell.name}"
+        return None, Finding(name, "missing", str(fault), _TABLES_MATTER, remedy)
+    return model, _describe(cell, model, tables)
+
+
+def _describe(cell: CellSpec, model: LoadedModel, tables: Tables) -> Finding:
+    """Where a cell's model comes from, how sure it is, and how well its tables hold."""
+    from ..library import shipped_folder
+
     error = max((max(r.inf_error, r.rate_error) for r in tables.reports), default=0.0)
     shipped = model.path.parent == shipped_folder()
-    place = "shipped" if shipped else "own file"
     gates = len(tables.reports)
     shown = (
-        f"{model.name} ({place}, {model.path}): {gates} gate{'s' * (gates != 1)}, "
-        f"largest table error {error:.1e} of full scale, confidence {model.spec.confidence}"
+        f"{model.name} ({'shipped' if shipped else 'own file'}, {model.path}): "
+        f"{gates} gate{'s' * (gates != 1)}, largest table error {error:.1e} of full scale, "
+        f"confidence {model.spec.confidence}"
     )
     more = {
         "cell": cell.name,
@@ -113,10 +129,10 @@ def _read_model(cell: CellSpec, rig: LoadedRig) -> tuple[LoadedModel | None, Fin
         "table_error": error,
         "table_sha256": tables.sha256,
     }
-    if model.spec.confidence == "uncertain":
-        remedy = f"read its caveats: {model.path}"
-        return model, Finding(name, "weak", shown, why, remedy, more)
-    return model, Finding(name, "ok", shown, why, None, more)
+    unsure = model.spec.confidence == "uncertain"
+    remedy = f"read its caveats: {model.path}" if unsure else None
+    verdict: Verdict = "weak" if unsure else "ok"
+    return Finding(f"model of {cell.name}", verdict, shown, _TABLES_MATTER, remedy, more)
 
 
 def files_section(checked: Checked) -> Section:
@@ -178,23 +194,23 @@ def bound_finding(cell: CellSpec, model: LoadedModel, interval_us: float, apply:
         f"{model.name} with every gate open {largest_ns:.4g} nS; the loop carries "
         f"{bound_ns:.4g} nS on {cell.capacitance_pf:g} pF at {interval_us:g} µs{assumed}"
     )
-    why = (
-        "Beyond the bound the loop itself rings, on a cell that is a capacitance alone; "
-        "gates seldom all open at once, so this is the worst case."
-    )
-    remedy = None
-    if verdict != "ok":
-        remedy = (
-            f"a tick of {interval_us * 0.5 / share:.3g} µs brings it to half the bound "
-            "(loop.interval_us, and the rig's clock); or a smaller gmax_ns in the model"
-        )
     more = {
         "cell": cell.name,
         "bound_ns": bound_ns,
         "largest_ns": largest_ns,
         "delay_ticks": delay,
     }
-    return Finding(f"cell {cell.name}", verdict, shown, why, remedy, more)
+    remedy = None if verdict == "ok" else _smaller_share(interval_us, share)
+    return Finding(f"cell {cell.name}", verdict, shown, _BOUND_MATTERS, remedy, more)
+
+
+def _smaller_share(interval_us: float, share: float) -> str:
+    """What brings a model's largest conductance to half the bound."""
+    half_us = interval_us * 0.5 / share
+    smaller = f"smaller gmax_ns in the model, {0.5 / share:.2g} times what they are"
+    if half_us < SHORTEST_TICK_US:
+        return smaller
+    return f"loop.interval_us = {half_us:.3g}, and the rig's clock with it; or {smaller}"
 
 
 def _as_json(rig: LoadedRig, sections: list[Section]) -> dict[str, Any]:
