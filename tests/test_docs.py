@@ -7,6 +7,7 @@ import json
 import re
 import subprocess
 import sys
+import time
 from pathlib import Path
 
 import pytest
@@ -258,7 +259,10 @@ def test_the_rig_loop_of_the_readme_runs(serving):
     exec(example.replace("TIMEOUT_MS = 50, 100", "TIMEOUT_MS = 50, 20_000"), names)
     assert server.control.status()["state"] == "armed"
     names["rig"].context.destroy(linger=0)
-    status = server.control.status()
+    deadline = time.monotonic() + 20.0
+    while (status := server.control.status())["rig"] != "none":  # until all is in the log
+        assert time.monotonic() < deadline
+        time.sleep(0.01)
     assert status["late"] == status["missed"] == status["malformed"] == 0
     assert status["answered"] == 20_000
     assert names["v_mv"] == pytest.approx(-63.75, abs=1e-6)
