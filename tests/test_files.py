@@ -168,7 +168,7 @@ def test_faults_of_rig_files_read_alike(tmp_path):
         'loop.interval_us: found "50 us"; must be a valid number',
         "loop.anticipate: found 3; must be 'auto', or must be a valid boolean",
         "loop.endpont: unknown key (did you mean endpoint?); known here: "
-        "endpoint, interval_us, budget_us, apply, anticipate",
+        "endpoint, interval_us, budget_us, apply, anticipate, lane",
         'cell "a": limits.window_mv: found [1, 2, 3]; must hold at most 2',
         "cell number 2: name: missing; this key is required",
         "cell number 2: model: found 1; must be a valid string",

@@ -45,7 +45,7 @@ class LoopEvent:
     text: str
     number: int = 0
     outcome: int = 0
-    cell: int = NIL
+    cell: int = int(NIL)
 
 
 class Durations:
