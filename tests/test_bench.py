@@ -4,9 +4,12 @@ from __future__ import annotations
 
 import json
 import math
+import os
 import shutil
 import subprocess
 import sys
+import tempfile
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -16,6 +19,7 @@ from gatestep.commands.bench import Line, Sized, Spread, Stepped, bench_step, sp
 from gatestep.errors import GatestepError
 from gatestep.library import load_model
 
+ROOT = Path(__file__).resolve().parent.parent
 QUICK = ("--rounds", "3", "--ticks", "1000")
 
 
@@ -129,6 +133,49 @@ def test_kernel_and_c_compute_the_same_and_a_difference_is_refused(tmp_path):
     other, _ = squid_c.build_squid_step(tmp_path, squid, 2 * bench.TICK_MS)
     with pytest.raises(GatestepError, match="cannot be compared"):
         bench._check_agreement(squid, other)
+
+
+def test_round_trip_benchmark_measures_and_ends_what_it_started():
+    """One small group: every server answers, ratios are of positive medians, none is left."""
+    command = [sys.executable, str(ROOT / "bench" / "roundtrip.py"), "--json"]
+    command += ["--rounds", "2", "--trips", "20", "--transport", "ipc", "--client", "C"]
+    # A short folder of its own: a socket's path is at most 107 bytes.
+    with tempfile.TemporaryDirectory(prefix="rt-") as folder:
+        environment = {**os.environ, "TMPDIR": folder}
+        run = subprocess.run(
+            command, capture_output=True, text=True, timeout=300, check=False, env=environment
+        )
+        assert run.returncode == 0, run.stderr
+        assert list(Path(folder).iterdir()) == []
+        left = subprocess.run(["ps", "-eo", "args"], capture_output=True, text=True, check=True)
+        assert folder not in left.stdout
+    result = json.loads(run.stdout)
+    [group] = result["groups"]
+    assert set(group["costs"]) == {
+        "gatestep direct lane",
+        "gatestep libzmq lane",
+        "C libzmq echo",
+        "plain Python server",
+    }
+    for cost in group["costs"].values():
+        assert 0 < cost["round_median"]["median"] <= cost["largest"]
+    for name, ratio in group["ratios"].items():
+        assert set(name.split(" / ")) < set(group["costs"])
+        assert 0 < ratio["low"] <= ratio["median"] <= ratio["high"]
+    assert all(isinstance(met, bool) for met in result["targets"].values())
+
+
+@pytest.mark.parametrize(
+    ("options", "word"),
+    [(["--rounds", "0"], "--rounds 0"), (["--libzmq", "/nowhere/lib.so"], "/nowhere/lib.so")],
+)
+def test_round_trip_benchmark_refuses_in_one_line(options, word):
+    """Status 1 and one line, before anything is started."""
+    command = [sys.executable, str(ROOT / "bench" / "roundtrip.py"), *options]
+    run = subprocess.run(command, capture_output=True, text=True, timeout=60, check=False)
+    assert run.returncode == 1
+    assert word in run.stderr
+    assert len(run.stderr.splitlines()) == 1
 
 
 def test_contestants_alternate():

@@ -9,6 +9,7 @@ a machine that slows down slows both sides.
 from __future__ import annotations
 
 import json
+import os
 import platform
 import statistics
 import sys
@@ -212,6 +213,7 @@ class Progress:
 
 def measure(rounds: int, ticks: int, say: Callable[[str], None]) -> Result:
     """Run all rounds: first the squid axon, the kernel and the C in turn, then the sizes."""
+    before = host()  # the load of others, not of the benchmark itself
     say("preparing tables and voltages")
     squid_model = load_model("squid-axon").spec
     squid = Stepped(squid_model, spike_train(squid_model, ticks))
@@ -230,7 +232,7 @@ def measure(rounds: int, ticks: int, say: Callable[[str], None]) -> Result:
     by_size = alternate(runs, rounds, ticks, say)
     sizes = [Sized(n, n * each, Spread.over(by_size[n, each])) for n, each in SIZES]
     spreads = {name: Spread.over(values) for name, values in costs.items()}
-    return Result(rounds, ticks, spreads, ratios, why_not, sizes, Line.through(sizes), host())
+    return Result(rounds, ticks, spreads, ratios, why_not, sizes, Line.through(sizes), before)
 
 
 def spike_train(model: ModelSpec, ticks: int) -> Floats:
@@ -293,9 +295,10 @@ def _check_agreement(squid: Stepped, builds: Mapping[str, SquidInC]) -> None:
 
 
 def host() -> dict[str, str]:
-    """Processor, versions and date, to stand with every result."""
+    """Processor, its load, versions and date, to stand with every result."""
     return {
         "cpu": cpu_name(),
+        "load": f"{os.getloadavg()[0]:.1f} on {os.cpu_count()} CPUs",
         "system": f"{platform.system()} {platform.release()} {platform.machine()}",
         "python": platform.python_version(),
         "numpy": np.__version__,

@@ -45,7 +45,7 @@ def as_text(result: Result, figure: Path | None) -> str:
     """The result for a person."""
     h = result.host
     lines = [
-        f"gatestep {h['gatestep']}, numba {h['numba']}; {h['cpu']}; {h['date']}",
+        f"gatestep {h['gatestep']}, numba {h['numba']}; {h['cpu']}, load {h['load']}; {h['date']}",
         f"median of {result.rounds} alternating rounds of {result.ticks} ticks [10 %, 90 %]",
         "",
         "squid axon (Na, K, leak; 3 gates), ns a tick",
@@ -110,6 +110,7 @@ def draw(result: Result, path: Path) -> None:
     right.plot(ends, fit.base_nsec + fit.gate_nsec * ends, color="#c8553d", linewidth=1.4)
     right.set_xlabel("gates")
     right.set_ylabel("ns a tick")
+    right.set_ylim(bottom=0)
     for axes in (left, right):
         axes.spines[["top", "right"]].set_visible(False)
     figure.suptitle(f"{result.host['cpu']}; {result.host['date'][:10]}", fontsize=10.5)
