@@ -188,14 +188,19 @@ def test_contestants_alternate():
 
 
 def test_line_through_exact_costs():
-    """Costs on a line give that line and no residual; one off by a tenth shows as such."""
-    sizes = [Sized(g, g, Spread(20.0 + 5.0 * g, 0, 0)) for g in (2, 4, 16, 128)]
+    """Linear costs give their own terms and no residual; one off by a tenth shows as such."""
+
+    def sized(conductances, gates, factor=1.0):
+        blocks = -(-gates // 4) * 4
+        nsec = (20.0 + 3.0 * blocks + 5.0 * conductances) * factor
+        return Sized(conductances, gates, Spread(nsec, 0, 0))
+
+    sizes = [sized(n, n * each) for n, each in bench.SIZES]
     line = Line.through(sizes)
-    assert line.base_nsec == pytest.approx(20.0)
-    assert line.gate_nsec == pytest.approx(5.0)
+    assert (line.base_nsec, line.gate_nsec, line.conductance_nsec) == pytest.approx((20, 3, 5))
     assert line.worst < 1e-12
-    off = [*sizes[:3], Sized(128, 128, Spread(1.1 * 660.0, 0, 0))]
-    assert 0.01 < Line.through(off).worst < 0.1
+    assert line.at(10, 40) == pytest.approx(190.0)
+    assert 0.01 < Line.through([*sizes[:3], sized(32, 64, 1.1), *sizes[4:]]).worst < 0.1
 
 
 def test_spread_is_median_and_tenths():

@@ -243,7 +243,7 @@ def check(rig: RigFile, json_output: Json = False) -> int:
 
 @bench_app.command("step")
 def bench_step(
-    rounds: Annotated[int, typer.Option("--rounds", help="Alternating rounds.")] = 60,
+    rounds: Annotated[int, typer.Option("--rounds", help="Alternating rounds.")] = 200,
     ticks: Annotated[int, typer.Option("--ticks", help="Ticks in each round.")] = 20_000,
     figure: Annotated[
         Path | None, typer.Option("--figure", help="Draw to this PNG or SVG file.")

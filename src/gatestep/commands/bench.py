@@ -30,6 +30,7 @@ from ..compiling import compiled
 from ..errors import GatestepError
 from ..kernel import BANK, STATES, conductance, records, settle, step
 from ..library import load_model
+from ..simd import WIDTH
 from ..specs import ModelSpec
 from ..tables import build_tables
 from .squid_c import SquidInC, build_squid_step, compiler_name
@@ -42,6 +43,8 @@ CAPACITANCE_PF = 30.0
 DRIVE_PA = 300.0
 SIZES = ((1, 2), (2, 2), (8, 2), (32, 2), (64, 2), (64, 4))
 """Conductances and the gates of each."""
+SIZES_TAKE = 5
+"""The large sizes are slow: they get a fifth of the rounds."""
 MOST_ROUNDS, MOST_TICKS = 10_000, 1_000_000
 AGREEMENT = 1e-5
 """Largest difference between the kernel's and the C's current, as a share of the peak."""
@@ -126,21 +129,32 @@ class Sized:
 
 @dataclass(frozen=True)
 class Line:
-    """``base_nsec + gate_nsec * gates``, fitted to relative errors; the largest of them."""
+    """A cost linear in gates and conductances, and its largest distance from a measured one.
+
+    ``base_nsec + gate_nsec * gates + conductance_nsec * conductances``, the gates
+    counted in the blocks of four that the kernel steps; fitted to relative errors.
+    ``worst`` is relative too.
+    """
 
     base_nsec: float
     gate_nsec: float
+    conductance_nsec: float
     worst: float
 
     @classmethod
     def through(cls, sizes: list[Sized]) -> Line:
         """Fit the medians of all sizes."""
-        gates = np.array([s.gates for s in sizes], dtype=float)
         nsec = np.array([s.nsec.median for s in sizes])
-        terms = np.stack([np.ones_like(gates), gates], axis=1)
-        (base, slope), *_ = np.linalg.lstsq(terms / nsec[:, None], np.ones_like(nsec), rcond=None)
-        worst = np.abs((base + slope * gates) / nsec - 1.0).max()
-        return cls(float(base), float(slope), float(worst))
+        terms = np.array([[1.0, -(-s.gates // WIDTH) * WIDTH, s.conductances] for s in sizes])
+        terms /= nsec[:, None]
+        fitted, *_ = np.linalg.lstsq(terms, np.ones_like(nsec), rcond=None)
+        worst = float(np.abs(terms @ fitted - 1.0).max())
+        base, gate, each = (float(value) for value in fitted)
+        return cls(base, gate, each, worst)
+
+    def at(self, conductances: float, gates: float) -> float:
+        """Cost in ns of a size whose gates fill their blocks."""
+        return self.base_nsec + self.gate_nsec * gates + self.conductance_nsec * conductances
 
 
 @dataclass(frozen=True)
@@ -148,6 +162,7 @@ class Result:
     """Everything ``bench step`` measured; costs are in nanoseconds a tick."""
 
     rounds: int
+    size_rounds: int
     ticks: int
     squid: dict[str, Spread]
     ratios: dict[str, Spread]
@@ -163,7 +178,7 @@ def bench_step(rounds: int, ticks: int, figure: Path | None, json_output: bool) 
     Parameters
     ----------
     rounds : int
-        Alternating rounds, at least 3.
+        Alternating rounds of the squid axon, at least 3; a fifth as many of the sizes.
     ticks : int
         Ticks that each contestant steps in a round, at least 1000.
     figure : Path or None
@@ -229,10 +244,12 @@ def measure(rounds: int, ticks: int, say: Callable[[str], None]) -> Result:
     for n, each in SIZES:
         say(f"preparing {n} conductances")
         runs[n, each] = Stepped(sized_model(n, each), squid.v_mv)
-    by_size = alternate(runs, rounds, ticks, say)
+    size_rounds = max(3, rounds // SIZES_TAKE)
+    by_size = alternate(runs, size_rounds, ticks, say)
     sizes = [Sized(n, n * each, Spread.over(by_size[n, each])) for n, each in SIZES]
     spreads = {name: Spread.over(values) for name, values in costs.items()}
-    return Result(rounds, ticks, spreads, ratios, why_not, sizes, Line.through(sizes), before)
+    line = Line.through(sizes)
+    return Result(rounds, size_rounds, ticks, spreads, ratios, why_not, sizes, line, before)
 
 
 def spike_train(model: ModelSpec, ticks: int) -> Floats:

@@ -5,8 +5,6 @@ from __future__ import annotations
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-
 from ..errors import FileError, GatestepError, MissingExtraError
 from .bench import KERNEL, Result
 from .squid_c import C_PLAIN
@@ -21,6 +19,7 @@ def as_json(result: Result, figure: Path | None) -> dict[str, Any]:
     return {
         "host": result.host,
         "rounds": result.rounds,
+        "size_rounds": result.size_rounds,
         "ticks": result.ticks,
         "squid_nsec": {name: vars(spread) for name, spread in result.squid.items()},
         "ratio_to_c": {name: vars(spread) for name, spread in result.ratios.items()},
@@ -57,14 +56,18 @@ def as_text(result: Result, figure: Path | None) -> str:
         lines.append(f"  {verdict} the target, {TARGET_RATIO:g} of {C_PLAIN}")
     if result.c_unavailable:
         lines.append(f"  not compared: {result.c_unavailable}")
-    lines += ["", "conductances  gates  ns a gate  ns a tick"]
+    lines += [
+        "",
+        f"cost by size, {result.size_rounds} rounds",
+        "conductances  gates  ns a gate  ns a tick",
+    ]
     for s in result.sizes:
         each = s.nsec.median / s.gates
         lines.append(f"{s.conductances:>12}  {s.gates:>5}  {each:>9.2f}  {s.nsec:.1f}")
     fit = result.line
     lines.append(
-        f"straight line: {fit.base_nsec:.1f} ns + {fit.gate_nsec:.2f} ns a gate, "
-        f"at most {fit.worst:.0%} from a measured size"
+        f"linear: {fit.base_nsec:.1f} ns + {fit.gate_nsec:.2f} ns a gate (in fours) + "
+        f"{fit.conductance_nsec:.2f} ns a conductance, at most {fit.worst:.0%} from a measured size"
     )
     if figure:
         lines.append(f"drawn to {figure}")
@@ -103,11 +106,15 @@ def draw(result: Result, path: Path) -> None:
     errors = [[s.median - s.low for s in spreads], [s.high - s.median for s in spreads]]
     left.barh(names, middle, xerr=errors, color="#1b6ca8", height=0.6, capsize=3)
     left.set_xlabel("squid axon, ns a tick")
+    for each, look in ((2, "-"), (4, "--")):
+        counts = (4 // each, 64)
+        fitted = [result.line.at(n, n * each) for n in counts]
+        ends = [n * each for n in counts]
+        label = f"linear fit, {each} gates a conductance"
+        right.plot(ends, fitted, look, color="#c8553d", linewidth=1.4, label=label)
     gates = [s.gates for s in result.sizes]
-    right.plot(gates, [s.nsec.median for s in result.sizes], "o", color="#1b6ca8")
-    ends = np.array([0, max(gates)])
-    fit = result.line
-    right.plot(ends, fit.base_nsec + fit.gate_nsec * ends, color="#c8553d", linewidth=1.4)
+    right.plot(gates, [s.nsec.median for s in result.sizes], "o", color="#1b6ca8", label="measured")
+    right.legend(frameon=False)
     right.set_xlabel("gates")
     right.set_ylabel("ns a tick")
     right.set_ylim(bottom=0)
