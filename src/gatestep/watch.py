@@ -131,11 +131,12 @@ class Watch:
         }
 
     def cell(self, k: int) -> dict[str, Any]:
-        """Newest voltage and current of a cell."""
-        if self._last is None:
-            return {"v_mv": None, "i_pa": None}
+        """Newest voltage of a cell, and the current it is given: 0 unless armed."""
+        if self._last is None or not self._loop["held"]:
+            return {"v_mv": None, "i_pa": 0.0}
         v_mv = float(self._last["v_mv"][k])
-        return {"v_mv": v_mv if np.isfinite(v_mv) else None, "i_pa": float(self._last["i_pa"][k])}
+        i_pa = float(self._last["i_pa"][k]) if self.state == State.ARMED else 0.0
+        return {"v_mv": v_mv if np.isfinite(v_mv) else None, "i_pa": i_pa}
 
     def _event(self, entry: Any) -> LoopEvent:
         kind, code, cell = Entry(int(entry["kind"])), int(entry["code"]), int(entry["cell"])

@@ -201,6 +201,7 @@ def _play(
         Order(with_na_k.start_ms, "arm"),
         Order(with_na_k.step_ms + lead_ms, "load"),
         Order(with_m.start_ms, "swap"),
+        Order(0.5 * (with_m.stop_ms + with_m.end_ms), "disarm"),
     ]
     confirmed: dict[str, int | None] = {}
     while rig.poll() is None:

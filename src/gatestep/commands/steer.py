@@ -55,7 +55,7 @@ def print_status(status: dict[str, Any]) -> None:
     from rich.console import Console
     from rich.table import Table
 
-    console = Console()
+    console = Console(soft_wrap=True)
     fault = f" ({status['fault']})" if status["fault"] else ""
     console.print(
         f"{status['state']}{fault}; rig: {status['rig']}, seq {status['seq']}; "
@@ -69,6 +69,11 @@ def print_status(status: dict[str, Any]) -> None:
     if service:
         spread = "  ".join(f"{k} {v / 1000:.1f}" for k, v in service.items())
         console.print(f"service time in µs: {spread}", highlight=False)
+    for setting in status.get("host", []):
+        if not setting["applied"]:
+            console.print(
+                f"not applied: {setting['setting']}: {setting['detail']}", highlight=False
+            )
     table = Table("cell", "model in force", "prepared", "V (mV)", "I (pA)", "limit (pA)", box=None)
     for cell in status["cells"]:
         table.add_row(
