@@ -256,13 +256,47 @@ class CellLimits(Spec):
         return window
 
 
+class ElectrodeSpec(Spec):
+    """What the measured voltage still holds of the electrode.
+
+    ``residue_mohm`` is the series resistance that bridge balance or compensation
+    has left in it; how good a setting one can trust, not a figure one has read.
+    """
+
+    residue_mohm: float = Field(default=0.1, ge=0, le=1000)
+
+
+class AnticipateSpec(Spec):
+    """Anticipation's settings in place of the chosen ones; see :mod:`gatestep.anticipate`."""
+
+    substeps: int | None = Field(default=None, ge=1, le=8)
+    alpha: float | None = Field(default=None, gt=0, le=1)
+    beta: float | None = Field(default=None, ge=0, le=4)
+
+
 class CellSpec(Spec):
-    """One cell on the rig, the model it is given, and its limits."""
+    """One cell on the rig, the model it is given, and its limits.
+
+    ``capacitance_uncertainty`` is the fraction by which the true capacitance may
+    differ from ``capacitance_pf``. ``input_ns`` and ``input_mv`` are a conductance
+    that the cell is known to have, and its reversal.
+    """
 
     name: Name
     model: str
     capacitance_pf: float | None = Field(default=None, gt=0, le=1e5)
+    capacitance_uncertainty: float = Field(default=0.1, ge=0, le=0.9)
+    input_ns: float | None = Field(default=None, ge=0, le=1e5)
+    input_mv: float | None = Field(default=None, ge=-MAX_REVERSAL_MV, le=MAX_REVERSAL_MV)
+    electrode: ElectrodeSpec = Field(default_factory=ElectrodeSpec)
+    anticipate: AnticipateSpec = Field(default_factory=AnticipateSpec)
     limits: CellLimits = Field(default_factory=CellLimits)
+
+    @model_validator(mode="after")
+    def _input_is_whole(self) -> Self:
+        if (self.input_ns is None) != (self.input_mv is None):
+            raise ValueError("give both input_ns and input_mv, or neither")
+        return self
 
 
 class LimitsSpec(Spec):
