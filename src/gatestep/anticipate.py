@@ -142,9 +142,7 @@ def _to_hold(
 
 
 @inner
-def _across(
-    shadow: Any, bank: Any, table: Any, v_mv: float, rest_pa: float, h_ms: float
-) -> Any:
+def _across(shadow: Any, bank: Any, table: Any, v_mv: float, rest_pa: float, h_ms: float) -> Any:
     """[hot] ``(end voltage, mean current)`` of one sub-step with the gates at its middle."""
     c, x = shadow.capacitance_pf, shadow.x
     g, driven = _open(bank, x)

@@ -18,6 +18,7 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from .compiling import compiled, inner
+from .inforce import HISTORY
 from .kernel import BANK, records, settle
 from .lanebase import CLOSED, GONE, MAX_PEER, NOTHING, now_nsec
 from .lanes import close_lane, receive, reply
@@ -26,7 +27,6 @@ from .states import Event, Fault, State, next_state
 from .tick import (
     ANSWERED,
     CELL,
-    HISTORY,
     LOOP,
     WAS_MALFORMED,
     begin_session,
@@ -58,6 +58,7 @@ class Outcome(IntEnum):
     DONE = 0
     TRIPPED = 1
     WRONG_TICK = 2
+    STOPPING = 3
 
 
 class Entry(IntEnum):
@@ -113,6 +114,7 @@ DESK = np.dtype(
         ("order_at", "u8"),
         ("block_at", "u8"),
         ("entries", "i8"),  # waiting in the block
+        ("untold", "i8"),  # whether a counter has moved that no waiting entry tells
         ("flushed_nsec", "i8"),
         ("holder_serial", "i8"),
         ("holder_size", "i8"),
@@ -128,13 +130,13 @@ _BLOCK = BLOCK
 _LOOP_SIZE = LOOP.itemsize
 _ENTRY_SIZE = ENTRY.itemsize
 _ORDER_SIZE = ORDER.itemsize
-_IDLE, _TRIPPED = int(State.IDLE), int(State.TRIPPED)
+_TRIPPED, _DISARM = int(State.TRIPPED), int(Event.DISARM)
 _ORDER_EVENTS = np.array([Event.ARM, Event.DISARM, Event.RESET], dtype=np.int64)
 _ARM, _RESET, _STOP = int(Order.ARM), int(Order.RESET), int(Order.STOP)
 _MARK, _SWAP = int(Order.MARK), int(Order.SWAP)
 _SET_GMAX, _SET_REVERSAL = int(Order.SET_GMAX), int(Order.SET_REVERSAL)
 _DONE, _WAS_TRIPPED = int(Outcome.DONE), int(Outcome.TRIPPED)
-_WAS_WRONG_TICK = int(Outcome.WRONG_TICK)
+_WAS_WRONG_TICK, _WAS_STOPPING = int(Outcome.WRONG_TICK), int(Outcome.STOPPING)
 # Typed, so that compiled callers share one body: a plain literal makes a type of its own.
 _SAMPLE, _ORDER, _TRIP = (np.int64(e) for e in (Entry.SAMPLE, Entry.ORDER, Entry.TRIP))
 _HOLD, _RELEASE, _CLOCK_JUMP = (np.int64(e) for e in (Entry.HOLD, Entry.RELEASE, Entry.CLOCK_JUMP))
@@ -208,8 +210,11 @@ def _set_up_loop(loop: Any, rig: RigSpec) -> None:
     loop.due_ticks = max(whole_ticks, 1) + (rig.loop.apply == "next-tick")
     loop.silence_nsec = int(rig.limits.silence_ms * 1e6)
     loop.late_run_limit = rig.limits.late_run
+    loop.on_arrival = rig.loop.apply == "on-arrival"
+    loop.usual_delay_us = rig.loop.interval_us * (0.5 if loop.on_arrival else 1.0)
     loop.fault_cell = NIL
     loop.late_through = NIL
+    loop.due_through = NIL
 
 
 @inner
@@ -220,6 +225,7 @@ def _flush(m: Any, now: int) -> None:
     if not send(desk.log, desk.block_at, size):
         m.loop[0].records_lost += desk.entries
     desk.entries = 0
+    desk.untold = 0
     desk.flushed_nsec = now
 
 
@@ -317,6 +323,8 @@ def _swap(cell: Any, banks: Any, table: Any, bank: int) -> None:
 def _change_state(loop: Any, kind: int) -> int:
     """[hot] Arm, disarm or reset as the transition table says; the outcome."""
     if kind == _ARM:
+        if loop.stopping:
+            return _WAS_STOPPING
         if loop.state == _TRIPPED:
             return _WAS_TRIPPED
         if loop.tick_wrong:
@@ -336,9 +344,9 @@ def _obey(m: Any, now: int) -> int:
     if order.kind <= _RESET:
         return _change_state(loop, order.kind)
     if order.kind == _STOP:
-        loop.state = _IDLE
+        loop.state = next_state(loop.state, _DISARM)
+        loop.stopped_nsec = loop.stopped_nsec if loop.stopping else now
         loop.stopping = 1
-        loop.stopped_nsec = now
         return _DONE
     if order.kind == _MARK:
         return _DONE
@@ -386,6 +394,7 @@ def _turn_away(m: Any, size: int) -> None:
     """[hot] Answer a rig that does not hold the loop."""
     found = refuse(m.loop[0], m.lane[0].message, size, m.sample[0], m.answer[0])
     _send_answer(m, found)
+    m.desk[0].untold = 1
 
 
 @inner
@@ -400,6 +409,7 @@ def _answer_holder(m: Any, size: int, received: int) -> None:
         settle_answer(loop, answer, m.past, now_nsec(lane) - received)
     sent = _send_answer(m, found)
     if found == WAS_MALFORMED:
+        m.desk[0].untold = 1
         return
     loop.heard_nsec = received
     if not held:
@@ -453,7 +463,7 @@ def run_loop(m: Any) -> int:
             else:
                 _answer_holder(m, size, now)
         _take_orders(m)
-        if desk.entries and now - desk.flushed_nsec > _FLUSH_NSEC:
+        if (desk.entries or desk.untold) and now - desk.flushed_nsec > _FLUSH_NSEC:
             _flush(m, now)
     close_lane(lane)
     _flush(m, now)

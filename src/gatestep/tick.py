@@ -13,8 +13,10 @@ from typing import Any
 
 import numpy as np
 
+from .anticipate import MOST_SEGMENTS, SHADOW, anticipated, estimate, forget
 from .compiling import compiled, inner
 from .guard import limited, voltage_fault
+from .inforce import HISTORY, fill_coming, flowed, note_lag
 from .kernel import STATES, current, settle, step
 from .states import Event, Fault, State, next_state
 from .wire import CLIPPED, GAP, LATE, LIVE, NIL, REFUSED, REPEAT, TRIPPED, read_sample
@@ -28,6 +30,8 @@ LOOP = np.dtype(
         ("due_ticks", "i8"),  # an answer should be in force this many samples later
         ("silence_nsec", "i8"),
         ("late_run_limit", "i8"),
+        ("on_arrival", "i8"),
+        ("usual_delay_us", "f8"),  # from a sample to its answer's current, before it is known
         # The state, and what led to it.
         ("state", "i8"),
         ("fault", "i8"),
@@ -42,12 +46,17 @@ LOOP = np.dtype(
         ("heard_nsec", "i8"),  # monotonic time of the rig's last sample
         # Lateness and the rig's clock.
         ("late_through", "i8"),  # newest answer already judged late
+        ("due_through", "i8"),  # newest answer already judged for being in force when due
         ("late_run", "i8"),
         ("t_us", "f8"),
         ("since_seq", "i8"),
         ("since_t_us", "f8"),
         ("tick_us", "f8"),  # as the rig's clock shows it; 0 before it is known
         ("tick_wrong", "i8"),
+        # What anticipation needs of the rig's reports.
+        ("first_seq", "i8"),  # of the session
+        ("in_force", "i8"),  # as reported with the sample before
+        ("delay_us", "f8"),  # from a sample to its answer's current, by the rig's lags
         # Counters, from the start of the server.
         ("answered", "i8"),
         ("late", "i8"),
@@ -58,6 +67,8 @@ LOOP = np.dtype(
         ("clipped", "i8"),
         ("trips", "i8"),
         ("clock_jumps", "i8"),
+        ("foreseen", "i8"),  # cells' currents that were anticipated
+        ("fallbacks", "i8"),  # those that should have been and lacked what it needs
         ("records_lost", "i8"),
     ],
     align=True,
@@ -74,12 +85,11 @@ CELL = np.dtype(
         ("v_mv", "f8"),  # newest finite voltage
         ("i_pa", "f8"),  # current last answered
         ("x", "f8", (STATES,)),
+        ("coming_pa", "f8", (MOST_SEGMENTS,)),
+        ("shadow", SHADOW),
     ],
     align=True,
 )
-
-HISTORY = 64
-"""Answers kept for repeats; a power of two."""
 
 TICKS_TO_JUDGE = 1000
 """Ticks over which the rig's clock is compared with the interval."""
@@ -104,15 +114,19 @@ def begin_session(loop: Any, cells: Any, past: Any) -> None:
     """[hot] Ready for a new rig: its sequence, clock and gates start afresh."""
     loop.running = 0
     loop.late_through = NIL
+    loop.due_through = NIL
     loop.late_run = 0
     loop.tick_us = 0.0
     loop.tick_wrong = 0
+    loop.in_force = NIL
+    loop.delay_us = loop.usual_delay_us
     for k in range(HISTORY):
         past[k].seq = NIL
     for k in range(np.uint64(loop.cells)):
         cells[k].settled = 0
         cells[k].owed_ticks = 0.0
         cells[k].i_pa = 0.0
+        forget(cells[k].shadow)
 
 
 @compiled
@@ -155,21 +169,24 @@ def _judge_lateness(loop: Any, sample: Any, past: Any) -> bool:
     """[hot] Whether the sample shows an answer to have come too late; each counts once.
 
     Either the rig says so by ``lag_us``, or an answer that was due by now is not
-    the one in force.
+    the one in force. An answer that this rig has not been given says nothing.
     """
-    if sample.in_force == NIL:
+    due = min(sample.seq - loop.due_ticks, loop.seq)
+    first = max(loop.due_through + 1, loop.seq - _LAST)
+    loop.due_through = max(due, loop.due_through)
+    if sample.in_force == NIL or not loop.running or sample.in_force > loop.seq:
         return False
     late = False
     if sample.lag_us > loop.budget_us and sample.in_force > loop.late_through:
         loop.late += 1
         loop.late_through = sample.in_force
         late = True
-    due = sample.seq - loop.due_ticks
-    overdue = sample.in_force < due and due > loop.late_through
-    if overdue and past[np.uint64(due & _LAST)].seq == due:
-        loop.late += 1
-        loop.late_through = due
-        late = True
+    # One answer as a rule; after a gap, all those that became due in it.
+    for overdue in range(max(first, sample.in_force + 1, loop.late_through + 1), due + 1):
+        if past[np.uint64(overdue & _LAST)].seq == overdue:
+            loop.late += 1
+            loop.late_through = overdue
+            late = True
     loop.late_run = loop.late_run + 1 if late else 0
     return late
 
@@ -187,29 +204,68 @@ def _judge_voltages(loop: Any, cells: Any, sample: Any) -> None:
 def _step_cell(loop: Any, cell: Any, bank: Any, table: Any, v_mv: float) -> float:
     """[hot] Carry one cell's gates to its newest voltage; the model's current, pA."""
     interval_ms = loop.interval_us * 1e-3
-    if not isfinite(v_mv):
-        return 0.0
     if not cell.settled:
         settle(bank, table, cell.x, v_mv)
         cell.settled = 1
         wanted = current(bank, cell.x, v_mv)
     else:
         wanted = step(bank, table, cell.x, cell.v_mv, v_mv, cell.owed_ticks * interval_ms)
+    return wanted
+
+
+@inner
+def _know(loop: Any, cell: Any, past: Any, sample: Any, k: int) -> bool:
+    """[hot] Take the last tick into what is known of the cell; whether that suffices."""
+    shadow, interval_ms = cell.shadow, loop.interval_us * 1e-3
+    known = cell.settled and cell.owed_ticks == 1.0 and sample.in_force != NIL
+    if known:
+        mean_pa = flowed(loop, past, sample, k)
+        estimate(shadow, cell.v_mv, sample.v_mv[np.uint64(k)], mean_pa, interval_ms)
+    else:
+        forget(shadow)
+    return shadow.estimates > 0 and fill_coming(loop, past, sample, k, cell.coming_pa)
+
+
+@inner
+def _model_current(
+    loop: Any, cell: Any, bank: Any, table: Any, past: Any, sample: Any, k: int
+) -> float:
+    """[hot] Step one cell to its newest voltage; the current it should be given, pA."""
+    v_mv = sample.v_mv[np.uint64(k)]
+    if not isfinite(v_mv):
+        return 0.0
+    foreseen = cell.shadow.on != 0 and _know(loop, cell, past, sample, k)
+    wanted = _step_cell(loop, cell, bank, table, v_mv)
     cell.v_mv = v_mv
     cell.owed_ticks = 0.0
+    if foreseen:
+        loop.foreseen += 1
+        delay_ms, interval_ms = loop.delay_us * 1e-3, loop.interval_us * 1e-3
+        return anticipated(
+            cell.shadow, bank, table, cell.x, v_mv, cell.coming_pa, delay_ms, interval_ms
+        )
+    loop.fallbacks += cell.shadow.on
     return wanted
 
 
 @inner
 def _answer_cells(
-    loop: Any, cells: Any, banks: Any, table: Any, sample: Any, answer: Any, ticks: int
+    loop: Any,
+    cells: Any,
+    banks: Any,
+    table: Any,
+    past: Any,
+    sample: Any,
+    answer: Any,
+    ticks: int,
 ) -> bool:
     """[hot] Step every cell and pass its current through the guard; whether any clipped."""
     clipped = False
     for k in range(np.uint64(loop.cells)):
         cell = cells[k]
         cell.owed_ticks += ticks
-        wanted = _step_cell(loop, cell, banks[np.uint64(cell.bank)], table, sample.v_mv[k])
+        bank = banks[np.uint64(cell.bank)]
+        wanted = _model_current(loop, cell, bank, table, past, sample, np.int64(k))
         if not isfinite(wanted):
             trip(loop, _BAD_CURRENT, k)
         passed, held_back = limited(wanted, cell.i_pa, cell.limit_pa, cell.slew_pa)
@@ -286,6 +342,8 @@ def consider(
     _judge_clock(loop, sample)
     if _judge_lateness(loop, sample, past):
         flags |= LATE
+    if not loop.running:
+        loop.first_seq = sample.seq
     loop.running = 1
     loop.seq = sample.seq
     _judge_voltages(loop, cells, sample)
@@ -293,7 +351,9 @@ def consider(
         trip(loop, _WRONG_TICK, NIL)
     if loop.late_run >= loop.late_run_limit:
         trip(loop, _LATE_RUN, NIL)
-    clipped = _answer_cells(loop, cells, banks, table, sample, answer, ticks)
+    note_lag(loop, sample)
+    clipped = _answer_cells(loop, cells, banks, table, past, sample, answer, ticks)
+    loop.in_force = sample.in_force
     answer.flags = flags | _state_flag(loop)
     if loop.state != _ARMED:
         _silence(loop, cells, answer)

@@ -222,6 +222,8 @@ class Verbs:
         if event.outcome == Outcome.TRIPPED:
             reason = self._watch.summary()["fault"]
             raise ControlError(f"arm: the loop has tripped ({reason}); mend that, then reset")
+        if event.outcome == Outcome.STOPPING:
+            raise ControlError("arm: the server is stopping; start it again")
         if event.outcome == Outcome.WRONG_TICK:
             tick = self._watch.summary()["tick_us"]
             raise ControlError(

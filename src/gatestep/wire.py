@@ -263,7 +263,8 @@ def write_answer(out: Any, answer: Any, cells: int) -> int:
     """[hot] Encode an answer; returns its size in bytes."""
     out[0] = np.uint8(0x93 + cells)
     at = _write_optional(out, _1, answer.seq)
-    at = _write_whole(out, at, answer.flags)
+    # By key, since the attribute of that name is numpy's own where nothing is compiled.
+    at = _write_whole(out, at, answer["flags"])
     at = _write_whole(out, at, answer.service_nsec)
     for k in range(np.uint64(cells)):
         at = _write_bytes(out, at, _FLOAT64, u64_from_f64(answer.i_pa[k]), _8)
@@ -322,7 +323,19 @@ def unpack_answer(message: bytes) -> tuple[int | None, int, int, list[float]]:
         When the bytes are not an answer.
     """
     try:
-        seq, flags, service_nsec, *i_pa = msgpack.unpackb(message)
+        items = msgpack.unpackb(message)
     except (ValueError, TypeError, msgpack.exceptions.UnpackException) as fault:
         raise WireError(f"not an answer ({fault}): {message[:32].hex()}") from fault
+    if not isinstance(items, list) or not _is_answer(items):
+        raise WireError(f"not an answer (wrong items): {message[:32].hex()}")
+    seq, flags, service_nsec, *i_pa = items
     return seq, flags, service_nsec, i_pa
+
+
+def _is_answer(items: list[Any]) -> bool:
+    """Whether decoded items are of an answer's number and kinds."""
+    whole = [type(x) is int and x >= 0 for x in items[:3]]
+    if whole[:1] == [False]:
+        whole[0] = items[0] is None
+    numbers = all(type(x) in (int, float) for x in items[3:])
+    return len(items) >= 3 and all(whole) and numbers
