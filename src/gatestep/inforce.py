@@ -68,7 +68,7 @@ def fill_coming(loop: Any, past: Any, sample: Any, cell: int, coming_pa: Any) ->
     known = True
     for j in range(count):
         # Before the session's first answer nothing flows.
-        seq = max(sample.seq - 1 - j, NIL)
+        seq = sample.seq - 1 - j
         i_pa = answered(past, seq, cell) if seq >= loop.first_seq else 0.0
         if j == count - 1 and not whole:
             i_pa = answered(past, sample.in_force, cell)

@@ -311,6 +311,55 @@ def _repeat(loop: Any, cells: Any, sample: Any, answer: Any, past: Any) -> int:
     return WAS_REPEAT
 
 
+@inner
+def _account(loop: Any, sample: Any, past: Any) -> int:
+    """[hot] Gap, clock and lateness of a new sample; the flags they set."""
+    flags = np.int64(0)
+    if loop.running and sample.seq - loop.seq > 1:
+        flags |= GAP
+        loop.missed += sample.seq - loop.seq - 1
+    _judge_clock(loop, sample)
+    if _judge_lateness(loop, sample, past):
+        flags |= LATE
+    if not loop.running:
+        loop.first_seq = sample.seq
+    loop.running = 1
+    loop.seq = sample.seq
+    note_lag(loop, sample)
+    return flags
+
+
+@compiled
+def take_sample(
+    loop: Any, cells: Any, banks: Any, table: Any, past: Any, sample: Any, answer: Any
+) -> int:
+    """[hot] Take a decoded sample and fill the answer: ``ANSWERED`` or ``WAS_REPEAT``.
+
+    The service time is left for :func:`settle_answer`.
+    """
+    answer.seq = sample.seq
+    if loop.running and sample.seq <= loop.seq:
+        return _repeat(loop, cells, sample, answer, past)
+    ticks = sample.seq - loop.seq if loop.running else np.int64(1)
+    flags = _account(loop, sample, past)
+    _judge_voltages(loop, cells, sample)
+    if loop.tick_wrong:
+        trip(loop, _WRONG_TICK, NIL)
+    if loop.late_run >= loop.late_run_limit:
+        trip(loop, _LATE_RUN, NIL)
+    clipped = _answer_cells(loop, cells, banks, table, past, sample, answer, ticks)
+    loop.in_force = sample.in_force
+    answer.flags = flags | _state_flag(loop)
+    if loop.state != _ARMED:
+        _silence(loop, cells, answer)
+    elif clipped:
+        answer.flags |= CLIPPED
+        loop.clipped += 1
+    for k in range(np.uint64(loop.cells)):
+        cells[k].i_pa = answer.i_pa[k]
+    return ANSWERED
+
+
 @compiled
 def consider(
     loop: Any,
@@ -326,43 +375,12 @@ def consider(
     """[hot] Take one message of the rig that holds the loop and fill the answer.
 
     Returns ``ANSWERED``, ``WAS_REPEAT`` or ``WAS_MALFORMED``; in the last case the
-    answer is not filled. The service time is left for :func:`settle_answer`.
+    answer is not filled.
     """
     if size > message.size or not read_sample(message, size, loop.cells, sample):
         loop.malformed += 1
         return WAS_MALFORMED
-    answer.seq = sample.seq
-    if loop.running and sample.seq <= loop.seq:
-        return _repeat(loop, cells, sample, answer, past)
-    ticks = sample.seq - loop.seq if loop.running else np.int64(1)
-    flags = np.int64(0)
-    if ticks > 1:
-        flags |= GAP
-        loop.missed += ticks - 1
-    _judge_clock(loop, sample)
-    if _judge_lateness(loop, sample, past):
-        flags |= LATE
-    if not loop.running:
-        loop.first_seq = sample.seq
-    loop.running = 1
-    loop.seq = sample.seq
-    _judge_voltages(loop, cells, sample)
-    if loop.tick_wrong:
-        trip(loop, _WRONG_TICK, NIL)
-    if loop.late_run >= loop.late_run_limit:
-        trip(loop, _LATE_RUN, NIL)
-    note_lag(loop, sample)
-    clipped = _answer_cells(loop, cells, banks, table, past, sample, answer, ticks)
-    loop.in_force = sample.in_force
-    answer.flags = flags | _state_flag(loop)
-    if loop.state != _ARMED:
-        _silence(loop, cells, answer)
-    elif clipped:
-        answer.flags |= CLIPPED
-        loop.clipped += 1
-    for k in range(np.uint64(loop.cells)):
-        cells[k].i_pa = answer.i_pa[k]
-    return ANSWERED
+    return take_sample(loop, cells, banks, table, past, sample, answer)
 
 
 @compiled
