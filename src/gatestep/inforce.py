@@ -63,7 +63,7 @@ def fill_coming(loop: Any, past: Any, sample: Any, cell: int, coming_pa: Any) ->
     sample itself; after it, answers are expected to come as they usually do.
     """
     ticks = loop.delay_us / loop.interval_us
-    count = min(np.int64(np.ceil(ticks - _EXACT)), MOST_SEGMENTS)
+    count: Any = min(np.int64(np.ceil(ticks - _EXACT)), MOST_SEGMENTS)
     whole = abs(ticks - np.floor(ticks + 0.5)) < _EXACT
     known = True
     for j in range(count):
