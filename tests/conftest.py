@@ -3,17 +3,34 @@
 from __future__ import annotations
 
 import threading
+import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
-from typing import Any
+from typing import Any, NamedTuple
 
+import msgpack
 import pytest
+import zmq
+from hypothesis import HealthCheck, settings
 
 from gatestep.config import LoadedRig
 from gatestep.control import Control
 from gatestep.server import Server
 from gatestep.specs import RigSpec
+
+# The same examples in every run; no deadline, for a first call may compile.
+_SEEDED: dict[str, Any] = {
+    "derandomize": True,
+    "deadline": None,
+    "suppress_health_check": [HealthCheck.too_slow, HealthCheck.data_too_large],
+}
+settings.register_profile("seeded", **_SEEDED)
+settings.register_profile("few", max_examples=25, **_SEEDED)
+settings.load_profile("seeded")
+
+PATIENCE_S = 30.0
+"""How long a test waits for what must come; only a failing test waits so long."""
 
 
 def make_rig(folder: Path, **changes: Any) -> LoadedRig:
@@ -86,3 +103,77 @@ def serving(tmp_path: Path) -> Iterator[Callable[..., Running]]:
     yield start
     for server in started:
         server.close()
+
+
+class Reply(NamedTuple):
+    """An answer as the reference MessagePack implementation reads it."""
+
+    seq: int | None
+    flags: int
+    service_nsec: int
+    i_pa: list[float]
+
+
+def read_reply(message: bytes) -> Reply:
+    """Bytes of an answer as a :class:`Reply`."""
+    seq, flags, service_nsec, *i_pa = msgpack.unpackb(message)
+    return Reply(seq, flags, service_nsec, i_pa)
+
+
+class RawRig:
+    """A rig in plain pyzmq and msgpack: a DEALER, or a REQ where ``kind`` says so."""
+
+    def __init__(self, endpoint: str, kind: int = zmq.DEALER, **options: Any) -> None:
+        self.context = zmq.Context()
+        self.socket: zmq.Socket[bytes] = self.context.socket(kind)
+        self.socket.setsockopt(zmq.LINGER, 0)
+        for name, value in options.items():
+            setattr(self.socket, name, value)
+        self.socket.connect(endpoint)
+
+    def __enter__(self) -> RawRig:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+    def close(self) -> None:
+        self.context.destroy(linger=0)
+
+    def send(
+        self, seq: Any, *v_mv: Any, t_us: Any = None, in_force: Any = None, lag_us: Any = None
+    ):
+        """Send a sample; its clock shows 20 us a tick unless told otherwise."""
+        clock = 20 * seq if t_us is None else t_us
+        self.socket.send(msgpack.packb([seq, clock, in_force, lag_us, *v_mv]))
+
+    def receive(self, timeout_s: float = PATIENCE_S) -> Reply | None:
+        """The next answer, or None when none comes."""
+        if not self.socket.poll(int(1000 * timeout_s)):
+            return None
+        return read_reply(self.socket.recv_multipart()[-1])
+
+    def ask(self, seq: Any, *v_mv: Any, **known: Any) -> Reply:
+        """Send a sample and wait for its answer."""
+        self.send(seq, *v_mv, **known)
+        return self.hear()
+
+    def tell(self, *frames: bytes) -> Reply:
+        """Send frames as they are and wait for the answer."""
+        self.socket.send_multipart(frames)
+        return self.hear()
+
+    def hear(self) -> Reply:
+        """The next answer, which must come."""
+        reply = self.receive()
+        assert reply is not None, "no answer came"
+        return reply
+
+
+def wait_until(true: Callable[[], Any], what: str) -> Any:
+    """Wait for something that must become true; returns it."""
+    deadline = time.monotonic() + PATIENCE_S
+    while not (found := true()):
+        assert time.monotonic() < deadline, f"never came: {what}"
+        time.sleep(0.01)
+    return found
