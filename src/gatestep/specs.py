@@ -271,7 +271,7 @@ class AnticipateSpec(Spec):
 
     substeps: int | None = Field(default=None, ge=1, le=8)
     alpha: float | None = Field(default=None, gt=0, le=1)
-    beta: float | None = Field(default=None, ge=0, le=4)
+    beta: float | None = Field(default=None, ge=0, le=12)
 
 
 class CellSpec(Spec):
