@@ -6,13 +6,15 @@ would allocate or count references does not compile at all.
 
 Machine code is kept on disk. numba by itself looks only at the file a function is
 in to tell whether its code is stale; a hot function holds the code of everything it
-calls, so here the whole package's sources are the stamp.
+calls, so here its module and all that the module imports of the package are the stamp.
 """
 
 from __future__ import annotations
 
 import hashlib
+import re
 from collections.abc import Callable
+from functools import cache
 from pathlib import Path
 from typing import Any
 
@@ -21,15 +23,27 @@ from numba import njit
 _COMMON = {"nogil": True, "error_model": "numpy", "_nrt": False}
 
 
-def _source_stamp() -> str:
-    """A digest of every module of the package."""
+_HOME = Path(__file__).parent
+_IMPORTS = re.compile(r"^from \.(\w+) import", re.MULTILINE)
+
+
+def _needed(name: str, found: set[str]) -> set[str]:
+    """A module of the package and, through their imports, all that it needs."""
+    path = _HOME / f"{name}.py"
+    if name not in found and path.exists():
+        found.add(name)
+        for imported in _IMPORTS.findall(path.read_text(encoding="utf-8")):
+            _needed(imported, found)
+    return found
+
+
+@cache
+def _stamp(name: str) -> str:
+    """A digest of a module and all that it needs."""
     digest = hashlib.sha256()
-    for path in sorted(Path(__file__).parent.glob("*.py")):
-        digest.update(path.name.encode() + path.read_bytes())
+    for needed in sorted(_needed(name, set())):
+        digest.update(needed.encode() + (_HOME / f"{needed}.py").read_bytes())
     return digest.hexdigest()
-
-
-_STAMP = _source_stamp()
 
 
 def compiled(function: Callable[..., Any]) -> Any:
@@ -50,7 +64,7 @@ def _kept(function: Callable[..., Any], **options: Any) -> Any:
     dispatcher = njit(cache=True, **options, **_COMMON)(function)
     index = getattr(getattr(dispatcher, "_cache", None), "_cache_file", None)
     if index is not None:
-        index._source_stamp = _STAMP
+        index._source_stamp = _stamp(function.__module__.rpartition(".")[2])
     return dispatcher
 
 
