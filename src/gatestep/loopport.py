@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import contextlib
 import sys
 from pathlib import Path
 from typing import Any, Literal
@@ -10,13 +9,16 @@ from typing import Any, Literal
 import zmq
 
 from .config import LoadedRig
-from .direct import attach_direct, listen, make_direct
+from .direct import MAX_ALLOWED, attach_direct, make_direct
 from .errors import LinkError
-from .network import Gatekeeper
+from .listening import listen
+from .network import LOOPBACK, Gatekeeper
 from .zmqlane import make_zmq_lane
 
 WAIT_MS = 5
 """Longest that the loop waits for a message before it looks at its orders again."""
+MAX_PEERS = MAX_ALLOWED - len(LOOPBACK)
+"""Longest list of peers in the direct lane."""
 MAX_INCOMING = 1 << 20
 """A longer message ends the connection that it comes from."""
 
@@ -25,7 +27,9 @@ def choose_lane(rig: LoadedRig) -> Literal["direct", "libzmq"]:
     """The lane that a rig file asks for; ``auto`` is direct wherever that can serve."""
     asked = rig.spec.loop.lane
     if asked == "auto":
-        able = sys.platform == "linux" and rig.spec.network.curve_secret is None
+        network = rig.spec.network
+        able = sys.platform == "linux" and network.curve_secret is None
+        able = able and len(network.peers) <= MAX_PEERS
         return "direct" if able else "libzmq"
     if asked == "direct" and sys.platform != "linux":
         raise LinkError(f"{rig.path}: loop.lane = 'direct' needs Linux; use 'auto' or 'libzmq'")
@@ -46,9 +50,16 @@ class LoopPort:
         self.kind = choose_lane(rig)
         self.endpoint = rig.spec.loop.endpoint
         self._listener: Any = None
-        direct = self.kind == "direct"
-        peers = gatekeeper.loop_peers(self.endpoint)
-        self.lane = make_direct(WAIT_MS, peers) if direct else make_zmq_lane()
+        self._file = (0, 0)
+        self.lane = self._make_lane()
+
+    def _make_lane(self) -> Any:
+        if self.kind == "libzmq":
+            return make_zmq_lane()
+        try:
+            return make_direct(WAIT_MS, self._gatekeeper.loop_peers(self.endpoint))
+        except LinkError as fault:
+            raise LinkError(f"{self._rig.path}: network.peers: {fault}") from fault
 
     def bind(self) -> None:
         """Bind and listen.
@@ -64,6 +75,7 @@ class LoopPort:
             if self.endpoint.startswith("tcp://"):
                 host = self.endpoint.rpartition(":")[0]
                 self.endpoint = f"{host}:{self._listener.getsockname()[1]}"
+            self._file = _identity(self.endpoint)
             return
         socket = bound_socket(self._context, zmq.ROUTER, self.endpoint, self._gatekeeper)
         socket.setsockopt(zmq.ROUTER_MANDATORY, 1)
@@ -76,9 +88,19 @@ class LoopPort:
         """Stop listening; a socket file is taken away."""
         if self._listener is not None:
             self._listener.close()
-            if self.endpoint.startswith("ipc://"):
-                with contextlib.suppress(OSError):
-                    Path(self.endpoint[6:]).unlink()
+            if self._file != (0, 0) and self._file == _identity(self.endpoint):
+                Path(self.endpoint[6:]).unlink(missing_ok=True)
+
+
+def _identity(endpoint: str) -> tuple[int, int]:
+    """Device and number of an endpoint's socket file; zeros when it has none."""
+    if not endpoint.startswith("ipc://") or endpoint.startswith("ipc://@"):
+        return (0, 0)
+    try:
+        found = Path(endpoint[6:]).stat()
+    except OSError:
+        return (0, 0)
+    return (found.st_dev, found.st_ino)
 
 
 def bound_socket(
@@ -94,6 +116,7 @@ def bound_socket(
     socket: zmq.Socket[bytes] = context.socket(kind)
     socket.setsockopt(zmq.LINGER, 200)
     socket.setsockopt(zmq.MAXMSGSIZE, MAX_INCOMING)
+    socket.setsockopt(zmq.IPV6, int("[" in endpoint))
     gatekeeper.guard(socket, endpoint)
     try:
         socket.bind(endpoint)

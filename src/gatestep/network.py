@@ -9,7 +9,7 @@ import zmq
 from .config import LoadedRig, is_local
 from .errors import FileError
 
-_LOOPBACK = ("127.0.0.1", "::1")
+LOOPBACK = ("127.0.0.1", "::1")
 
 
 class Gatekeeper:
@@ -34,7 +34,7 @@ class Gatekeeper:
         self._authenticator = ThreadAuthenticator(context)
         self._authenticator.start()
         if self._network.peers:
-            self._authenticator.allow(*_LOOPBACK, *self._network.peers)
+            self._authenticator.allow(*LOOPBACK, *self._network.peers)
         else:
             self._public, self._secret = self._load_keys()
             clients = self._path(self._network.curve_clients)
@@ -54,7 +54,7 @@ class Gatekeeper:
         """Addresses that may connect to the loop socket in the direct lane; empty for any."""
         if is_local(endpoint) or not self._network.peers:
             return ()
-        return (*_LOOPBACK, *self._network.peers)
+        return (*LOOPBACK, *self._network.peers)
 
     def close(self) -> None:
         """Stop the authenticator."""

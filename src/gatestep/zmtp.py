@@ -42,8 +42,10 @@ PEER = np.dtype(
         ("skip_more", "i8"),  # whether that frame has another behind it
         ("frames", "i8"),  # of the message so far
         ("enveloped", "i8"),  # whether an empty frame stands before the message
-        ("size", "i8"),  # of the message, TOO_LONG if it is not one
+        ("message_size", "i8"),  # TOO_LONG if it is none
+        ("unread", "i8"),  # whether a message may stand in ``incoming`` already
         ("pending", "i8"),  # bytes in ``outgoing``
+        ("waiting", "i8"),  # answers put there since it was last empty
         ("message", "u1", (MAX_MESSAGE,)),
         ("incoming", "u1", (INCOMING,)),
         ("outgoing", "u1", (OUTGOING,)),
@@ -103,7 +105,9 @@ def open_peer(peer: Any, fd: int, serial: int, now_nsec: int) -> None:
     peer.end = 0
     peer.skip = 0
     peer.frames = 0
+    peer.unread = 0
     peer.pending = 0
+    peer.waiting = 0
     _append(peer, _GREETING, _GREETING.size)
 
 
@@ -111,7 +115,7 @@ def open_peer(peer: Any, fd: int, serial: int, now_nsec: int) -> None:
 def _begin_message(peer: Any) -> None:
     """[hot] Forget the message before."""
     peer.enveloped = 0
-    peer.size = 0
+    peer.message_size = 0
 
 
 @compiled
@@ -143,6 +147,7 @@ def put_answer(peer: Any, answer: Any, size: int, enveloped: int) -> bool:
     for k in range(np.uint64(size)):
         peer.outgoing[at + k] = answer[k]
     peer.pending += needed
+    peer.waiting += 1
     return True
 
 
@@ -150,8 +155,9 @@ def put_answer(peer: Any, answer: Any, size: int, enveloped: int) -> bool:
 def feed(peer: Any) -> int:
     """[hot] Read on in what has come: ``WAITING``, ``MESSAGE`` or ``BROKEN``.
 
-    With ``MESSAGE``, the message stands in ``peer.message`` with its ``size``, which is
-    ``TOO_LONG`` for what cannot be a sample, and ``enveloped``; call again for the next.
+    With ``MESSAGE``, the message stands in ``peer.message`` with its
+    ``message_size``, which is ``TOO_LONG`` for what cannot be a sample, and
+    ``enveloped``; call again for the next, as ``unread`` says.
     """
     while True:
         if peer.phase == OPEN:
@@ -161,6 +167,7 @@ def feed(peer: Any) -> int:
         else:
             found = _read_ready(peer)
         if found != _GO_ON:
+            peer.unread = np.int64(found == MESSAGE and peer.start < peer.end)
             return found
 
 
@@ -233,25 +240,30 @@ def _read_ready(peer: Any) -> int:
 
 @inner
 def _pairs(data: Any, at: int, end: int) -> bool:
-    """[hot] Whether READY's properties name a socket type that pairs with ROUTER."""
+    """[hot] Whether READY's properties are whole and name a type that pairs with ROUTER."""
+    pairing = False
     while at < end:
         name_size = np.int64(data[np.uint64(at)])
         value_at = at + 1 + name_size + 4
-        if value_at > end:
+        if name_size == 0 or value_at > end:
             return False
         value_size = np.int64(0)
         for k in range(np.uint64(value_at - 4), np.uint64(value_at)):
-            value_size = value_size * 256 + np.int64(data[k])
+            value_size = value_size * 256 + np.int64(data[np.uint64(k)])
         if value_at + value_size > end:
             return False
         if name_size == _TYPE_NAME.size and _same_letters(data, at + 1, _TYPE_NAME):
-            return (
-                _is(data, value_at, value_size, _DEALER)
-                or _is(data, value_at, value_size, _REQ)
-                or _is(data, value_at, value_size, _ROUTER)
-            )
+            pairing = _is_partner(data, value_at, value_size)
+            if not pairing:
+                return False
         at = value_at + value_size
-    return False
+    return pairing
+
+
+@inner
+def _is_partner(data: Any, at: int, size: int) -> bool:
+    """[hot] Whether a value is a socket type that pairs with ROUTER."""
+    return _is(data, at, size, _DEALER) or _is(data, at, size, _REQ) or _is(data, at, size, _ROUTER)
 
 
 @inner
@@ -309,7 +321,7 @@ def _pass_over(peer: Any) -> int:
     peer.skip -= step
     if peer.skip:
         return WAITING
-    peer.size = TOO_LONG
+    peer.message_size = TOO_LONG
     return _frame_done(peer, peer.skip_more)
 
 
@@ -319,11 +331,11 @@ def _take_frame(peer: Any, at: int, size: int, more: int) -> int:
     if size == 0 and more and peer.frames == 0:
         peer.enveloped = 1
     elif peer.frames > peer.enveloped:
-        peer.size = TOO_LONG
-    elif peer.size != TOO_LONG:
+        peer.message_size = TOO_LONG
+    elif peer.message_size != TOO_LONG:
         for k in range(np.uint64(size)):
             peer.message[k] = peer.incoming[np.uint64(at) + k]
-        peer.size = size
+        peer.message_size = size
     return _frame_done(peer, more)
 
 
@@ -339,13 +351,19 @@ def _frame_done(peer: Any, more: int) -> int:
 
 @inner
 def _read_command(peer: Any, flags: int, size: int, header: int) -> int:
-    """[hot] PING is answered, ERROR ends the connection, any other is passed over."""
-    if flags & _MORE or size > _MAX_COMMAND:
+    """[hot] PING is answered, ERROR ends the connection, any other is passed over.
+
+    One may come between a message's frames: libzmq puts its PING there.
+    """
+    if flags & _MORE or size > _MAX_COMMAND or size == 0:
         return BROKEN
     if peer.end - peer.start < header + size:
         return WAITING
     at = peer.start + header
     peer.start = at + size
+    name_size = np.int64(peer.incoming[np.uint64(at)])
+    if name_size == 0 or name_size >= size:
+        return BROKEN
     if _named(peer.incoming, at, size, _ERROR_NAME):
         return BROKEN
     if _named(peer.incoming, at, size, _PING_NAME):
