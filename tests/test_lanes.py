@@ -13,9 +13,10 @@ import pytest
 import zmq
 from conftest import PATIENCE_S, RawRig, wait_until
 
-from gatestep.direct import attach_direct, close_direct, listen, make_direct
+from gatestep.direct import attach_direct, close_direct, make_direct
 from gatestep.lanebase import CLOSED, GONE, NOTHING, SENT, STALLED, now_nsec
 from gatestep.lanes import receive, reply
+from gatestep.listening import listen
 from gatestep.wire import MAX_MESSAGE
 from gatestep.zmqlane import ZMQ_LANE, load_libzmq, make_zmq_lane, send, take
 
