@@ -222,6 +222,7 @@ def _flush(m: Any, now: int) -> None:
     """[hot] Hand the waiting entries to the log; if it is full they are counted lost."""
     desk = m.desk[0]
     size = _LOOP_SIZE + desk.entries * _ENTRY_SIZE
+    m.loop[0].undelivered = m.lane[0].undelivered
     if not send(desk.log, desk.block_at, size):
         m.loop[0].records_lost += desk.entries
     desk.entries = 0
@@ -463,7 +464,8 @@ def run_loop(m: Any) -> int:
             else:
                 _answer_holder(m, size, now)
         _take_orders(m)
-        if (desk.entries or desk.untold) and now - desk.flushed_nsec > _FLUSH_NSEC:
+        news = desk.entries or desk.untold or lane.undelivered != loop.undelivered
+        if news and now - desk.flushed_nsec > _FLUSH_NSEC:
             _flush(m, now)
     close_lane(lane)
     _flush(m, now)

@@ -70,6 +70,7 @@ LOOP = np.dtype(
         ("foreseen", "i8"),  # cells' currents that were anticipated
         ("fallbacks", "i8"),  # those that should have been and lacked what it needs
         ("records_lost", "i8"),
+        ("undelivered", "i8"),  # answers that did not leave; the lane counts them
     ],
     align=True,
 )

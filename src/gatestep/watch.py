@@ -30,6 +30,7 @@ _COUNTERS = (
     "trips",
     "clock_jumps",
     "records_lost",
+    "undelivered",
 )
 _PERCENTILES = (50.0, 90.0, 99.0, 99.9)
 _BINS_PER_OCTAVE = 16
@@ -125,7 +126,8 @@ class Watch:
             "rig": "connected" if loop["held"] else "none",
             "seq": int(loop["seq"]) if self._last is not None else None,
             **self.counters(),
-            "tick_us": float(loop["tick_us"]) or None,
+            # A clock that stands still shows a tick of 0, which is known to be wrong.
+            "tick_us": float(loop["tick_us"]) if loop["tick_us"] or loop["tick_wrong"] else None,
             "service_nsec": self.service.percentiles(),
             "uptime_s": round(time.monotonic() - self._started, 3),
         }
