@@ -132,7 +132,7 @@ def _to_hold(
     shadow: Any, v_mv: float, rest_pa: float, coming_pa: Any, delay_ms: float, dt_ms: float
 ) -> float:
     """[hot] Voltage at the start of the hold, under the currents in force until then."""
-    count = min(np.int64(np.ceil(delay_ms / dt_ms - 1e-9)), MOST_SEGMENTS)
+    count: Any = min(np.int64(np.ceil(delay_ms / dt_ms - 1e-9)), MOST_SEGMENTS)
     at_ms = 0.0
     for j in range(count, 0, -1):
         end_ms = delay_ms - (j - 1) * dt_ms

@@ -17,6 +17,7 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
+from .anticipate import forget
 from .compiling import compiled, inner
 from .inforce import HISTORY
 from .kernel import BANK, records, settle
@@ -50,6 +51,7 @@ class Order(IntEnum):
     SET_GMAX = 5
     SET_REVERSAL = 6
     MARK = 7
+    FORESEE = 8
 
 
 class Outcome(IntEnum):
@@ -79,6 +81,10 @@ ORDER = np.dtype(
         ("cell", "i8"),
         ("index", "i8"),  # bank for SWAP, conductance for SET_GMAX and SET_REVERSAL
         ("value", "f8"),
+        ("on", "i8"),  # how the cell anticipates, for SWAP and FORESEE
+        ("substeps", "i8"),
+        ("alpha", "f8"),
+        ("beta", "f8"),
     ],
     align=True,
 )
@@ -133,7 +139,7 @@ _ORDER_SIZE = ORDER.itemsize
 _TRIPPED, _DISARM = int(State.TRIPPED), int(Event.DISARM)
 _ORDER_EVENTS = np.array([Event.ARM, Event.DISARM, Event.RESET], dtype=np.int64)
 _ARM, _RESET, _STOP = int(Order.ARM), int(Order.RESET), int(Order.STOP)
-_MARK, _SWAP = int(Order.MARK), int(Order.SWAP)
+_MARK, _SWAP, _FORESEE = int(Order.MARK), int(Order.SWAP), int(Order.FORESEE)
 _SET_GMAX, _SET_REVERSAL = int(Order.SET_GMAX), int(Order.SET_REVERSAL)
 _DONE, _WAS_TRIPPED = int(Outcome.DONE), int(Outcome.TRIPPED)
 _WAS_WRONG_TICK, _WAS_STOPPING = int(Outcome.WRONG_TICK), int(Outcome.STOPPING)
@@ -194,6 +200,9 @@ def make_memory(rig: RigSpec, lane: Any, orders: int, log: int, table: Any) -> L
         cell.limit_pa = limit
         cell.slew_pa = 2.0 * limit if slew is None else slew * rig.loop.interval_us * 1e-3
         cell.low_mv, cell.high_mv = spec.limits.window_mv
+        cell.shadow.capacitance_pf = spec.capacitance_pf or 0.0
+        cell.shadow.leak_ns, cell.shadow.leak_mv = spec.input_ns or 0.0, spec.input_mv or 0.0
+        cell.shadow.substeps = 1
     for k, cell in enumerate(cells):
         cell.bank = 2 * k
     return LoopMemory(
@@ -321,6 +330,16 @@ def _swap(cell: Any, banks: Any, table: Any, bank: int) -> None:
 
 
 @inner
+def _foresee(shadow: Any, order: Any) -> None:
+    """[hot] Let a cell anticipate, or not, as an order says."""
+    shadow.on = order.on
+    shadow.substeps = order.substeps
+    shadow.alpha = order.alpha
+    shadow.beta = order.beta
+    forget(shadow)
+
+
+@inner
 def _change_state(loop: Any, kind: int) -> int:
     """[hot] Arm, disarm or reset as the transition table says; the outcome."""
     if kind == _ARM:
@@ -353,6 +372,8 @@ def _obey(m: Any, now: int) -> int:
         return _DONE
     cell = m.cells[np.uint64(order.cell)]
     bank = m.banks[np.uint64(cell.bank)]
+    if order.kind == _SWAP or order.kind == _FORESEE:
+        _foresee(cell.shadow, order)
     if order.kind == _SWAP:
         _swap(cell, m.banks, m.table, order.index)
     elif order.kind == _SET_GMAX:

@@ -22,8 +22,9 @@ import zmq
 from numba import typeof
 
 from . import __version__
+from .choosing import Choice
 from .config import LoadedRig, load_rig_models
-from .errors import GatestepError, LinkError
+from .errors import LinkError
 from .hosttune import HostTuning
 from .kernel import records
 from .loop import ORDER, Order, make_memory, run_loop
@@ -32,7 +33,7 @@ from .network import Gatekeeper
 from .shelf import Shelf, make_room
 from .states import State
 from .tables import build_tables
-from .verbs import Answer, Built, Confirmed, Verbs, Waiting, refusal
+from .verbs import Answer, Built, Confirmed, Verbs, Waiting, refusal, safely
 from .watch import LoopEvent, Watch
 from .zmqlane import load_libzmq
 
@@ -43,14 +44,23 @@ _ORDER_WAIT_S = 3.0
 _QUIET_S = 1.0
 _POLL_MS = 20
 _STATUS_S = 1.0
+_BLOCKS_A_TURN = 200
+_REQUESTS_A_TURN = 100
+_MOST_WAITING = 64
+_NEVER_PUT_OFF = ("status", "disarm", "stop")
 
 
-@dataclass(frozen=True)
+@dataclass
 class _Caller:
-    """Where an answer goes, and until when it may take."""
+    """Where an answer goes, until when it may take, and whether it was told that it took longer."""
 
     envelope: list[bytes]
     deadline: float
+    told: bool = False
+
+    def is_overdue(self) -> bool:
+        """Whether it has waited too long and does not know yet."""
+        return not self.told and time.monotonic() > self.deadline
 
 
 class Server:
@@ -110,7 +120,8 @@ class Server:
             self._facts(),
         )
         for k, model in enumerate(models):
-            self._verbs.put_in_force(k, model, build_tables(model.spec))
+            ready = self._verbs.put_in_force(k, model, build_tables(model.spec))
+            self._send_order(Order.FORESEE, k, 0, 0.0, ready.choice)
         self._thread = threading.Thread(target=self._run, name="hot loop", daemon=True)
         self._thread.start()
         self._host.confirm()
@@ -134,11 +145,19 @@ class Server:
             self._answer_built()
             self._publish_status()
             self._host.follow(self.watch.state == State.ARMED)
-        self._read_log()
+        while self._log_in.poll(0):
+            self._read_log()
         return self._result[0] if self._result else 1
 
-    def arm(self) -> None:
-        """Order the loop to arm, as ``gatestep arm`` does."""
+    def arm(self, force: bool = False) -> None:
+        """Order the loop to arm, as ``gatestep arm`` does.
+
+        Raises
+        ------
+        ControlError
+            When the loop would carry less than the model opens, unless forced.
+        """
+        self._verbs.refuse_to_ring(force)
         self._send_order(Order.ARM, 0, 0, 0.0)
 
     def order_stop(self) -> None:
@@ -194,10 +213,6 @@ class Server:
 
     def _facts(self) -> Answer:
         spec = self.rig.spec
-        if spec.loop.anticipate is True:
-            self._say(
-                "loop.anticipate = true: this version cannot anticipate; it runs the plain loop"
-            )
         if spec.record:
             self._say("[record]: this version keeps no record")
         return {
@@ -205,7 +220,6 @@ class Server:
             "pid": os.getpid(),
             "rig_file": str(self.rig.path),
             "lane": self._port.kind,
-            "anticipate": False,
             "recording": False,
             "interval_us": spec.loop.interval_us,
             "budget_us": spec.loop.budget,
@@ -230,16 +244,24 @@ class Server:
         self._host.tune_thread()
         self._result.append(int(run_loop(self._memory)))
 
-    def _send_order(self, kind: Order, cell: int, index: int, value: float) -> int:
+    def _send_order(
+        self, kind: Order, cell: int, index: int, value: float, choice: Choice | None = None
+    ) -> int:
         self._orders_sent += 1
         order = records(ORDER)
         order[0].number, order[0].kind = self._orders_sent, kind
         order[0].cell, order[0].index, order[0].value = cell, index, value
+        if choice is not None:
+            order[0].on, order[0].substeps = choice.on, choice.substeps
+            order[0].alpha, order[0].beta = choice.alpha, choice.beta
         self._orders_out.send(order.tobytes())
         return self._orders_sent
 
     def _read_log(self) -> None:
-        while self._log_in.poll(0):
+        """Read on in the loop's log, but not so long that a request or a signal has to wait."""
+        for _ in range(_BLOCKS_A_TURN):
+            if not self._log_in.poll(0):
+                return
             events, samples = self.watch.take(self._log_in.recv())
             for event in events:
                 if event.kind == "order":
@@ -250,21 +272,28 @@ class Server:
             self._publish_samples(samples)
 
     def _take_requests(self) -> None:
-        for _ in range(100):
+        for _ in range(_REQUESTS_A_TURN):
             if not self._control.poll(0):
                 return
             *envelope, body = self._control.recv_multipart()
             caller = _Caller(envelope, time.monotonic() + _ORDER_WAIT_S)
-            try:
-                request = msgpack.unpackb(body)
-            except Exception as fault:
-                self._reply(caller, refusal(f"request: not MessagePack ({fault})"))
-                continue
-            answer = self._verbs.handle(request)
+            answer = self._handle(body)
             if isinstance(answer, dict):
                 self._reply(caller, answer)
             else:
                 self._waiting.append((answer, caller))
+
+    def _handle(self, body: bytes) -> Answer | Waiting:
+        """Carry out a request's bytes; a crowd of others never stands before a disarm."""
+        try:
+            request = msgpack.unpackb(body)
+        except Exception as fault:
+            reason = str(fault) or type(fault).__name__
+            return refusal(f"request: not a MessagePack map with text for keys ({reason})")
+        urgent = isinstance(request, dict) and request.get("verb") in _NEVER_PUT_OFF
+        if len(self._waiting) >= _MOST_WAITING and not urgent:
+            return refusal(f"{_MOST_WAITING} requests are waiting already; ask again later")
+        return self._verbs.handle(request)
 
     def _confirm(self, event: LoopEvent) -> None:
         """Answer the caller whose order the loop has carried out."""
@@ -278,17 +307,17 @@ class Server:
         for waiting, caller in list(self._waiting):
             if isinstance(waiting, Built) and waiting.future.done():
                 self._finish(waiting, caller, waiting.future)
-            elif isinstance(waiting, Confirmed) and time.monotonic() > caller.deadline:
-                self._waiting.remove((waiting, caller))
-                self._reply(caller, refusal("the loop did not confirm the order in time"))
+            elif isinstance(waiting, Confirmed) and caller.is_overdue():
+                # It stays among those waiting: the loop may yet carry the order out.
+                caller.told = True
+                late = "the loop has not confirmed the order in time; look at the status"
+                self._reply(caller, refusal(late))
 
     def _finish(self, waiting: Waiting, caller: _Caller, result: Any) -> None:
         self._waiting.remove((waiting, caller))
-        try:
-            answer = waiting.finish(result)
-        except GatestepError as fault:
-            answer = refusal(str(fault))
-        self._reply(caller, answer)
+        answer = safely(lambda: waiting.finish(result))
+        if not caller.told:
+            self._reply(caller, answer)
 
     def _reply(self, caller: _Caller, answer: Answer) -> None:
         try:

@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from .choosing import Choice
 from .errors import ControlError
 from .library import LoadedModel
 from .tables import Tables, fill_bank
@@ -27,6 +28,7 @@ class Ready:
 
     model: LoadedModel
     tables: Tables
+    choice: Choice
     bank: int
     base: int
 
@@ -57,7 +59,7 @@ class Shelf:
         self.in_force: list[Ready | None] = [None] * cells
         self.prepared: list[Ready | None] = [None] * cells
 
-    def prepare(self, cell: int, model: LoadedModel, tables: Tables) -> Ready:
+    def prepare(self, cell: int, model: LoadedModel, tables: Tables, choice: Choice) -> Ready:
         """Write a model into the cell's spare bank, over one prepared before.
 
         Raises
@@ -71,7 +73,7 @@ class Shelf:
         base = self._find_room(tables.table.size, model.name)
         fill_bank(tables, self._banks[bank], self._table[base : base + tables.table.size])
         self._banks[bank].start = base
-        ready = Ready(model, tables, bank, base)
+        ready = Ready(model, tables, choice, bank, base)
         self.prepared[cell] = ready
         return ready
 

@@ -7,12 +7,13 @@ by itself; the server carries requests in and answers out.
 
 from __future__ import annotations
 
-import math
 from collections.abc import Callable
 from concurrent.futures import Executor, Future
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from reprlib import repr as show
 from typing import Any
 
+from .choosing import Choice, advice, choose
 from .config import LoadedRig
 from .errors import ControlError, GatestepError
 from .library import LoadedModel, load_model
@@ -23,7 +24,8 @@ from .tables import Tables, build_tables
 from .watch import LoopEvent, Watch
 
 Answer = dict[str, Any]
-SendOrder = Callable[[Order, int, int, float], int]
+BuiltModel = tuple[LoadedModel, Tables, Choice]
+SendOrder = Callable[[Order, int, int, float, Choice | None], int]
 
 _PARAMETERS = {
     "gmax_ns": (Order.SET_GMAX, MAX_GMAX_NS),
@@ -44,17 +46,21 @@ class Confirmed:
 class Built:
     """An answer that waits until tables are built."""
 
-    future: Future[tuple[LoadedModel, Tables]]
-    finish: Callable[[Future[tuple[LoadedModel, Tables]]], Answer]
+    future: Future[BuiltModel]
+    finish: Callable[[Future[BuiltModel]], Answer]
 
 
 Waiting = Confirmed | Built
 
 
-def build_model(name: str, rig: LoadedRig) -> tuple[LoadedModel, Tables]:
-    """Read a model and build its tables; ``name`` as in a rig file."""
+def build_model(name: str, rig: LoadedRig, cell: int) -> BuiltModel:
+    """Read a model, build its tables and choose how the cell anticipates with it.
+
+    ``name`` as in a rig file; ``cell`` is the cell's place in it.
+    """
     model = load_model(name, relative_to=rig.folder)
-    return model, build_tables(model.spec)
+    tables = build_tables(model.spec)
+    return model, tables, choose(rig.spec.cell[cell], tables, rig.spec.loop)
 
 
 class Verbs:
@@ -85,7 +91,8 @@ class Verbs:
         self._rig, self._shelf, self._watch = rig, shelf, watch
         self._send_order, self._builder, self._facts = send_order, builder, facts
         self._names = [cell.name for cell in rig.spec.cell]
-        self._busy: set[int] = set()
+        self._busy: dict[int, str] = {}
+        self._changed: set[int] = set()
         self._parameters: list[dict[str, float]] = [{} for _ in self._names]
         self._verbs: dict[str, tuple[Callable[..., Answer | Waiting], set[str]]] = {
             "status": (self.status, set()),
@@ -101,10 +108,7 @@ class Verbs:
 
     def handle(self, request: Any) -> Answer | Waiting:
         """Carry out a request; errors come back as answers, never as exceptions."""
-        try:
-            return self._dispatch(request)
-        except GatestepError as fault:
-            return refusal(str(fault))
+        return safely(lambda: self._dispatch(request))
 
     def _dispatch(self, request: Any) -> Answer | Waiting:
         if not isinstance(request, dict) or not isinstance(request.get("verb"), str):
@@ -112,22 +116,32 @@ class Verbs:
         arguments = {k: v for k, v in request.items() if k != "verb"}
         name = request["verb"]
         if name not in self._verbs:
-            raise ControlError(f"verb {name!r} is not known; known are {', '.join(self._verbs)}")
+            raise ControlError(
+                f"verb {show(name)} is not known; known are {', '.join(self._verbs)}"
+            )
         verb, allowed = self._verbs[name]
         unknown = sorted(str(k) for k in arguments if k not in allowed)
         if unknown:
             known = ", ".join(sorted(allowed)) or "no arguments"
-            raise ControlError(f"{name}: {', '.join(unknown)} not known; it takes {known}")
+            raise ControlError(f"{name}: {show(unknown)} not known; it takes {known}")
         return verb(**arguments)
 
     def status(self) -> Answer:
         """State, counters, percentiles and cells."""
-        return {"ok": True, **self._watch.summary(), **self._facts, "cells": self._cells()}
+        anticipate = any(ready.choice.on for ready in self._ready())
+        return {
+            "ok": True,
+            **self._watch.summary(),
+            **self._facts,
+            "anticipate": anticipate,
+            "cells": self._cells(),
+        }
 
     def arm(self, force: bool = False) -> Waiting:
         """Let the model's current flow."""
         if not isinstance(force, bool):
-            raise ControlError(f"arm: force is {force!r}; it is true or false")
+            raise ControlError(f"arm: force is {show(force)}; it is true or false")
+        self.refuse_to_ring(force)
         return self._ordered(Order.ARM, after=lambda e: self._armed(e, force))
 
     def disarm(self) -> Waiting:
@@ -155,9 +169,9 @@ class Verbs:
             raise ControlError("load: model is missing; give a shipped model's name or a file")
         self._claim("load", k)
         try:
-            future = self._builder.submit(build_model, model, self._rig)
+            future = self._builder.submit(build_model, model, self._rig, k)
         except BaseException:
-            self._busy.discard(k)
+            self._busy.pop(k)
             raise
         return Built(future, lambda built: self._loaded(k, built))
 
@@ -170,34 +184,65 @@ class Verbs:
                 f"swap: no model is prepared for cell {self._names[k]}; load one first"
             )
         self._claim("swap", k)
-        return self._ordered(Order.SWAP, k, ready.bank, after=lambda e: self._swapped(k, ready))
+        return self._ordered(
+            Order.SWAP, k, ready.bank, after=lambda e: self._swapped(k, ready), choice=ready.choice
+        )
 
     def set(
         self, key: str | None = None, value: float | None = None, cell: str | None = None
     ) -> Waiting:
         """Change gmax or reversal of a conductance in force."""
         k = self._cell("set", cell)
+        if self._busy.get(k) == "swap":
+            raise ControlError(
+                f"set: cell {self._names[k]} has a swap under way; wait for its answer, since "
+                "the order would meet the other model"
+            )
         index, parameter = self._parameter(k, key)
         order, limit = _PARAMETERS[parameter]
         number = isinstance(value, int | float) and not isinstance(value, bool)
-        if not number or not math.isfinite(float(value or 0)) or abs(float(value or 0)) > limit:
+        # Not "> limit": NaN compares false with everything.
+        if value is None or not number or not abs(value) <= limit:
             raise ControlError(
-                f"set: {key} = {value!r}; it is a number from {-limit:g} to {limit:g}"
+                f"set: {key} = {show(value)}; it is a number from {-limit:g} to {limit:g}"
             )
-        new = float(value or 0)
+        new = float(value)
 
         def after(_: LoopEvent) -> Answer:
             self._parameters[k][str(key)] = new
+            self._changed.add(k)
             return {"cell": self._names[k], "key": key, "value": new}
 
         return self._ordered(order, k, index, new, after)
 
     def put_in_force(self, cell: int, model: LoadedModel, tables: Tables) -> Ready:
         """Prepare a model before the loop runs and count it as in force."""
-        ready = self._shelf.prepare(cell, model, tables)
+        choice = choose(self._rig.spec.cell[cell], tables, self._rig.spec.loop)
+        ready = self._shelf.prepare(cell, model, tables, choice)
         self._shelf.put_in_force(cell)
         self._parameters[cell] = _file_parameters(ready)
         return ready
+
+    def refuse_to_ring(self, force: bool) -> None:
+        """Refuse to arm a loop that carries less than its model opens, unless forced."""
+        self._choose_again()
+        against = advice([ready.choice for ready in self._ready()])
+        if against and not force:
+            raise ControlError(f"arm: {against}")
+
+    def _ready(self) -> list[Ready]:
+        """The models in force; every cell has one."""
+        return [ready for ready in self._shelf.in_force if ready is not None]
+
+    def _choose_again(self) -> None:
+        """Let a gmax that was set count in how its cell anticipates, and in the margin."""
+        for k, ready in enumerate(self._ready()):
+            if k in self._changed:
+                tables = with_parameters(ready.tables, self._parameters[k])
+                choice = choose(self._rig.spec.cell[k], tables, self._rig.spec.loop)
+                self._shelf.in_force[k] = replace(ready, choice=choice)
+                self._send_order(Order.FORESEE, k, 0, 0.0, choice)
+        self._changed.clear()
 
     def _ordered(
         self,
@@ -206,17 +251,15 @@ class Verbs:
         index: int = 0,
         value: float = 0.0,
         after: Callable[[LoopEvent], Answer] = lambda _: {},
+        choice: Choice | None = None,
     ) -> Confirmed:
-        number = self._send_order(order, cell, index, value)
-        return Confirmed(
-            number,
-            lambda e: {
-                "ok": True,
-                "state": self._watch.state.name.lower(),
-                "seq": e.seq,
-                **after(e),
-            },
-        )
+        number = self._send_order(order, cell, index, value, choice)
+
+        def finish(event: LoopEvent) -> Answer:
+            state = self._watch.state.name.lower()
+            return {"ok": True, "state": state, "seq": event.seq, **after(event)}
+
+        return Confirmed(number, finish)
 
     def _armed(self, event: LoopEvent, force: bool) -> Answer:
         if event.outcome == Outcome.TRIPPED:
@@ -232,43 +275,45 @@ class Verbs:
             )
         return {"forced": force}
 
-    def _loaded(self, k: int, built: Future[tuple[LoadedModel, Tables]]) -> Answer:
-        self._busy.discard(k)
-        model, tables = built.result()
-        ready = self._shelf.prepare(k, model, tables)
+    def _loaded(self, k: int, built: Future[BuiltModel]) -> Answer:
+        self._busy.pop(k)
+        model, tables, choice = built.result()
+        ready = self._shelf.prepare(k, model, tables, choice)
         return {"ok": True, "cell": self._names[k], "model": model.name, **_table_facts(ready)}
 
     def _swapped(self, k: int, ready: Ready) -> Answer:
-        self._busy.discard(k)
+        self._busy.pop(k)
         self._shelf.put_in_force(k)
         self._parameters[k] = _file_parameters(ready)
+        self._changed.discard(k)
         return {"cell": self._names[k], "model": ready.model.name}
 
     def _claim(self, verb: str, k: int) -> None:
         """One load or swap a cell at a time: both concern its spare bank."""
         if k in self._busy:
             raise ControlError(
-                f"{verb}: cell {self._names[k]} has a load or swap under way; wait for its answer"
+                f"{verb}: cell {self._names[k]} has a {self._busy[k]} under way; "
+                "wait for its answer"
             )
-        self._busy.add(k)
+        self._busy[k] = verb
 
     def _cell(self, verb: str, name: str | None) -> int:
         if name is None and len(self._names) == 1:
             return 0
         if name in self._names:
             return self._names.index(name)
-        found = "cell is missing" if name is None else f"cell {name!r} is not on this rig"
+        found = "cell is missing" if name is None else f"cell {show(name)} is not on this rig"
         raise ControlError(f"{verb}: {found}; its cells are {', '.join(self._names)}")
 
     def _parameter(self, k: int, key: str | None) -> tuple[int, str]:
         ready = self._shelf.in_force[k]
         assert ready is not None, "every cell has a model in force"
         names = [c.name for c in ready.model.spec.conductance]
-        conductance, _, parameter = str(key).partition(".")
+        conductance, _, parameter = key.partition(".") if isinstance(key, str) else ("", "", "")
         if conductance not in names or parameter not in _PARAMETERS:
             known = ", ".join(f"{n}.{p}" for n in names for p in _PARAMETERS)
             raise ControlError(
-                f"set: {key!r} is no parameter of {ready.model.name}; it has {known}"
+                f"set: {show(key)} is no parameter of {ready.model.name}; it has {known}"
             )
         return names.index(conductance), parameter
 
@@ -286,6 +331,7 @@ class Verbs:
                     **self._watch.cell(k),
                     "parameters": dict(self._parameters[k]),
                     "limits": spec.limits.model_dump(),
+                    "anticipation": in_force.choice.plain_data(),
                     **_table_facts(in_force),
                 }
             )
@@ -295,6 +341,31 @@ class Verbs:
 def refusal(text: str) -> Answer:
     """The answer that says why not."""
     return {"ok": False, "error": text}
+
+
+def safely(work: Callable[[], Answer | Waiting]) -> Any:
+    """What ``work`` gives, or the refusal that says why it could not.
+
+    No request, whatever is in it, may end the thread that carries disarm and stop.
+    """
+    try:
+        return work()
+    except GatestepError as fault:
+        return refusal(str(fault))
+    except Exception as fault:
+        return refusal(
+            f"the request met a fault in the server, {type(fault).__name__}: {fault}; "
+            "nothing was changed by it that an answer has not confirmed"
+        )
+
+
+def with_parameters(tables: Tables, parameters: dict[str, float]) -> Tables:
+    """The tables of a model with the gmax and reversals that were set."""
+    bank = tables.bank.copy()
+    for c, conductance in enumerate(tables.spec.conductance):
+        for parameter in _PARAMETERS:
+            bank[parameter][..., c] = parameters[f"{conductance.name}.{parameter}"]
+    return replace(tables, bank=bank)
 
 
 def _table_facts(ready: Ready) -> Answer:

@@ -38,7 +38,7 @@ def serve(rig_file: Path, arm: bool, force: bool, json_output: bool) -> int:
     try:
         server.start()
         if arm:
-            server.arm()
+            server.arm(force)
             say("armed from the start" + (", whatever the check says" if force else ""))
         _announce(server.endpoints(), json_output)
         result = server.attend(until=lambda: stop_asked)
