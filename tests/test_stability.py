@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import json
 import math
 
@@ -363,7 +364,7 @@ def test_auto_needs_the_capacitance_and_true_insists_on_it(squid):
 
 
 def test_what_the_rig_file_says_wins(squid):
-    """true and false; each setting alone, with the others chosen around it; all three."""
+    """Both true and false; each setting alone, with the others chosen around it; all three."""
     assert not chosen_for(squid, 20, NEXT_TICK, anticipate=False).on
     large = {"electrode": {"residue_mohm": 2.0}}
     assert chosen_for(squid, 10, ON_ARRIVAL, anticipate=True, **large).on
@@ -399,7 +400,7 @@ def test_a_small_conductance_is_followed_with_the_whole_lead():
 
 
 def test_a_model_without_conductance_has_no_limit_to_meet():
-    """gmax 0: margins are infinite, and None in JSON, which knows no infinity."""
+    """With gmax 0 margins are infinite, and None in JSON, which knows no infinity."""
     choice = chosen_for(leak_of(0.0), 20, NEXT_TICK)
     assert choice.plain_margin == choice.anticipating_margin == math.inf
     data = json.loads(json.dumps(choice.plain_data(), allow_nan=False))
@@ -443,6 +444,6 @@ def test_candidates_come_in_order_of_fidelity():
     cell = CellSpec(name="a", model="-", capacitance_pf=30.0)
     tried = list(candidates(cell, Circuit(30.0, 0.05, 0.05)))
     reach = [s.beta - (1.0 - s.alpha) / s.alpha for s in tried]
-    assert all(a >= b - 1e-9 for a, b in zip(reach, reach[1:], strict=False))
+    assert all(a >= b - 1e-9 for a, b in itertools.pairwise(reach))
     assert tried[0] == Settings(4, 1.0, 2.0)
     assert len(tried) == 4 * len(ALPHAS) + 9
