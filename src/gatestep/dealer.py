@@ -11,6 +11,7 @@ from .errors import LinkError
 from .zmtp import GREETING_BYTES
 
 CONNECT_S = 3.0
+_UP_TO_VERSION = 12
 _READY = b"\x05READY" + b"\x0bSocket-Type\x00\x00\x00\x06DEALER" + b"\x08Identity" + bytes(4)
 
 
@@ -62,7 +63,8 @@ def _dial(endpoint: str, timeout_s: float) -> socket.socket:
 
 
 def _shake_hands(link: socket.socket, endpoint: str) -> None:
-    link.sendall(GREETING_BYTES)
+    # Our mechanism goes last: a server that has another hangs up on it without a word.
+    link.sendall(GREETING_BYTES[:_UP_TO_VERSION])
     theirs = _read(link, len(GREETING_BYTES))
     if theirs[0] != 0xFF or theirs[9] != 0x7F or theirs[10] < 3:
         raise LinkError(f"loop endpoint {endpoint}: what listens there does not speak ZMTP 3")
@@ -72,7 +74,7 @@ def _shake_hands(link: socket.socket, endpoint: str) -> None:
             f"loop endpoint {endpoint}: the server asks for {mechanism}; the measuring client "
             "speaks NULL only. Measure the rig file's private server instead: stop this one"
         )
-    link.sendall(bytes([4, len(_READY)]) + _READY)
+    link.sendall(GREETING_BYTES[_UP_TO_VERSION:] + bytes([4, len(_READY)]) + _READY)
     flags, size = _read(link, 2)
     body = _read(link, size)
     if flags != 4 or not body.startswith(b"\x05READY"):

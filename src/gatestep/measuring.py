@@ -46,6 +46,7 @@ WAVEFORM = "made up: a cell at rest at -65 mV that spikes at 50 Hz"
 _PERIOD_MS = 20.0
 _FLAT_ROWS_A_SECOND = 250_000
 _LOOK_S = 0.1
+_START_NSEC = 200_000
 _PR_SET_TIMERSLACK = 29
 
 
@@ -187,24 +188,28 @@ class Probe:
 
     def paced(self, ticks: int, progress: Progress | None = None) -> Run:
         """Send a sample at each of so many ticks of the monotonic clock."""
-        start_nsec = time.monotonic_ns() + 2_000_000
         columns = make_columns(ticks)
-        self._begin(start_nsec)
-        seconds = ticks * self._interval_us * 1e-6
-        return self._run(lambda: run_paced(self._memory, columns), columns, seconds, progress)
+        self._begin()
+
+        def body() -> int:
+            # Set on the client's own thread: the thread may have been slow to start.
+            self._memory.probe[0].start_nsec = time.monotonic_ns() + _START_NSEC
+            return int(run_paced(self._memory, columns))
+
+        return self._run(body, columns, ticks * self._interval_us * 1e-6, progress)
 
     def flat(self, seconds: float, progress: Progress | None = None) -> Run:
         """Send, wait for the answer, send the next, for so long."""
         columns = make_columns(max(1, int(seconds * _FLAT_ROWS_A_SECOND)))
-        self._begin(0)
+        self._begin()
         until = time.monotonic_ns() + int(seconds * 1e9)
         return self._run(lambda: run_flat(self._memory, columns, until), columns, seconds, progress)
 
-    def _begin(self, start_nsec: int) -> None:
+    def _begin(self) -> None:
         """A fresh run; between runs a rig's output goes to 0 pA by itself."""
         probe = self._memory.probe[0]
-        probe.start_nsec, probe.first = start_nsec, self._seq
-        probe.halt = probe.row = probe.outstanding = 0
+        probe.start_nsec, probe.first = 0, self._seq
+        probe.halt = probe.row = probe.outstanding = probe.settled = 0
         probe.in_force = probe.coming = NIL
         probe.garbled = probe.strays = probe.unsent = 0
 

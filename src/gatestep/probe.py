@@ -23,6 +23,7 @@ from numba import types
 from .compiling import compiled, inner
 from .direct import POLL
 from .kernel import records
+from .rigoutput import put_out, report
 from .wire import ANSWER, LIVE, MAX_MESSAGE, NIL, REFUSED, SAMPLE, read_answer, write_sample
 from .zmtp import BROKEN, MESSAGE, OPEN, PEER, feed, make_room, put_answer
 
@@ -38,6 +39,7 @@ class Status(IntEnum):
     ARMED = 5
     MALFORMED = 6
     NO_ANSWER = 7
+    SILENT = 8
 
 
 PROBE = np.dtype(
@@ -58,11 +60,15 @@ PROBE = np.dtype(
         ("row", "i8"),  # next row
         ("outstanding", "i8"),
         ("sent_nsec", "i8"),  # of the newest sample
+        ("since_nsec", "i8"),  # newest answer, or the first sample that lacks one
         ("in_force", "i8"),  # answer at the output, NIL if none
         ("lag_us", "f8"),
         ("coming", "i8"),  # answer that the output takes at the start of tick ...
         ("coming_row", "i8"),  # ... this one
         ("coming_lag_us", "f8"),
+        ("settled", "i8"),  # whether what the next sample reports is known already ...
+        ("told", "i8"),  # ... as this answer ...
+        ("told_lag_us", "f8"),  # ... and this lag
         # Counters of the run.
         ("garbled", "i8"),  # messages that are no answer
         ("strays", "i8"),  # answers to no sample of this run, or second ones
@@ -107,6 +113,7 @@ class Columns(NamedTuple):
 _DONE, _CLOSED, _HALTED = int(Status.DONE), int(Status.CLOSED), int(Status.HALTED)
 _BROKEN, _REFUSED, _ARMED = int(Status.BROKEN), int(Status.REFUSED), int(Status.ARMED)
 _MALFORMED, _NO_ANSWER = int(Status.MALFORMED), int(Status.NO_ANSWER)
+_SILENT = int(Status.SILENT)
 _MAX_MESSAGE = MAX_MESSAGE
 _MONOTONIC = 1
 _POLLIN = 1
@@ -186,32 +193,8 @@ def _write_out(probe: Any, peer: Any) -> None:
     for k in range(np.uint64(rest)):
         peer.outgoing[k] = peer.outgoing[np.uint64(sent) + k]
     peer.pending = rest
-
-
-@inner
-def _put_out(probe: Any, answer: Any, now: int) -> None:
-    """[hot] Let an answer go to the output: at once, or at the start of the next tick."""
-    row = answer.seq - probe.first
-    since_start = now - probe.start_nsec
-    if probe.on_arrival:
-        if answer.seq > probe.in_force:
-            probe.in_force = answer.seq
-            probe.lag_us = max(0.0, (since_start - row * probe.interval_nsec) / 1000.0)
-        return
-    tick = np.int64(floor(since_start / probe.interval_nsec)) + 1
-    if probe.coming != NIL and probe.coming_row < tick:
-        _take_force(probe)
-    if answer.seq > probe.coming:
-        probe.coming = answer.seq
-        probe.coming_row = tick
-        probe.coming_lag_us = (tick - row) * probe.interval_nsec / 1000.0
-
-
-@inner
-def _take_force(probe: Any) -> None:
-    """[hot] The answer that waited for its tick is at the output now."""
-    probe.in_force = probe.coming
-    probe.lag_us = probe.coming_lag_us
+    if rest == 0:
+        peer.waiting = 0
 
 
 @inner
@@ -232,8 +215,9 @@ def _note(m: Any, columns: Any, now: int) -> Any:
     columns.service_nsec[r] = answer.service_nsec
     columns.flags[r] = answer.flags
     probe.outstanding -= 1
+    probe.since_nsec = now
     if probe.start_nsec:
-        _put_out(probe, answer, now)
+        put_out(probe, answer, now)
     if answer.flags & REFUSED:
         return _REFUSED
     if answer.flags & LIVE and not probe.may_be_live:
@@ -251,8 +235,8 @@ def _read_answers(m: Any, columns: Any, now: int) -> Any:
             return _BROKEN
         if found != MESSAGE:
             return _DONE
-        whole = peer.size <= _MAX_MESSAGE
-        if whole and read_answer(peer.message, peer.size, probe.cells, m.answer[0]):
+        whole = peer.message_size <= _MAX_MESSAGE
+        if whole and read_answer(peer.message, peer.message_size, probe.cells, m.answer[0]):
             status = _note(m, columns, now)
             if status != _DONE:
                 return status
@@ -284,12 +268,9 @@ def _take_answers(m: Any, columns: Any) -> Any:
 def _send_sample(m: Any, columns: Any, row: int, now: int) -> None:
     """[hot] Send the sample of a row, if the socket has room for it."""
     probe, sample, peer = m.probe[0], m.sample[0], m.peer[0]
-    if probe.coming != NIL and probe.coming_row < row:
-        _take_force(probe)
+    report(probe, sample, row)
     sample.seq = probe.first + row
     sample.t_us = sample.seq * probe.interval_nsec / 1000.0
-    sample.in_force = probe.in_force
-    sample.lag_us = probe.lag_us if probe.in_force != NIL else np.float64(NIL)
     place = np.uint64(sample.seq % m.wave_mv.shape[0])
     for k in range(np.uint64(probe.cells)):
         sample.v_mv[k] = m.wave_mv[place, k]
@@ -299,6 +280,8 @@ def _send_sample(m: Any, columns: Any, row: int, now: int) -> None:
         return
     columns.sent_nsec[np.uint64(row)] = now
     probe.sent_nsec = now
+    if probe.outstanding == 0:
+        probe.since_nsec = now
     probe.outstanding += 1
     _write_out(probe, peer)
 
@@ -315,6 +298,8 @@ def _wait_until(m: Any, columns: Any, edge_nsec: int) -> Any:
             return status, now
         if probe.halt != 0:
             return _HALTED, now
+        if probe.outstanding > 0 and now - probe.since_nsec > probe.patience_nsec:
+            return _SILENT, now
         if rest > probe.margin_nsec and (probe.outstanding == 0 or not probe.spin):
             _sleep(probe, rest - probe.margin_nsec)
 
@@ -345,8 +330,9 @@ def run_paced(m: Any, columns: Any) -> Any:
     """[hot] One sample a tick of the monotonic clock for every row; a :class:`Status`.
 
     A tick that had wholly passed before its sample could be sent gets none, as a
-    converter's clock does not wait; ``seq`` goes on across it. After the last sample
-    ``NO_ANSWER`` means that some answers never came.
+    converter's clock does not wait; ``seq`` goes on across it. ``SILENT``: no answer at
+    all came for ``patience_nsec``. After the last sample ``NO_ANSWER`` means that some
+    answers never came.
     """
     probe = m.probe[0]
     rows = columns.sent_nsec.size

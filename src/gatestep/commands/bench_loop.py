@@ -154,6 +154,7 @@ def fault_of(run: Run, endpoint: str) -> str | None:
     reasons = {
         Status.CLOSED: "the server ended the connection; see whether it still runs",
         Status.HALTED: "stopped",
+        Status.SILENT: "no answer comes any more; see whether the server still runs",
         Status.BROKEN: "what came is not ZMTP; see what listens there",
         Status.REFUSED: "another rig holds the loop now; measure when it is free",
         Status.ARMED: "the server was armed while it was measured; measuring has stopped at once",

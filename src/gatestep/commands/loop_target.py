@@ -25,6 +25,15 @@ from ..specs import ControlSpec, FeedSpec, LimitsSpec, NetworkSpec, RecordSpec, 
 START_S = 600.0
 """How long a private server may take to start; the first start on a machine compiles."""
 _ARM_S = 10.0
+_PR_SET_PDEATHSIG = 1
+# Like 'python -m gatestep', but ended in order when this process ends, however it does.
+_SERVE = f"""
+import ctypes
+prctl = getattr(ctypes.CDLL(None), "prctl", lambda *_: 0)
+prctl({_PR_SET_PDEATHSIG}, {int(signal.SIGINT)}, 0, 0, 0)
+from gatestep.cli import main
+main()
+"""
 _CONNECT_S = 1.0
 
 
@@ -183,7 +192,7 @@ def private_server(rig: LoadedRig, say: Callable[[str], None]) -> Iterator[Targe
         file = folder / "rig.toml"
         text = "".join(f"{k} = {as_toml(v)}\n" for k, v in content.items())
         file.write_text(text, encoding="utf-8")
-        command = [sys.executable, "-m", "gatestep", "serve", str(file)]
+        command = [sys.executable, "-c", _SERVE, "serve", str(file)]
         with (folder / "said").open("w", encoding="utf-8") as said:
             process = subprocess.Popen(
                 [*command, "--arm", "--force", "--json"], stdout=subprocess.PIPE, stderr=said
