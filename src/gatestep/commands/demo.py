@@ -8,10 +8,6 @@ the loop runs, it fires and adapts. Cell and data are simulated.
 from __future__ import annotations
 
 import json
-import signal
-import socket
-import subprocess
-import sys
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -20,6 +16,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from ..errors import FileError, LinkError, MissingExtraError
+from .demo_rigs import STATEMENT, check_alive, finish, processes, write_rig
 
 if TYPE_CHECKING:
     from ..control import Control
@@ -29,24 +26,9 @@ INTERVAL_US = 25.0
 STEP_PA = 250.0
 SHORTEST_S, LONGEST_S = 0.3, 60.0
 PARTS = ("cell alone", "with Na and K", "with Na, K and M-type K")
-STATEMENT = "Simulated cell and simulated data: no recording from a real cell."
 _ON, _OFF = 0.2, 0.9  # of the step, as a share of each part
 
-_RIG = """\
-# Written by gatestep demo. {statement}
-[loop]
-endpoint = "{loop}"
-interval_us = {interval_us}
-
-[control]
-endpoint = "{control}"
-
-[feed]
-endpoint = "{feed}"
-
-[limits]
-silence_ms = 20000          # the simulated rig waits while the server compiles
-
+_CELLS = """\
 [[cell]]
 name = "cell"
 model = "regular-spiking"
@@ -64,6 +46,29 @@ leak_ns = 4.0
 leak_mv = -70.0
 noise_mv = 0.02
 {steps}
+"""
+
+PROOF_US = 100.0
+PROOF_PARTS = ("plain loop", "anticipating")
+_PROOF_CELL = """\
+[[cell]]
+name = "{name}"
+model = "regular-spiking-m"
+{capacitance}
+[cell.limits]
+current_pa = 40000
+window_mv = [-200, 200]
+
+"""
+_PROOF_SIMULATED = """\
+[[simulated.cell]]
+capacitance_pf = 118.4
+leak_ns = 4.0
+leak_mv = -70.0
+[[simulated.cell.step]]
+start_ms = 30
+stop_ms = 230
+current_pa = {step_pa}
 """
 
 
@@ -106,15 +111,17 @@ def demo(seconds: float, out: Path, json_output: bool) -> int:
     if not SHORTEST_S <= seconds <= LONGEST_S:
         raise FileError(f"--seconds {seconds:g}: give {SHORTEST_S:g} to {LONGEST_S:g} seconds")
     parts = scenario(seconds)
-    rig_file = _write_rig(out, seconds, parts)
-    with _bar(not json_output) as progress, _processes(rig_file, out) as (server, rig, control):
+    rig_file = _write_scenario(out, seconds, parts)
+    with _bar(not json_output) as progress:
         progress("starting; the first start on a machine compiles", None)
-        confirmed = _play(rig, server, control, parts, progress)
-        figures = _finish(rig)
-        status = control.status()
-        control.stop()
-        server.wait(10)
-    summary = _summary(out, parts, confirmed, figures, status)
+        with processes(rig_file, out / "demo.npz") as (server, rig, control):
+            confirmed = _play(rig, server, control, parts, progress)
+            figures = finish(rig)
+            status = control.status()
+            control.stop()
+            server.wait(10)
+        proof = _prove(out, progress)
+    summary = _summary(out, parts, confirmed, figures, status, proof)
     print(json.dumps(summary) if json_output else _text(summary))
     return 0
 
@@ -128,67 +135,43 @@ def scenario(seconds: float) -> list[Part]:
     ]
 
 
-def _write_rig(out: Path, seconds: float, parts: list[Part]) -> Path:
-    loop, control, feed = (f"tcp://127.0.0.1:{port}" for port in _free_ports(3))
+def _write_scenario(out: Path, seconds: float, parts: list[Part]) -> Path:
     steps = "\n".join(
         f"[[simulated.cell.step]]\nstart_ms = {p.step_ms}\nstop_ms = {p.stop_ms}\n"
         f"current_pa = {STEP_PA}"
         for p in parts
     )
-    text = _RIG.format(
-        statement=STATEMENT,
-        loop=loop,
-        control=control,
-        feed=feed,
-        interval_us=INTERVAL_US,
-        seconds=seconds,
-        steps=steps,
+    return write_rig(out / "rig.toml", INTERVAL_US, _CELLS.format(seconds=seconds, steps=steps))
+
+
+def _write_proof(out: Path) -> Path:
+    """Two like cells: the loop anticipates for the one whose capacitance it is told."""
+    stated = ("# capacitance not stated: a plain loop", "capacitance_pf = 118.4")
+    cells = "".join(
+        _PROOF_CELL.format(name=name.replace(" ", "-"), capacitance=text)
+        for name, text in zip(PROOF_PARTS, stated, strict=True)
     )
-    try:
-        out.mkdir(parents=True, exist_ok=True)
-        (out / "rig.toml").write_text(text, encoding="utf-8")
-    except OSError as fault:
-        raise FileError(f"--out {out}: {fault.strerror or fault}; choose another folder") from fault
-    return out / "rig.toml"
+    simulated = '[simulated]\npace = "lockstep"\nseconds = 0.26\n'
+    simulated += 2 * _PROOF_SIMULATED.format(step_pa=STEP_PA)
+    return write_rig(out / "anticipation.toml", PROOF_US, cells + simulated)
 
 
-def _free_ports(count: int) -> list[int]:
-    sockets = [socket.socket() for _ in range(count)]
-    try:
-        for each in sockets:
-            each.bind(("127.0.0.1", 0))
-        return [each.getsockname()[1] for each in sockets]
-    finally:
-        for each in sockets:
-            each.close()
+def _prove(out: Path, progress: Any) -> dict[str, Any]:
+    """Run the same model plain and anticipating, where plain fails; what came of it."""
+    from ..simtrace import Trace
 
-
-@contextmanager
-def _processes(rig_file: Path, out: Path) -> Iterator[tuple[Any, Any, Control]]:
-    """A server and a simulated rig for it; both have ended afterwards."""
-    from ..config import load_rig
-    from ..control import Control
-
-    command = [sys.executable, "-m", "gatestep"]
-    endpoint = load_rig(rig_file).spec.control.endpoint
-    pipes = {"stdout": subprocess.PIPE, "stderr": subprocess.PIPE, "text": True}
-    server = subprocess.Popen([*command, "serve", str(rig_file), "--json"], **pipes)  # type: ignore[call-overload]
-    trace = str(out / "demo.npz")
-    rig = subprocess.Popen(
-        [*command, "simrig", str(rig_file), "--json", "--wait", "120", "--out", trace], **pipes
-    )  # type: ignore[call-overload]
-    try:
-        with Control(endpoint) as control:
-            yield server, rig, control
-    finally:
-        for process in (rig, server):
-            if process.poll() is None:
-                process.send_signal(signal.SIGINT)
-                try:
-                    process.wait(5)
-                except subprocess.TimeoutExpired:
-                    process.kill()
-                    process.wait()
+    progress("the same at a slow tick, plain and anticipating", None)
+    path = out / "anticipation.npz"
+    with processes(_write_proof(out), path, "--arm", "--force") as (server, rig, control):
+        finish(rig)
+        control.stop()
+        server.wait(10)
+    trace = Trace.load(path)
+    figures = {}
+    for c, name in enumerate(PROOF_PARTS):
+        low, high = float(trace.v_mv[:, c].min()), float(trace.v_mv[:, c].max())
+        figures[name] = {"spikes": len(trace.spikes(c)), "trough_mv": low, "peak_mv": high}
+    return {"interval_us": PROOF_US, "trace": str(path), "parts": figures}
 
 
 def _play(
@@ -205,7 +188,7 @@ def _play(
     ]
     confirmed: dict[str, int | None] = {}
     while rig.poll() is None:
-        _check(server, "server")
+        check_alive(server, "server")
         now_ms = _now_ms(control)
         progress("running", None if now_ms is None else now_ms / parts[-1].end_ms)
         while orders and now_ms is not None and now_ms >= orders[0].at_ms:
@@ -228,35 +211,26 @@ def _now_ms(control: Control) -> float | None:
     return None if seq is None else float(seq) * INTERVAL_US / 1000.0
 
 
-def _check(process: Any, name: str) -> None:
-    if process.poll() is not None:
-        raise LinkError(
-            f"the {name} ended with status {process.returncode}: {process.stderr.read()}"
-        )
-
-
-def _finish(rig: Any) -> dict[str, Any]:
-    printed, said = rig.communicate(timeout=30)
-    if rig.returncode:
-        raise LinkError(f"the simulated rig ended with status {rig.returncode}: {said.strip()}")
-    figures: dict[str, Any] = json.loads(printed)
-    return figures
-
-
 def _summary(
     out: Path,
     parts: list[Part],
     confirmed: dict[str, int | None],
     figures: dict[str, Any],
     status: dict[str, Any],
+    proof: dict[str, Any],
 ) -> dict[str, Any]:
     from ..simtrace import Trace
+    from .demo_figures import draw_proof, draw_scenario
 
     trace = Trace.load(out / "demo.npz")
     files = {"rig": str(out / "rig.toml"), "trace": str(out / "demo.npz")}
     note = None
     try:
-        files["figure"] = str(_draw(trace, parts, confirmed, out / "demo.png"))
+        marks = [confirmed.get(verb) for verb in ("arm", "swap", "disarm")]
+        marks_s = [seq * INTERVAL_US / 1e6 for seq in marks if seq is not None]
+        files["figure"] = str(draw_scenario(trace, parts, marks_s, out / "demo.png"))
+        second = draw_proof(Trace.load(Path(proof["trace"])), PROOF_US, out / "anticipation.png")
+        files["anticipation"] = str(second)
     except MissingExtraError as missing:
         note = str(missing)
     return {
@@ -270,6 +244,7 @@ def _summary(
         "trips": status["trips"],
         "service_nsec": status["service_nsec"],
         "round_trip_us": figures["round_trip_us"],
+        "anticipation": proof,
         "files": files,
         "note": note,
     }
@@ -310,45 +285,18 @@ def _text(summary: dict[str, Any]) -> str:
         "service time (µs)   " + "   ".join(f"{k} {v:.1f}" for k, v in service.items()),
         f"round trip (µs)     p50 {trips['p50']:.0f}   p99 {trips['p99']:.0f}",
         "",
-        *(f"{k:7} {v}" for k, v in summary["files"].items()),
+        f"with Na, K and M-type K at a tick and a delay of {PROOF_US:g} µs:",
+        *(
+            f"{name:26}{found['spikes']:>7} spikes, {found['trough_mv']:.0f} to "
+            f"{found['peak_mv']:.0f} mV"
+            for name, found in summary["anticipation"]["parts"].items()
+        ),
+        "",
+        *(f"{k:13} {v}" for k, v in summary["files"].items()),
     ]
     if summary["note"]:
         lines.append(f"no figure: {summary['note']}")
     return "\n".join(lines)
-
-
-def _draw(trace: Trace, parts: list[Part], confirmed: dict[str, int | None], path: Path) -> Path:
-    """Voltage and injected current over time, the parts marked."""
-    try:
-        from matplotlib.figure import Figure
-    except ImportError:
-        raise MissingExtraError("matplotlib", "figure", "Drawing the demo's figure") from None
-    figure = Figure(figsize=(10, 6), layout="constrained")
-    top, middle, bottom = figure.subplots(3, 1, sharex=True, height_ratios=[3, 2, 1])
-    t_s = trace.t_ms / 1000.0
-    top.plot(t_s, trace.v_mv[:, 0], color="#1b3a4b", linewidth=0.8)
-    top.set_ylabel("membrane (mV)")
-    answered = trace.i_pa[:, 0] - trace.stimulus_pa[:, 0]
-    middle.plot(t_s, answered / 1000.0, color="#9a3324", linewidth=0.6)
-    middle.set_ylabel("model's current (nA)")
-    bottom.plot(t_s, trace.stimulus_pa[:, 0], color="#444444", linewidth=1.0)
-    bottom.set_ylabel("step (pA)")
-    bottom.set_xlabel("time in the simulated rig (s)")
-    for part in parts:
-        centre = 0.5 * (part.start_ms + part.end_ms) / 1000.0
-        top.annotate(part.name, (centre, 1.02), xycoords=("data", "axes fraction"), ha="center")
-    for verb in ("arm", "swap"):
-        seq = confirmed.get(verb)
-        if seq is not None:
-            for axes in (top, middle, bottom):
-                axes.axvline(seq * INTERVAL_US / 1e6, color="#8a8a8a", linewidth=0.8, linestyle=":")
-    for axes in (top, middle, bottom):
-        axes.spines[["top", "right"]].set_visible(False)
-    figure.suptitle(f"A conductance given through the loop. {STATEMENT}", fontsize=10)
-    temporary = path.with_suffix(".part.png")
-    figure.savefig(temporary, dpi=130)
-    temporary.replace(path)
-    return path
 
 
 @contextmanager
