@@ -70,7 +70,7 @@ def draw_proof(trace: Trace, interval_us: float, path: Path) -> Path:
         Without matplotlib.
     """
     figure = _figure(5.5)
-    panels = figure.subplots(2, 1, sharex=True)
+    panels = figure.subplots(2, 1, sharex=True, sharey=True)
     names = ("plain loop: each current is stale", "anticipating: the delay taken out")
     for c, (axes, name) in enumerate(zip(panels, names, strict=True)):
         axes.plot(trace.t_ms, trace.v_mv[:, c], color=INK, linewidth=0.7)
