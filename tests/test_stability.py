@@ -15,7 +15,6 @@ from gatestep.choosing import ALPHAS, KEPT, Choice, advice, candidates, choose
 from gatestep.errors import FileError
 from gatestep.library import load_model
 from gatestep.lockstep import Conditions, LockstepRun, run_lockstep_loop
-from gatestep.lockstep import Settings as Shadow
 from gatestep.operating import largest_ns, operating_ns
 from gatestep.simcell import SUBSTEP_US
 from gatestep.specs import CellSpec, LoopSpec, ModelSpec, SimCellSpec
@@ -75,7 +74,7 @@ def run_leak(
         circuit.delay_ms / circuit.interval_ms,
         capacitance_error=1.0 / (1.0 + circuit.capacitance_error) - 1.0,
         residue_mohm=circuit.residue_mohm,
-        settings=None if chosen is None else Shadow(chosen.substeps, chosen.alpha, chosen.beta),
+        settings=chosen,
     )
     cell = SimCellSpec(capacitance_pf=true_pf, leak_ns=0.0, start_mv=start_mv)
     return run_lockstep_loop(conditions, cell, leak_of(g_ns), ticks * circuit.interval_ms)
@@ -261,7 +260,7 @@ def overridden(tables: Tables, **given) -> Choice:
 
 def fire(tables: Tables, interval_us: float, delay_ticks: float, choice: Choice, **conditions):
     """The squid axon under 300 pA for 200 ms, in the loop of a choice."""
-    shadow = Shadow(choice.substeps, choice.alpha, choice.beta) if choice.on else None
+    shadow = Settings(choice.substeps, choice.alpha, choice.beta) if choice.on else None
     loop = Conditions(interval_us, delay_ticks, settings=shadow, **conditions)
     return run_lockstep_loop(loop, AXON, tables, 200.0, stimulus_pa=DRIVE_PA)
 

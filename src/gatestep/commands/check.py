@@ -1,11 +1,10 @@
-"""``gatestep check RIG.toml``: files, host and the loop's bound, before anything is armed."""
+"""``gatestep check RIG.toml``: files, host and stability, before anything is armed."""
 
 from __future__ import annotations
 
 import json
-import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -19,26 +18,17 @@ if TYPE_CHECKING:
     from ..specs import CellSpec
     from ..tables import Tables
 
-DELAY_TICKS = {"next-tick": 1.0, "on-arrival": 0.5}
-"""From a sample to its current's start, in ticks, as ``loop.apply`` lets it be."""
-
-SHORTEST_TICK_US = 5.0
-"""The shortest ``loop.interval_us`` that a rig file may have."""
-
 _TABLES_MATTER = "The loop follows a model's tables, not its formulas."
-_BOUND_MATTERS = (
-    "Beyond the bound the loop itself rings, on a cell that is a capacitance alone; "
-    "gates seldom all open at once, so this is the worst case."
-)
 _LOOKS = {"ok": "green", "weak": "yellow", "missing": "bold red"}
 
 
 @dataclass(frozen=True)
 class Checked:
-    """A rig file, and the model of each cell where it could be used."""
+    """A rig file, and the model of each cell, with its tables, where it could be used."""
 
     rig: LoadedRig
     models: list[LoadedModel | None]
+    tables: list[Tables | None]
     files: list[Finding]
 
 
@@ -57,7 +47,7 @@ def check(rig_file: Path, json_output: bool) -> int:
     Raises
     ------
     FileError
-        When the rig file itself cannot be used.
+        When the rig file itself cannot be used, or asks for what cannot be.
     """
     checked = read_files(rig_file)
     sections = [make(checked) for make in SECTIONS]
@@ -85,16 +75,19 @@ def read_files(rig_file: Path) -> Checked:
         f"{loop.apply}, {len(rig.spec.cell)} cell{'s' * (len(rig.spec.cell) > 1)}"
     )
     findings = [Finding("rig file", "ok", shown, "It says what the loop does, and its limits.")]
-    models = []
+    models, tables = [], []
     for cell in rig.spec.cell:
-        model, finding = _read_model(cell, rig)
+        model, table, finding = _read_model(cell, rig)
         models.append(model)
+        tables.append(table)
         findings.append(finding)
-    return Checked(rig, models, findings)
+    return Checked(rig, models, tables, findings)
 
 
-def _read_model(cell: CellSpec, rig: LoadedRig) -> tuple[LoadedModel | None, Finding]:
-    """A cell's model with its tables built, and what there is to say of it."""
+def _read_model(
+    cell: CellSpec, rig: LoadedRig
+) -> tuple[LoadedModel | None, Tables | None, Finding]:
+    """A cell's model, its tables, and what there is to say of them."""
     from ..library import load_model
     from ..tables import build_tables
 
@@ -104,8 +97,8 @@ def _read_model(cell: CellSpec, rig: LoadedRig) -> tuple[LoadedModel | None, Fin
     except GatestepError as fault:
         remedy = f"mend it, or choose another (gatestep models): [[cell]] {cell.name}, model"
         name = f"model of {cell.name}"
-        return None, Finding(name, "missing", str(fault), _TABLES_MATTER, remedy)
-    return model, _describe(cell, model, tables)
+        return None, None, Finding(name, "missing", str(fault), _TABLES_MATTER, remedy)
+    return model, tables, _describe(cell, model, tables)
 
 
 def _describe(cell: CellSpec, model: LoadedModel, tables: Tables) -> Finding:
@@ -152,65 +145,43 @@ def host_section(checked: Checked) -> Section:
     return Section("host", "Host", host_findings(Host(SYSTEM, asked, refused)))
 
 
-def bound_section(checked: Checked) -> Section:
-    """How much conductance the plain loop carries, for each cell of known capacitance."""
-    loop = checked.rig.spec.loop
+def stability_section(checked: Checked) -> Section:
+    """How much conductance each cell's loop carries, and what becomes of spikes."""
     found = [
-        bound_finding(cell, model, loop.interval_us, loop.apply)
-        for cell, model in zip(checked.rig.spec.cell, checked.models, strict=True)
-        if model is not None and cell.capacitance_pf is not None
+        _stability(checked.rig, index, tables)
+        for index, tables in enumerate(checked.tables)
+        if tables is not None
     ]
-    return Section("bound", "Conductance that the plain loop carries", found)
+    return Section("stability", "Stability and fidelity of the loop", found)
 
 
-SECTIONS: tuple[Callable[[Checked], Section], ...] = (files_section, host_section, bound_section)
+def _stability(rig: LoadedRig, index: int, tables: Tables) -> Finding:
+    """One cell's limits and margins, with what is foretold where that can be."""
+    from ..choosing import choose
+    from .check_fidelity import foretell
+    from .check_margin import margin_finding
+
+    cell = rig.spec.cell[index]
+    choice = choose(cell, tables, rig.spec.loop)
+    finding = margin_finding(cell, tables, rig.spec.loop, choice)
+    if cell.capacitance_pf is None:
+        return finding
+    try:
+        foretold = foretell(rig, index, tables, choice)
+    except GatestepError as fault:
+        return replace(finding, found=f"{finding.found}\nspikes cannot be foretold: {fault}")
+    if foretold is None:
+        return finding
+    more = {**finding.more, "foretold": foretold.data()}
+    return replace(finding, found=f"{finding.found}\n{foretold}", more=more)
+
+
+SECTIONS: tuple[Callable[[Checked], Section], ...] = (
+    files_section,
+    host_section,
+    stability_section,
+)
 """The parts of the check, in order; each makes its findings from what was read."""
-
-
-def plain_bound_ns(capacitance_pf: float, interval_us: float, delay_ticks: float) -> float:
-    """Largest conductance in nS that a loop without anticipation holds on a capacitance.
-
-    The current of a sample starts ``delay_ticks`` after it, in [0, 1], and is held for
-    one tick. With a = g·dt/C the voltage from tick to tick follows
-    z**2 - (1 - a·(1 - d))·z + a·d, stable (Jury's test) while a < 1/d and, for
-    d < 1/2, a < 2/(1 - 2·d).
-    """
-    largest = math.inf if delay_ticks == 0 else 1.0 / delay_ticks
-    if delay_ticks < 0.5:
-        largest = min(largest, 2.0 / (1.0 - 2.0 * delay_ticks))
-    return largest * capacitance_pf / (interval_us * 1e-3)
-
-
-def bound_finding(cell: CellSpec, model: LoadedModel, interval_us: float, apply: str) -> Finding:
-    """A model's largest possible conductance beside what the loop carries on its cell."""
-    assert cell.capacitance_pf is not None
-    delay = DELAY_TICKS[apply]
-    bound_ns = plain_bound_ns(cell.capacitance_pf, interval_us, delay)
-    largest_ns = sum(abs(c.gmax_ns) for c in model.spec.conductance)
-    share = largest_ns / bound_ns
-    verdict: Verdict = "ok" if share <= 0.5 else "weak" if share <= 1.0 else "missing"
-    assumed = "" if apply == "next-tick" else ", taking on-arrival for half a tick of delay"
-    shown = (
-        f"{model.name} with every gate open {largest_ns:.4g} nS; the loop carries "
-        f"{bound_ns:.4g} nS on {cell.capacitance_pf:g} pF at {interval_us:g} µs{assumed}"
-    )
-    more = {
-        "cell": cell.name,
-        "bound_ns": bound_ns,
-        "largest_ns": largest_ns,
-        "delay_ticks": delay,
-    }
-    remedy = None if verdict == "ok" else _smaller_share(interval_us, share)
-    return Finding(f"cell {cell.name}", verdict, shown, _BOUND_MATTERS, remedy, more)
-
-
-def _smaller_share(interval_us: float, share: float) -> str:
-    """What brings a model's largest conductance to half the bound."""
-    half_us = interval_us * 0.5 / share
-    smaller = f"smaller gmax_ns in the model, {0.5 / share:.2g} times what they are"
-    if half_us < SHORTEST_TICK_US:
-        return smaller
-    return f"loop.interval_us = {half_us:.3g}, and the rig's clock with it; or {smaller}"
 
 
 def _as_json(rig: LoadedRig, sections: list[Section]) -> dict[str, Any]:
