@@ -38,10 +38,13 @@ def _needed(name: str, found: set[str]) -> set[str]:
 
 
 @cache
-def _stamp(name: str) -> str:
-    """A digest of a module and all that it needs."""
-    digest = hashlib.sha256()
-    for needed in sorted(_needed(name, set())):
+def _stamp(file: str) -> str:
+    """A digest of a source file and all that it needs: of every module, from outside."""
+    path = Path(file)
+    inside = path.parent == _HOME
+    names = _needed(path.stem, set()) if inside else {p.stem for p in _HOME.glob("*.py")}
+    digest = hashlib.sha256(path.read_bytes())
+    for needed in sorted(names):
         digest.update(needed.encode() + (_HOME / f"{needed}.py").read_bytes())
     return digest.hexdigest()
 
@@ -64,7 +67,7 @@ def _kept(function: Callable[..., Any], **options: Any) -> Any:
     dispatcher = njit(cache=True, **options, **_COMMON)(function)
     index = getattr(getattr(dispatcher, "_cache", None), "_cache_file", None)
     if index is not None:
-        index._source_stamp = _stamp(function.__module__.rpartition(".")[2])
+        index._source_stamp = _stamp(function.__code__.co_filename)
     return dispatcher
 
 
