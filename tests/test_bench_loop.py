@@ -262,6 +262,7 @@ def made_result(shift_us=0.0, seed=3, rounds=5, **changes):
         "server": {"private": True, "state": "armed", "lane": "direct", "anticipate": False,
                    "version": "0", "transport": "tcp"},
         "client": {"sleeps": True, "realtime": False, "voltage": "made up"},
+        "load_average": 0.1,
         "plan": {"seconds": 1.0, "rounds": rounds, "burners": 2},
         "conditions": conditions,
         "carries": {c: carried(k["tick"], spec) for c, k in conditions.items()},

@@ -23,6 +23,7 @@ KINDS = {"tick": "at the tick rate", "flat": "flat out"}
 WORDS = {"round_trip_us": "round trip", "jitter_us": "jitter", "service_us": "service time"}
 COLOURS = {"quiet": "#1b3a4b", "loaded": "#9a3324"}
 _MARGIN_OF_SKIPS = 0.01
+_MARGIN_OF_LOAD = 0.5
 _BAR = 30
 _LABEL = 26
 
@@ -159,7 +160,7 @@ def _cells(result: dict[str, Any]) -> str:
                 if largest is None
                 else f"{cell['capacitance_pf']:g} pF: below {_number(largest)} nS"
             )
-            lines.append(f"{condition}: delay {delay:.3g} tick(s); cell {cell['name']}, {limit}")
+            lines.append(f"{condition}: delay {delay:.4g} tick(s); cell {cell['name']}, {limit}")
     if not lines:
         return ""
     title = (
@@ -182,6 +183,11 @@ def _notes(result: dict[str, Any]) -> str:
         if result["server"]["private"] and series["live"] < series["answered"]:
             lost = series["answered"] - series["live"]
             notes.append(f"{condition}: {lost} answers were not live; the loop tripped")
+    if result["load_average"] > _MARGIN_OF_LOAD * result["host"]["usable_cores"]:
+        notes.append(
+            f"the machine had other work (load {result['load_average']:.1f} in the minute "
+            "before); quiet is quiet only without it"
+        )
     if result["server"]["anticipate"]:
         notes.append("the server anticipates; what a plain loop carries is not its limit")
     if not result["complete"]:

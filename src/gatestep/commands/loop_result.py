@@ -81,6 +81,8 @@ class Measured:
     runs: dict[tuple[str, str], list[Run]] = field(default_factory=dict)
     fault: str | None = None
     interrupted: bool = False
+    load_average: float = field(default_factory=lambda: os.getloadavg()[0])
+    """Of the minute before, when this is made: what else the machine did."""
 
 
 def make_result(
@@ -113,6 +115,7 @@ def make_result(
         },
         "server": target.facts,
         "client": client,
+        "load_average": measured.load_average,
         "plan": {"seconds": plan.seconds, "rounds": plan.rounds, "burners": plan.burners},
         "conditions": conditions,
         "carries": {
