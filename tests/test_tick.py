@@ -188,12 +188,15 @@ class AnyOperations(RuleBasedStateMachine):
         limit=st.sampled_from([1e6, 1000.0, 0.5]),
         slew=st.sampled_from([None, 1e-3, 1e6, 1e12]),
         on_arrival=st.booleans(),
+        foreseeing=st.booleans(),
         seed=st.integers(0, 2**32 - 1),
     )
-    def begin(self, cells, limit, slew, on_arrival, seed):
+    def begin(self, cells, limit, slew, on_arrival, foreseeing, seed):
         limits = {"current_pa": limit, "slew_pa_per_ms": slew}
         apply = "on-arrival" if on_arrival else "next-tick"
         self.bench = Bench(cells, limits, loop={"apply": apply})
+        if foreseeing:
+            self.anticipate(np.random.default_rng(seed))
         self.limit = limit
         self.slew = 2 * limit if slew is None else slew * TICK_US * 1e-3
         for k in range(cells):
@@ -203,6 +206,15 @@ class AnyOperations(RuleBasedStateMachine):
         self.permitted = False  # whether the orders and voltages so far let current flow
         self.last = [0.0] * cells
         self.kept: dict[int, Tick] = {}
+
+    def anticipate(self, draw):
+        """Let each cell's answers be anticipated, from a cell described anyhow."""
+        for cell in self.bench.cells:
+            shadow = cell.shadow
+            shadow.on, shadow.substeps = 1, draw.integers(1, 9)
+            shadow.alpha, shadow.beta = draw.uniform(0, 1), draw.uniform(0, 9)
+            shadow.capacitance_pf = draw.choice([1e-3, 1.0, 30.0, 1e5])
+            shadow.leak_ns, shadow.leak_mv = draw.choice([0.0, 3.0, 1e5]), draw.uniform(-200, 200)
 
     def voltages(self, data):
         return [data.draw(VOLTAGES) for _ in range(self.count)]
