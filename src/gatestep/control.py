@@ -42,16 +42,13 @@ class Control:
         curve_client: Path | None = None,
     ) -> None:
         self.endpoint, self.timeout_s = endpoint, timeout_s
+        self._curve = (curve_server, curve_client) if curve_server and curve_client else None
         self._context = zmq.Context()
-        self._socket: zmq.Socket[bytes] = self._context.socket(zmq.DEALER)
-        self._socket.setsockopt(zmq.LINGER, 0)
-        if curve_server and curve_client:
-            use_curve(self._socket, curve_server, curve_client)
         try:
-            self._socket.connect(endpoint)
-        except zmq.ZMQError as fault:
+            self._socket = self._connected()
+        except BaseException:
             self.close()
-            raise LinkError(f"control endpoint {endpoint}: {fault}") from fault
+            raise
 
     def __enter__(self) -> Self:
         return self
@@ -68,20 +65,53 @@ class Control:
         """Close the connection."""
         self._context.destroy(linger=0)
 
+    def _connected(self) -> zmq.Socket[bytes]:
+        socket: zmq.Socket[bytes] = self._context.socket(zmq.DEALER)
+        socket.setsockopt(zmq.LINGER, 0)
+        if self._curve:
+            use_curve(socket, *self._curve)
+        try:
+            socket.connect(self.endpoint)
+        except (zmq.ZMQError, ValueError) as fault:
+            raise LinkError(
+                f"control endpoint {self.endpoint!r}: {fault}; give the server's control.endpoint, "
+                f"such as {DEFAULT_ENDPOINT}"
+            ) from fault
+        return socket
+
     def ask(self, verb: str, timeout_s: float | None = None, **arguments: Any) -> dict[str, Any]:
         """Send any verb with its arguments; returns the server's answer."""
         request = {"verb": verb, **{k: v for k, v in arguments.items() if v is not None}}
+        try:
+            message = msgpack.packb(request)
+        except (TypeError, ValueError, OverflowError) as fault:
+            raise ControlError(f"{verb}: an argument cannot be sent: {fault}") from fault
         while self._socket.poll(0):
             self._socket.recv_multipart()
-        self._socket.send(msgpack.packb(request))
+        self._socket.send(message)
         if not self._socket.poll(int(1000 * (timeout_s or self.timeout_s))):
+            # A new connection, so that an answer that comes late is not the next one's.
+            self._socket.close(0)
+            self._socket = self._connected()
             raise LinkError(
                 f"no gatestep server answers at {self.endpoint}; start one with "
                 "'gatestep serve RIG.toml', or name its control endpoint with --control"
             )
-        answer: dict[str, Any] = msgpack.unpackb(self._socket.recv_multipart()[-1])
+        answer = self._read(self._socket.recv_multipart()[-1])
         if not answer.get("ok"):
             raise ControlError(str(answer.get("error", "the server refused without a reason")))
+        return answer
+
+    def _read(self, message: bytes) -> dict[str, Any]:
+        try:
+            answer = msgpack.unpackb(message)
+        except (ValueError, msgpack.exceptions.UnpackException):
+            answer = None
+        if not isinstance(answer, dict):
+            raise LinkError(
+                f"what answers at {self.endpoint} is no gatestep control socket; "
+                "give the server's control.endpoint"
+            )
         return answer
 
     def status(self) -> dict[str, Any]:
@@ -130,7 +160,7 @@ def use_curve(socket: zmq.Socket[bytes], server: Path, client: Path) -> None:
     Raises
     ------
     FileError
-        When a certificate cannot be read or holds no secret key.
+        When a certificate cannot be read, holds no secret key, or keys that are none.
     """
     import zmq.auth
 
@@ -141,5 +171,8 @@ def use_curve(socket: zmq.Socket[bytes], server: Path, client: Path) -> None:
         raise FileError(f"CURVE certificate: {fault}") from fault
     if secret is None:
         raise FileError(f"{client}: holds no secret key; give the client's secret certificate")
-    socket.curve_serverkey = server_public
-    socket.curve_publickey, socket.curve_secretkey = public, secret
+    try:
+        socket.curve_serverkey = server_public
+        socket.curve_publickey, socket.curve_secretkey = public, secret
+    except zmq.ZMQError as fault:
+        raise FileError(f"CURVE certificates {server} and {client}: no valid keys") from fault

@@ -10,6 +10,7 @@ from .config import LoadedRig, is_local
 from .errors import FileError
 
 LOOPBACK = ("127.0.0.1", "::1")
+_KEY_SIZE = 40
 
 
 class Gatekeeper:
@@ -31,13 +32,15 @@ class Gatekeeper:
             return
         from zmq.auth.thread import ThreadAuthenticator
 
+        if self._network.curve_secret:
+            # Before the authenticator starts: its sockets would outlive a fault here.
+            self._public, self._secret = self._load_keys()
+            clients = self._path(self._network.curve_clients)
         self._authenticator = ThreadAuthenticator(context)
         self._authenticator.start()
         if self._network.peers:
             self._authenticator.allow(*LOOPBACK, *self._network.peers)
         else:
-            self._public, self._secret = self._load_keys()
-            clients = self._path(self._network.curve_clients)
             self._authenticator.configure_curve(domain="*", location=str(clients))
 
     def guard(self, socket: zmq.Socket[bytes], endpoint: str) -> None:
@@ -77,4 +80,6 @@ class Gatekeeper:
             raise FileError(f"{path}: {fault}") from fault
         if secret is None:
             raise FileError(f"{path}: holds no secret key; give the server's secret certificate")
+        if not len(public) == len(secret) == _KEY_SIZE:
+            raise FileError(f"{path}: its keys are not the {_KEY_SIZE} characters of CURVE keys")
         return public, secret
