@@ -277,7 +277,7 @@ SOURCES = {
 INTRINSICS = ("bits", "simd")
 HARMLESS = {"abs", "float", "int", "max", "min", "range"}
 # numpy's own types, and the one of its functions that keeps a scalar a float.
-SCALARS = {"floor"} | {
+SCALARS = {"floor", "ceil", "isnan"} | {
     f"{kind}{bits}" for kind in ("int", "uint", "float") for bits in (8, 16, 32, 64)
 }
 

@@ -235,7 +235,7 @@ def simrig(
 
 @app.command()
 def check(rig: RigFile, json_output: Json = False) -> int:
-    """Check files, host and the loop's bound before anything is armed."""
+    """Check files, host and what the loop can carry, before anything is armed."""
     from .commands.check import check as body
 
     return body(rig, json_output)
@@ -299,6 +299,35 @@ def bench_loop(
     return body(
         rig, seconds, rounds, load, burners, spin, realtime, figure, save, compare, json_output
     )
+
+
+@bench_app.command("fidelity")
+def bench_fidelity(
+    quick: Annotated[bool, typer.Option("--quick", help="Fewer points; some seconds.")] = False,
+    scenario: Annotated[
+        list[str] | None,
+        typer.Option("--scenario", metavar="NAME", help="Only this one; may be given again."),
+    ] = None,
+    figure: Annotated[
+        Path | None, typer.Option("--figure", help="Draw to this PNG or SVG file.")
+    ] = None,
+    save: Annotated[
+        Path | None, typer.Option("--save", metavar="FILE", help="Write the result as JSON.")
+    ] = None,
+    scheduler: Annotated[
+        str | None,
+        typer.Option("--scheduler", metavar="ADDRESS", help="Run on a dask scheduler's workers."),
+    ] = None,
+    json_output: Json = False,
+) -> int:
+    """Measure how true a loop is, plain and anticipating, over ticks, delays and faults.
+
+    Simulated cells in a loop without sockets are held to a continuous solution of the same
+    equations. The figures belong to the program, not to the machine that it runs on.
+    """
+    from .commands.bench_fidelity import bench_fidelity as body
+
+    return body(quick, scenario or (), figure, save, scheduler, json_output)
 
 
 @app.command()
