@@ -8,7 +8,9 @@ no state: orders go one way, log blocks the other. Tables are built on a third.
 
 from __future__ import annotations
 
+import contextlib
 import os
+import sys
 import threading
 import time
 from collections.abc import Callable
@@ -44,6 +46,7 @@ _ORDER_WAIT_S = 3.0
 _QUIET_S = 1.0
 _POLL_MS = 20
 _STATUS_S = 1.0
+_ATTENDING_NICE = 5
 _BLOCKS_A_TURN = 200
 _REQUESTS_A_TURN = 100
 _MOST_WAITING = 64
@@ -131,6 +134,7 @@ class Server:
 
         When ``until`` turns true the loop is ordered to stop.
         """
+        _stand_back()
         poller = zmq.Poller()
         poller.register(self._control, zmq.POLLIN)
         poller.register(self._log_in, zmq.POLLIN)
@@ -342,3 +346,10 @@ class Server:
         if time.monotonic() >= self._status_due:
             self._status_due = time.monotonic() + _STATUS_S
             self._publish("status", self._verbs.status())
+
+
+def _stand_back() -> None:
+    """Let the hot thread and its rig go before this thread where processors are short."""
+    if sys.platform == "linux":
+        with contextlib.suppress(OSError):
+            os.setpriority(os.PRIO_PROCESS, threading.get_native_id(), _ATTENDING_NICE)
