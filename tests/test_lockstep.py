@@ -9,9 +9,10 @@ from hypothesis import strategies as st
 
 from gatestep.errors import GatestepError
 from gatestep.library import load_model
-from gatestep.lockstep import Conditions, LockstepRun, Settings, run_lockstep_loop
+from gatestep.lockstep import Conditions, LockstepRun, run_lockstep_loop
 from gatestep.simrig import SimRig
 from gatestep.specs import CellLimits, ModelSpec, SimCellSpec, StepSpec
+from gatestep.stability import Settings
 from gatestep.tables import Tables, build_tables
 
 AXON = SimCellSpec(capacitance_pf=30.0, leak_ns=9.0, leak_mv=-54.387, start_mv=-65.0)
@@ -208,7 +209,7 @@ def test_anticipating_a_leak_is_never_worse_than_not(reach, own, delay_ticks, su
     virtual = leak_of(g_ns, -60.0)
     duration_ms = ARM_MS + max(1.0, 500.0 / g_ns)
     errors = []
-    for settings in (None, Settings(substeps)):
+    for settings in (None, Settings(substeps, 1.0, 0.0)):
         conditions = Conditions(50.0, delay_ticks, settings=settings)
         run = run_lockstep_loop(conditions, cell, virtual, duration_ms, arm_ms=ARM_MS)
         errors.append(rms_mv(run, cell, g_ns))
@@ -228,7 +229,7 @@ def test_a_plain_loop_is_first_order_and_anticipation_second(squid):
     With beta 0 and one sub-step, so that its error is well above what the tables add.
     """
     assert order_of(squid, None) == pytest.approx(1.0, abs=0.15)
-    assert order_of(squid, Settings(1)) > 1.7
+    assert order_of(squid, Settings(1, 1.0, 0.0)) > 1.7
 
 
 @pytest.mark.parametrize("stimulus", [np.zeros(3), np.full(100, np.nan), float("inf")])

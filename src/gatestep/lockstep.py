@@ -1,6 +1,6 @@
 """The closed loop without sockets: server and simulated rig in one compiled function.
 
-The server's side is what the server runs (:func:`gatestep.tick.consider`), and the
+The server's side is what the server runs (:func:`gatestep.tick.take_sample`), and the
 rig's side is the simulated rig's own (:mod:`gatestep.simloop`), so that a run is the
 same as one of :class:`gatestep.simrig.SimRig` in lockstep against a real server, to the
 last bit, at a small part of its cost. Nothing in a run depends on the machine or on the
@@ -23,7 +23,7 @@ from .compiling import compiled, inner
 from .errors import GatestepError
 from .inforce import HISTORY
 from .kernel import BANK, records
-from .simcell import DROP_STREAM, make_cells, uniform
+from .simcell import DROP_STREAM, SUBSTEP_US, carry, make_cells, uniform
 from .simloop import (
     Columns,
     SimLoop,
@@ -38,10 +38,11 @@ from .simloop import (
 from .simpace import _virtual_arrival
 from .simtrace import Floats, Trace, crossings
 from .specs import CellLimits, SimCellSpec
+from .stability import Settings
 from .states import State
 from .tables import Tables, fill_bank
-from .tick import CELL, LOOP, begin_session, consider, settle_answer
-from .wire import ANSWER, SAMPLE, write_sample
+from .tick import CELL, LOOP, begin_session, settle_answer, take_sample
+from .wire import ANSWER
 
 FINE_US = 10.0
 """Longest time between two of the voltages that spikes are found in, in µs."""
@@ -49,20 +50,6 @@ _LONGEST_DELAY_TICKS = 8.0
 _SHORTEST_TICK_US, _LONGEST_TICK_US = 1.0, 100_000.0
 _NEVER = float("inf")
 _ARMED, _IDLE = int(State.ARMED), int(State.IDLE)
-
-
-@dataclass(frozen=True)
-class Settings:
-    """How the server anticipates; see :mod:`gatestep.anticipate`.
-
-    ``input_ns`` and ``input_mv`` are a conductance that the server is told the cell has.
-    """
-
-    substeps: int
-    alpha: float = 1.0
-    beta: float = 0.0
-    input_ns: float = 0.0
-    input_mv: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -90,8 +77,10 @@ class Conditions:
         Series resistance left in the measured voltage.
     seed : int
         For noise, jitter and drops.
+    input_ns, input_mv : float
+        A conductance that the server is told the cell has, and its reversal.
     settings : Settings or None
-        None is a plain loop.
+        How the server anticipates; None is a plain loop.
     limits : CellLimits or None
         The guard's; None lets every finite current and voltage pass.
     """
@@ -105,6 +94,8 @@ class Conditions:
     capacitance_error: float = 0.0
     residue_mohm: float = 0.0
     seed: int = 1
+    input_ns: float = 0.0
+    input_mv: float = 0.0
     settings: Settings | None = None
     limits: CellLimits | None = None
 
@@ -154,14 +145,13 @@ class LockstepRun:
 
 
 class _ServerSide(NamedTuple):
-    """The server's memory, as :func:`gatestep.tick.consider` takes it."""
+    """The server's memory, as :func:`gatestep.tick.take_sample` takes it."""
 
     loop: Any
     cells: Any
     banks: Any
     table: Any
     past: Any
-    sample: Any
 
 
 def run_lockstep_loop(
@@ -172,6 +162,7 @@ def run_lockstep_loop(
     *,
     stimulus_pa: float | Floats | None = None,
     arm_ms: float = 0.0,
+    lead_ms: float = 0.0,
     native: tuple[Tables, ...] = (),
     fine_us: float = FINE_US,
 ) -> LockstepRun:
@@ -191,6 +182,10 @@ def run_lockstep_loop(
         Added by the rig, pA; the cell's own steps if not given.
     arm_ms : float
         The server is armed at the first sample from this time on.
+    lead_ms : float
+        The cell lives so long by itself before the first sample; the run's times count
+        from before it, and so do ``duration_ms`` and ``arm_ms``. Lets a sample, or the
+        moment its answer flows, fall where it should.
     native : tuple of Tables
         Conductances of the cell's own.
     fine_us : float
@@ -201,43 +196,42 @@ def run_lockstep_loop(
     GatestepError
         When a stimulus does not have one finite value a tick.
     """
-    ticks = max(1, round(duration_ms * 1000.0 / conditions.tick_us))
+    tick_ms = conditions.tick_us / 1000.0
+    ticks = max(1, round((duration_ms - lead_ms) / tick_ms))
     rig = _rig_side(conditions, cell, native)
     server = _server_side(conditions, cell, model)
     columns = make_columns(ticks, 1)
-    columns.stimulus_pa[:, 0] = _stimulus(conditions, cell, ticks, stimulus_pa)
+    t_ms = _times(ticks, tick_ms, lead_ms)
+    columns.stimulus_pa[:, 0] = _stimulus(t_ms, cell, stimulus_pa)
     parts = max(1, ceil(conditions.tick_us / fine_us - 1e-9))
     fine_mv = np.empty(ticks * parts)
-    armed_from = ceil(arm_ms * 1000.0 / conditions.tick_us - 1e-9)
+    armed_from = ceil((arm_ms - lead_ms) / tick_ms - 1e-6)
+    carry(rig.cells, 0, columns.stimulus_pa[0, 0], lead_ms, SUBSTEP_US)
     _run(rig, server, columns, fine_mv, parts, ticks, armed_from)
     loop = server.loop[0]
     counts = {n: int(loop[n]) for n in ("late", "clipped", "foreseen", "fallbacks", "trips")}
     counts |= {n: int(rig.rig[0][n]) for n in ("dropped", "overtaken")}
-    tick_ms = conditions.tick_us / 1000.0
     trace = Trace(
-        t_ms=_times(ticks, tick_ms),
+        t_ms=t_ms,
         **columns._asdict(),
         interval_us=conditions.tick_us,
         budget_us=float(loop.budget_us),
     )
-    return LockstepRun(trace, _times(fine_mv.size, tick_ms / parts), fine_mv, counts)
+    return LockstepRun(trace, _times(fine_mv.size, tick_ms / parts, lead_ms), fine_mv, counts)
 
 
-def _times(count: int, step_ms: float) -> Floats:
-    return np.asarray(np.arange(count) * step_ms, dtype=np.float64)
+def _times(count: int, step_ms: float, lead_ms: float) -> Floats:
+    return np.asarray(lead_ms + np.arange(count) * step_ms, dtype=np.float64)
 
 
-def _stimulus(
-    conditions: Conditions, cell: SimCellSpec, ticks: int, given: float | Floats | None
-) -> Floats:
+def _stimulus(t_ms: Floats, cell: SimCellSpec, given: float | Floats | None) -> Floats:
     """The rig's own current over every tick, pA."""
     if given is not None:
-        values = np.broadcast_to(np.asarray(given, dtype=np.float64), np.shape(given) or (ticks,))
-        if values.shape != (ticks,) or not np.isfinite(values).all():
-            raise GatestepError(f"stimulus_pa: give {ticks} finite values or one number")
+        values = np.broadcast_to(np.asarray(given, np.float64), np.shape(given) or t_ms.shape)
+        if values.shape != t_ms.shape or not np.isfinite(values).all():
+            raise GatestepError(f"stimulus_pa: give {t_ms.size} finite values or one number")
         return values
-    t_ms = np.arange(ticks) * (conditions.tick_us / 1000.0)
-    total = np.zeros(ticks)
+    total = np.zeros_like(t_ms)
     for step in cell.step:
         total[(t_ms > step.start_ms - 1e-9) & (t_ms < step.stop_ms - 1e-9)] += step.current_pa
     return total
@@ -281,7 +275,7 @@ def _server_side(conditions: Conditions, cell: SimCellSpec, model: Tables) -> _S
     _fill_cell(cells[0], conditions, cell)
     table = np.empty(model.table.size)
     fill_bank(model, banks[0], table)
-    return _ServerSide(loop, cells, banks, table, records(ANSWER, HISTORY), records(SAMPLE))
+    return _ServerSide(loop, cells, banks, table, records(ANSWER, HISTORY))
 
 
 def _fill_cell(record: Any, conditions: Conditions, cell: SimCellSpec) -> None:
@@ -299,7 +293,7 @@ def _fill_cell(record: Any, conditions: Conditions, cell: SimCellSpec) -> None:
         shadow.on, shadow.substeps = 1, settings.substeps
         shadow.alpha, shadow.beta = settings.alpha, settings.beta
         shadow.capacitance_pf = cell.capacitance_pf * (1.0 + conditions.capacitance_error)
-        shadow.leak_ns, shadow.leak_mv = settings.input_ns, settings.input_mv
+        shadow.leak_ns, shadow.leak_mv = conditions.input_ns, conditions.input_mv
 
 
 @compiled
@@ -313,24 +307,14 @@ def _run(
     armed_from: int,
 ) -> None:
     """[hot] Exchange samples and answers, tick by tick."""
-    rig, loop, answer = rig_side.rig[0], server.loop[0], rig_side.answer[0]
+    rig, sample, answer = rig_side.rig[0], rig_side.sample[0], rig_side.answer[0]
+    loop = server.loop[0]
     begin_session(loop, server.cells, server.past)
     while rig.seq < ticks:
-        if rig.seq == armed_from:
+        if rig.seq >= armed_from:
             loop.state = _ARMED
         _take_sample(rig_side, columns, rig.seq)
-        size = write_sample(rig.out, rig_side.sample[0], 1)
-        consider(
-            loop,
-            server.cells,
-            server.banks,
-            server.table,
-            server.past,
-            rig.out,
-            size,
-            server.sample[0],
-            answer,
-        )
+        take_sample(loop, server.cells, server.banks, server.table, server.past, sample, answer)
         settle_answer(loop, answer, server.past, 0)
         note(rig_side, columns, 0, 0)
         if rig.drop > 0.0 and uniform(rig.seed, DROP_STREAM, rig.seq) <= rig.drop:
