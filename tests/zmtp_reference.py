@@ -8,6 +8,11 @@ can be no sample is passed over up to a size, commands that mean nothing are ign
 
 from __future__ import annotations
 
+import errno
+import os
+import socket
+import struct
+import time
 from typing import NamedTuple
 
 SIGNATURE = b"\xff" + bytes(8) + b"\x7f"
@@ -181,3 +186,99 @@ def deframe(stream: bytes) -> tuple[list[tuple[int, bytes]], bytes]:
         flags, body, stream = first
         found.append((flags, body))
     return found, stream
+
+
+class Wire:
+    """A peer that speaks by the letter over a stream socket, and can break every letter.
+
+    Parameters
+    ----------
+    endpoint : str
+        ``tcp://ADDRESS:PORT`` or ``ipc://PATH``.
+    opening : bytes
+        Sent on connecting.
+    source : str, optional
+        Address to connect from.
+    """
+
+    def __init__(self, endpoint: str, opening: bytes = OPENING, source: str | None = None) -> None:
+        if endpoint.startswith("ipc://"):
+            self.socket = socket.socket(socket.AF_UNIX)
+            where: object = endpoint.removeprefix("ipc://")
+        else:
+            host, _, port = endpoint.removeprefix("tcp://").rpartition(":")
+            host = host.strip("[]")
+            self.socket = socket.socket(socket.AF_INET6 if ":" in host else socket.AF_INET)
+            self.socket.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
+            where = (host, int(port))
+        if source:
+            self.socket.bind((source, 0))
+        self.socket.settimeout(30.0)
+        while (error := self.socket.connect_ex(where)) in (errno.EAGAIN, errno.EINTR):
+            time.sleep(0.001)  # the other end's queue of connections is full
+        if error:
+            raise OSError(error, os.strerror(error))
+        self._come, self._at = bytearray(), 0
+        self._opened = False
+        self.send(opening)
+
+    def __enter__(self) -> Wire:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+    def close(self) -> None:
+        self.socket.close()
+
+    def reset(self) -> None:
+        """Close so that the other end finds a reset connection, on TCP."""
+        self.socket.setsockopt(socket.SOL_SOCKET, socket.SO_LINGER, struct.pack("ii", 1, 0))
+        self.socket.close()
+
+    def send(self, data: bytes) -> None:
+        self.socket.sendall(data)
+
+    def _more(self) -> bool:
+        """Take in what comes; False at the end of the connection."""
+        try:
+            part = self.socket.recv(1 << 16)
+        except ConnectionError:
+            return False
+        self._come += part
+        return bool(part)
+
+    def frame(self) -> tuple[int, bytes]:
+        """The next frame after the handshake, as (flags, body)."""
+        start = greeting() + ready(b"ROUTER")
+        while not self._opened and len(self._come) < len(start):
+            assert self._more(), "ended in the handshake"
+        if not self._opened:
+            assert self._come[: len(start)] == start
+            self._opened, self._at = True, len(start)
+        while (first := _split(bytes(self._come[self._at : self._at + 2048]))) is None:
+            del self._come[: self._at]
+            self._at = 0
+            assert self._more(), "ended before the frame"
+        assert not isinstance(first, str), "a breach"
+        flags, body, _ = first
+        self._at += len(body) + (9 if flags & LONG else 2)
+        return flags, body
+
+    def answer(self) -> bytes:
+        """The next answer, without its envelope."""
+        flags, body = self.frame()
+        while flags & MORE:
+            flags, body = self.frame()
+        return body
+
+    def ends(self) -> bool:
+        """Whether the other end closes the connection; what comes before is read."""
+        while self._more():
+            pass
+        return True
+
+    def rest(self) -> bytes:
+        """All that came up to the end, after what has been taken."""
+        self.ends()
+        return bytes(self._come[self._at :])

@@ -6,10 +6,10 @@ import os
 import socket
 from pathlib import Path
 
-from .direct import PLACES
 from .errors import LinkError
 
 _PROBE_S = 1.0
+_QUEUE = 512
 
 
 def listen(endpoint: str) -> socket.socket:
@@ -31,7 +31,7 @@ def listen(endpoint: str) -> socket.socket:
             _bind_unix(listener, endpoint.removeprefix("ipc://"))
         else:
             _bind_tcp(listener, endpoint)
-        listener.listen(PLACES)
+        listener.listen(_QUEUE)
     except (OSError, OverflowError) as fault:
         listener.close()
         raise LinkError(f"{endpoint}: {getattr(fault, 'strerror', None) or fault}") from fault
