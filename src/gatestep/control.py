@@ -86,21 +86,28 @@ class Control:
             message = msgpack.packb(request)
         except (TypeError, ValueError, OverflowError) as fault:
             raise ControlError(f"{verb}: an argument cannot be sent: {fault}") from fault
-        while self._socket.poll(0):
-            self._socket.recv_multipart()
-        self._socket.send(message)
-        if not self._socket.poll(int(1000 * (timeout_s or self.timeout_s))):
-            # A new connection, so that an answer that comes late is not the next one's.
-            self._socket.close(0)
-            self._socket = self._connected()
-            raise LinkError(
-                f"no gatestep server answers at {self.endpoint}; start one with "
-                "'gatestep serve RIG.toml', or name its control endpoint with --control"
-            )
-        answer = self._read(self._socket.recv_multipart()[-1])
+        answer = self._read(self._exchange(message, timeout_s or self.timeout_s))
         if not answer.get("ok"):
             raise ControlError(str(answer.get("error", "the server refused without a reason")))
         return answer
+
+    def _exchange(self, message: bytes, timeout_s: float) -> bytes:
+        """Send a request and wait for what answers; neither takes longer than the time-out."""
+        wait_ms = int(1000 * timeout_s)
+        while self._socket.poll(0):
+            self._socket.recv_multipart()
+        # A socket of another kind, or one that refuses our keys, takes nothing at all.
+        if self._socket.poll(wait_ms, zmq.POLLOUT):
+            self._socket.send(message, zmq.DONTWAIT)
+            if self._socket.poll(wait_ms):
+                return self._socket.recv_multipart()[-1]
+        # A new connection, so that an answer that comes late is not the next one's.
+        self._socket.close(0)
+        self._socket = self._connected()
+        raise LinkError(
+            f"no gatestep server answers at {self.endpoint}; start one with "
+            "'gatestep serve RIG.toml', or name its control endpoint with --control"
+        )
 
     def _read(self, message: bytes) -> dict[str, Any]:
         try:
