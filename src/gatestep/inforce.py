@@ -62,8 +62,10 @@ def fill_coming(loop: Any, past: Any, sample: Any, cell: int, coming_pa: Any) ->
     The first stretch is the current in force now, where a switch does not fall on the
     sample itself; after it, answers are expected to come as they usually do.
     """
-    ticks = loop.delay_us / loop.interval_us
-    count: Any = min(np.int64(np.ceil(ticks - _EXACT)), MOST_SEGMENTS)
+    # As many as the carry reads, by the same arithmetic: one left over from another sample,
+    # or not known then, must never be read.
+    ticks = (loop.delay_us * 1e-3) / (loop.interval_us * 1e-3)
+    count: Any = min(np.int64(np.ceil(ticks - 1e-9)), MOST_SEGMENTS)
     whole = abs(ticks - np.floor(ticks + 0.5)) < _EXACT
     known = True
     for j in range(count):
