@@ -29,6 +29,8 @@ _COUNTERS = (
     "clipped",
     "trips",
     "clock_jumps",
+    "foreseen",
+    "fallbacks",
     "records_lost",
     "undelivered",
 )
