@@ -72,7 +72,8 @@ class Verbs:
     shelf : Shelf
     watch : Watch
     send_order : callable
-        Sends an order (kind, cell, index, value) to the loop; returns its number.
+        Sends an order (kind, cell, index, value, how the cell anticipates) to the loop;
+        returns its number.
     builder : Executor
         Where tables are built, off every other thread.
     facts : dict
@@ -93,7 +94,9 @@ class Verbs:
         self._names = [cell.name for cell in rig.spec.cell]
         self._busy: dict[int, str] = {}
         self._changed: set[int] = set()
+        # As the loop has confirmed them, and as it will have them once all orders are done.
         self._parameters: list[dict[str, float]] = [{} for _ in self._names]
+        self._ordered_parameters: list[dict[str, float]] = [{} for _ in self._names]
         self._verbs: dict[str, tuple[Callable[..., Answer | Waiting], set[str]]] = {
             "status": (self.status, set()),
             "arm": (self.arm, {"force"}),
@@ -207,10 +210,11 @@ class Verbs:
                 f"set: {key} = {show(value)}; it is a number from {-limit:g} to {limit:g}"
             )
         new = float(value)
+        self._ordered_parameters[k][str(key)] = new
+        self._changed.add(k)
 
         def after(_: LoopEvent) -> Answer:
             self._parameters[k][str(key)] = new
-            self._changed.add(k)
             return {"cell": self._names[k], "key": key, "value": new}
 
         return self._ordered(order, k, index, new, after)
@@ -220,11 +224,19 @@ class Verbs:
         choice = choose(self._rig.spec.cell[cell], tables, self._rig.spec.loop)
         ready = self._shelf.prepare(cell, model, tables, choice)
         self._shelf.put_in_force(cell)
-        self._parameters[cell] = _file_parameters(ready)
+        self._take_parameters(cell, ready)
         return ready
 
     def refuse_to_ring(self, force: bool) -> None:
-        """Refuse to arm a loop that carries less than its model opens, unless forced."""
+        """Refuse to arm a loop that carries less than its model opens, unless forced.
+
+        During a swap not even then: the order would meet a model that was not judged.
+        """
+        for k, verb in self._busy.items():
+            if verb == "swap":
+                raise ControlError(
+                    f"arm: cell {self._names[k]} has a swap under way; wait for its answer"
+                )
         self._choose_again()
         against = advice([ready.choice for ready in self._ready()])
         if against and not force:
@@ -238,7 +250,7 @@ class Verbs:
         """Let a gmax that was set count in how its cell anticipates, and in the margin."""
         for k, ready in enumerate(self._ready()):
             if k in self._changed:
-                tables = with_parameters(ready.tables, self._parameters[k])
+                tables = with_parameters(ready.tables, self._ordered_parameters[k])
                 choice = choose(self._rig.spec.cell[k], tables, self._rig.spec.loop)
                 self._shelf.in_force[k] = replace(ready, choice=choice)
                 self._send_order(Order.FORESEE, k, 0, 0.0, choice)
@@ -284,9 +296,14 @@ class Verbs:
     def _swapped(self, k: int, ready: Ready) -> Answer:
         self._busy.pop(k)
         self._shelf.put_in_force(k)
-        self._parameters[k] = _file_parameters(ready)
-        self._changed.discard(k)
+        self._take_parameters(k, ready)
         return {"cell": self._names[k], "model": ready.model.name}
+
+    def _take_parameters(self, k: int, ready: Ready) -> None:
+        """A model that has just come into force has its file's parameters."""
+        self._parameters[k] = _file_parameters(ready)
+        self._ordered_parameters[k] = _file_parameters(ready)
+        self._changed.discard(k)
 
     def _claim(self, verb: str, k: int) -> None:
         """One load or swap a cell at a time: both concern its spare bank."""
