@@ -136,7 +136,7 @@ _BLOCK = BLOCK
 _LOOP_SIZE = LOOP.itemsize
 _ENTRY_SIZE = ENTRY.itemsize
 _ORDER_SIZE = ORDER.itemsize
-_TRIPPED, _DISARM = int(State.TRIPPED), int(Event.DISARM)
+_IDLE, _TRIPPED, _DISARM = int(State.IDLE), int(State.TRIPPED), int(Event.DISARM)
 _ORDER_EVENTS = np.array([Event.ARM, Event.DISARM, Event.RESET], dtype=np.int64)
 _ARM, _RESET, _STOP = int(Order.ARM), int(Order.RESET), int(Order.STOP)
 _MARK, _SWAP, _FORESEE = int(Order.MARK), int(Order.SWAP), int(Order.FORESEE)
@@ -350,6 +350,8 @@ def _change_state(loop: Any, kind: int) -> int:
         if loop.tick_wrong:
             return _WAS_WRONG_TICK
         loop.late_run = 0
+        if loop.state == _IDLE:
+            loop.armed_after = loop.seq if loop.running else np.int64(NIL)
     loop.state = next_state(loop.state, _ORDER_EVENTS[np.uint64(kind)])
     if loop.state != _TRIPPED:
         loop.fault = _NO_FAULT
@@ -433,7 +435,9 @@ def _answer_holder(m: Any, size: int, received: int) -> None:
     if found == WAS_MALFORMED:
         m.desk[0].untold = 1
         return
-    loop.heard_nsec = received
+    if found == ANSWERED:
+        # One that only resends is as good as silent: its cell is not being watched.
+        loop.heard_nsec = received
     if not held:
         _take_hold(m, received)
     _log_sample(m, received)

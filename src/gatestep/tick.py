@@ -36,6 +36,7 @@ LOOP = np.dtype(
         ("state", "i8"),
         ("fault", "i8"),
         ("fault_cell", "i8"),
+        ("armed_after", "i8"),  # newest answered when it was last armed; NIL in a new session
         ("stopping", "i8"),
         ("stopped_nsec", "i8"),  # when it was ordered to stop
         # The rig that holds the loop, and its sequence.
@@ -43,7 +44,7 @@ LOOP = np.dtype(
         ("session", "i8"),  # rigs that have taken hold so far
         ("running", "i8"),  # whether the session has had a sample
         ("seq", "i8"),  # newest answered
-        ("heard_nsec", "i8"),  # monotonic time of the rig's last sample
+        ("heard_nsec", "i8"),  # monotonic time of the rig's last new sample
         # Lateness and the rig's clock.
         ("late_through", "i8"),  # newest answer already judged late
         ("due_through", "i8"),  # newest answer already judged for being in force when due
@@ -114,6 +115,7 @@ _BAD_CURRENT = np.int64(Fault.NON_FINITE_CURRENT)
 def begin_session(loop: Any, cells: Any, past: Any) -> None:
     """[hot] Ready for a new rig: its sequence, clock and gates start afresh."""
     loop.running = 0
+    loop.armed_after = NIL
     loop.late_through = NIL
     loop.due_through = NIL
     loop.late_run = 0
@@ -295,8 +297,8 @@ def _state_flag(loop: Any) -> int:
 def _repeat(loop: Any, cells: Any, sample: Any, answer: Any, past: Any) -> int:
     """[hot] Answer a sequence number again, without a step.
 
-    The same answer, unless the loop is no longer armed: then 0 pA. A number too
-    old to be remembered gets 0 pA.
+    The same answer, unless the loop is no longer armed, or was armed again since: then
+    0 pA. A number too old to be remembered gets 0 pA.
     """
     loop.repeats += 1
     earlier = past[np.uint64(sample.seq & _LAST)]
@@ -308,6 +310,8 @@ def _repeat(loop: Any, cells: Any, sample: Any, answer: Any, past: Any) -> int:
     if loop.state != _ARMED:
         _silence(loop, cells, answer)
         answer.flags |= _state_flag(loop)
+    elif sample.seq <= loop.armed_after:
+        _silence(loop, cells, answer)
     answer.flags |= REPEAT
     return WAS_REPEAT
 
