@@ -47,6 +47,7 @@ class Desk:
             folder, cell=[{"name": c, "model": "squid-axon", "limits": LIMITS} for c in cells]
         )
         self.orders: list[tuple] = []
+        self.sent = 0
         self.watch = Watch(list(cells))
         self.shelf = Shelf(records(BANK, 2 * len(cells)), np.empty(1 << 20))
         self.verbs = Verbs(self.rig, self.shelf, self.watch, self.send, AtOnce(), {"lane": "none"})
@@ -419,6 +420,17 @@ def test_set_waits_for_a_swap(desk):
     assert desk.orders == given_before
     desk.confirm(waiting)
     assert desk.do("set", key="Na.gmax_ns", value=5.0)["ok"]
+
+
+def test_arming_waits_for_a_swap(desk):
+    """A model that the check has not seen in force is not armed, not even when forced."""
+    desk.do("load", model="na-squid")
+    waiting = desk.ask("swap")
+    for force in (False, True):
+        refused(desk.ask("arm", force=force), "arm", "swap", "wait")
+    assert desk.do("disarm")["ok"]
+    desk.confirm(waiting)
+    assert desk.do("arm")["ok"]
 
 
 def test_a_load_does_not_stop_a_set(desk):
