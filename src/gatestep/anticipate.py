@@ -16,6 +16,13 @@ to that interval and across it, and the answer is the model's mean current there
 4. The mean model current over the hold is the answer. Only measured voltages ever enter
    the committed gates; the shadow is thrown away.
 
+While an answer is held the cell runs along a chord of the path it would take with the
+conductance in its membrane: a sample at the share ``p`` of a hold lies ``p (1 - p) / 2``
+of ``V'' dt^2`` to one side of it, and the mean of two samples ``1 / 12`` further.
+:func:`cross` carries the committed gates along the path, not the chord, its bend taken
+from the newest three voltages. Fast gates need it: for the fast-spiking cortical cell at
+36 °C, 20 µs and half a tick it takes the error of the 23rd spike from 182 µs to 5.
+
 Sources: a predictor in the loop, Smith 1957 (Chem. Eng. Prog. 53:217-219); exponential
 integrators, Hochbruck and Ostermann 2010 (Acta Numerica 19:209-286). The estimate of
 ``I_rest`` and the mean over the hold are our own. Derivation: with g and I_rest held over
@@ -27,12 +34,12 @@ a sub-step h, ``C V' = I_rest + gE - gV`` gives, with ``f`` the slope at its sta
 
 from __future__ import annotations
 
-from math import exp, isfinite
+from math import factorial, isfinite
 from typing import Any
 
 import numpy as np
 
-from .compiling import compiled, inner
+from .compiling import compiled, merged
 from .kernel import STATES, advance, follow, power
 
 SHADOW = np.dtype(
@@ -47,6 +54,8 @@ SHADOW = np.dtype(
         ("estimates", "i8"),  # of I_rest so far, in a row
         ("rest_pa", "f8"),  # smoothed
         ("rest_before_pa", "f8"),  # the same, a tick earlier
+        ("before_mv", "f8"),  # measured at the start of the newest tick estimated
+        ("bend_mv", "f8"),  # second difference of the newest three measured voltages
         ("x", "f8", (STATES,)),
     ],
     align=True,
@@ -59,24 +68,46 @@ MOST_SEGMENTS = 8
 """Answers under way at once that the carry takes account of."""
 
 
-@inner
+_SERIES = tuple(1.0 / factorial(k + 2) for k in range(12))
+_SMALL = 0.5
+
+
+@merged
 def _phis(z: float) -> Any:
-    """[hot] ``(phi1, phi2)`` of z; below 0.03 in magnitude by series, to rounding."""
-    if abs(z) < 0.03:
-        phi2 = 0.5 + z * (1 / 6 + z * (1 / 24 + z * (1 / 120 + z * (1 / 720 + z / 5040))))
-        return 1.0 + z * phi2, phi2
-    z = min(z, 50.0)
-    phi1 = (exp(z) - 1.0) / z
-    return phi1, (phi1 - 1.0) / z
+    """[hot] ``(phi1, phi2)`` of z from -1e6 to 50, what lies beyond counting as these.
+
+    Plain arithmetic, so that every processor gives the same bits: the series of phi2, whose
+    remainder is below 1e-14 at 1/2, and doubling for larger z by ``phi1(2z) = phi1(z) (1 +
+    z phi1(z) / 2)`` and ``phi2(2z) = phi1(z)**2 / 4 + phi2(z) / 2``.
+    """
+    doublings = 0
+    if abs(z) > _SMALL:
+        z = min(max(-1e6, z), 50.0)
+        while abs(z) > _SMALL:
+            z *= 0.5
+            doublings += 1
+    c, z2 = _SERIES, z * z
+    z4 = z2 * z2
+    low = (c[0] + z * c[1]) + z2 * (c[2] + z * c[3])
+    middle = (c[4] + z * c[5]) + z2 * (c[6] + z * c[7])
+    high = (c[8] + z * c[9]) + z2 * (c[10] + z * c[11])
+    phi2 = low + z4 * (middle + z4 * high)
+    phi1 = 1.0 + z * phi2
+    for _ in range(doublings):
+        phi2 = 0.25 * phi1 * phi1 + 0.5 * phi2
+        phi1 *= 1.0 + 0.5 * z * phi1
+        z += z
+    return phi1, phi2
 
 
-@inner
+@merged
 def _on_grid(v_mv: float) -> float:
     """[hot] A voltage held within the range of the tables; NaN becomes its lower end."""
-    return min(max(v_mv, -FARTHEST_MV), FARTHEST_MV) if isfinite(v_mv) else -FARTHEST_MV
+    # The bound comes first: of a NaN and a number, max and min give their first.
+    return min(FARTHEST_MV, max(-FARTHEST_MV, v_mv))
 
 
-@inner
+@merged
 def _open(bank: Any, x: Any) -> Any:
     """[hot] Total conductance in nS, and conductance times reversal in pA."""
     total, driven = 0.0, 0.0
@@ -107,57 +138,77 @@ def estimate(shadow: Any, v_old_mv: float, v_mv: float, flowed_pa: float, dt_ms:
         return
     if shadow.estimates == 0:
         shadow.rest_pa = raw_pa
+        shadow.before_mv = v_old_mv - (v_mv - v_old_mv)
+    shadow.bend_mv = (v_mv - v_old_mv) - (v_old_mv - shadow.before_mv)
+    shadow.before_mv = v_old_mv
     shadow.rest_before_pa = shadow.rest_pa
     shadow.rest_pa += shadow.alpha * (raw_pa - shadow.rest_pa)
     shadow.estimates += 1
 
 
-@inner
+@merged
 def _rest(shadow: Any) -> float:
     """[hot] I_rest as expected over the hold, in pA."""
     return shadow.rest_pa + shadow.beta * (shadow.rest_pa - shadow.rest_before_pa)
 
 
-@inner
-def _drift(shadow: Any, v_mv: float, i_pa: float, span_ms: float) -> float:
-    """[hot] Voltage after a span in which a current is held and no conductance is virtual."""
-    c = shadow.capacitance_pf
-    phi1, _ = _phis(-shadow.leak_ns * span_ms / c)
-    slope = (i_pa + shadow.leak_ns * (shadow.leak_mv - v_mv)) / c
-    return _on_grid(v_mv + span_ms * phi1 * slope)
+@merged
+def cross(
+    shadow: Any,
+    bank: Any,
+    table: Any,
+    x: Any,
+    v_old_mv: float,
+    v_mv: float,
+    delay_ms: float,
+    dt_ms: float,
+) -> None:
+    """[hot] Carry the committed gates across the tick last estimated, in two halves.
+
+    In place of :func:`gatestep.kernel.step` where anticipated answers flow; the
+    instantaneous gates are left to :func:`anticipated`.
+    """
+    ticks = delay_ms / dt_ms
+    share = np.floor(ticks) + 1.0 - ticks
+    aside = 1.0 / 12.0 + 0.5 * share * (1.0 - share)
+    mean_mv = 0.5 * (v_old_mv + v_mv) - aside * shadow.bend_mv
+    quarter_mv = 0.25 * (v_mv - v_old_mv)
+    advance(bank, table, x, _on_grid(mean_mv - quarter_mv), 0.5 * dt_ms)
+    advance(bank, table, x, _on_grid(mean_mv + quarter_mv), 0.5 * dt_ms)
 
 
-@inner
+@merged
 def _to_hold(
     shadow: Any, v_mv: float, rest_pa: float, coming_pa: Any, delay_ms: float, dt_ms: float
 ) -> float:
     """[hot] Voltage at the start of the hold, under the currents in force until then."""
-    count: Any = min(np.int64(np.ceil(delay_ms / dt_ms - 1e-9)), MOST_SEGMENTS)
+    leak_ns = shadow.leak_ns
+    own_pa = rest_pa + leak_ns * shadow.leak_mv
+    per_pf = 1.0 / shadow.capacitance_pf
+    count = np.int64(min(np.ceil(delay_ms / dt_ms - 1e-9), MOST_SEGMENTS))
     at_ms = 0.0
     for j in range(count, 0, -1):
         end_ms = delay_ms - (j - 1) * dt_ms
-        v_mv = _drift(shadow, v_mv, rest_pa + coming_pa[np.uint64(j - 1)], end_ms - at_ms)
+        span = (end_ms - at_ms) * per_pf
+        phi1, _ = _phis(-leak_ns * span)
+        v_mv += span * phi1 * (own_pa + coming_pa[np.uint64(j - 1)] - leak_ns * v_mv)
         at_ms = end_ms
-    return v_mv
+    return _on_grid(v_mv)
 
 
-@inner
-def _across(shadow: Any, bank: Any, table: Any, v_mv: float, rest_pa: float, h_ms: float) -> Any:
-    """[hot] ``(end voltage, mean current)`` of one sub-step with the gates at its middle."""
-    c, x = shadow.capacitance_pf, shadow.x
-    g, driven = _open(bank, x)
-    own = rest_pa + shadow.leak_ns * shadow.leak_mv
-    if bank.instant:
-        # Their value at the middle needs the voltage there: predict, then correct.
-        phi1, _ = _phis(-0.5 * h_ms * (g + shadow.leak_ns) / c)
-        slope = (driven + own - (g + shadow.leak_ns) * v_mv) / c
-        follow(bank, table, x, _on_grid(v_mv + 0.5 * h_ms * phi1 * slope))
-        g, driven = _open(bank, x)
-    total = g + shadow.leak_ns
-    phi1, phi2 = _phis(-h_ms * total / c)
-    slope = (driven + own - total * v_mv) / c
-    mean_mv = v_mv + h_ms * phi2 * slope
-    return _on_grid(v_mv + h_ms * phi1 * slope), driven - g * mean_mv
+@merged
+def _follow_to_middle(
+    bank: Any, table: Any, x: Any, v_mv: float, own_pa: float, leak_ns: float, h: float
+) -> None:
+    """[hot] Instantaneous gates at a sub-step's middle: its voltage predicted by their start's.
+
+    ``h`` is the sub-step over the capacitance, ms / pF.
+    """
+    follow(bank, table, x, v_mv)
+    g_ns, driven_pa = _open(bank, x)
+    slope_pa = driven_pa + own_pa - (g_ns + leak_ns) * v_mv
+    phi1, _ = _phis(-0.5 * h * (g_ns + leak_ns))
+    follow(bank, table, x, _on_grid(v_mv + 0.5 * h * phi1 * slope_pa))
 
 
 @compiled
@@ -187,20 +238,27 @@ def anticipated(
     delay_ms, dt_ms : float
         From the sample to the hold, and the length of the hold.
     """
-    for k in range(np.uint64(bank.dynamic + bank.instant)):
-        shadow.x[k] = x[k]
+    y, substeps, leak_ns = shadow.x, shadow.substeps, shadow.leak_ns
+    for k in range(np.uint64(bank.dynamic)):
+        y[k] = x[k]
     rest_pa = _rest(shadow)
-    h_ms = dt_ms / shadow.substeps
-    start_mv = _to_hold(shadow, v_mv, rest_pa, coming_pa, delay_ms, dt_ms)
-    span_ms = delay_ms + 0.5 * h_ms
-    slope = (start_mv - v_mv) / delay_ms if delay_ms > 0.0 else 0.0
-    advance(bank, table, shadow.x, _on_grid(v_mv + 0.5 * span_ms * slope), span_ms)
-    follow(bank, table, shadow.x, start_mv)
-    at_mv, total_pa = start_mv, 0.0
-    for k in range(shadow.substeps):
-        if k:
-            advance(bank, table, shadow.x, at_mv, h_ms)
-            follow(bank, table, shadow.x, at_mv)
-        at_mv, mean_pa = _across(shadow, bank, table, at_mv, rest_pa, h_ms)
-        total_pa += mean_pa
-    return total_pa / shadow.substeps
+    own_pa = rest_pa + leak_ns * shadow.leak_mv
+    h_ms = dt_ms / substeps
+    h = h_ms / shadow.capacitance_pf
+    at_mv = _to_hold(shadow, v_mv, rest_pa, coming_pa, delay_ms, dt_ms)
+    # First from the sample to the middle of the first sub-step, then from middle to middle.
+    gates_mv, span_ms = 0.5 * (v_mv + at_mv), delay_ms + 0.5 * h_ms
+    if delay_ms > 0.0:
+        gates_mv += 0.25 * h_ms * (at_mv - v_mv) / delay_ms
+    total_pa = 0.0
+    for _ in range(substeps):
+        advance(bank, table, y, _on_grid(gates_mv), span_ms)
+        if bank.instant:
+            _follow_to_middle(bank, table, y, at_mv, own_pa, leak_ns, h)
+        g_ns, driven_pa = _open(bank, y)
+        slope_pa = driven_pa + own_pa - (g_ns + leak_ns) * at_mv
+        phi1, phi2 = _phis(-h * (g_ns + leak_ns))
+        total_pa += driven_pa - g_ns * (at_mv + h * phi2 * slope_pa)
+        at_mv = _on_grid(at_mv + h * phi1 * slope_pa)
+        gates_mv, span_ms = at_mv, h_ms
+    return total_pa / substeps
