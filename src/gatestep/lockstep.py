@@ -206,7 +206,8 @@ def run_lockstep_loop(
     parts = max(1, ceil(conditions.tick_us / fine_us - 1e-9))
     fine_mv = np.empty(ticks * parts)
     armed_from = ceil((arm_ms - lead_ms) / tick_ms - 1e-6)
-    carry(rig.cells, 0, columns.stimulus_pa[0, 0], lead_ms, SUBSTEP_US)
+    if lead_ms > 0.0:
+        carry(rig.cells, 0, columns.stimulus_pa[0, 0], lead_ms, SUBSTEP_US)
     _run(rig, server, columns, fine_mv, parts, ticks, armed_from)
     loop = server.loop[0]
     counts = {n: int(loop[n]) for n in ("late", "clipped", "foreseen", "fallbacks", "trips")}
