@@ -64,7 +64,10 @@ def print_status(status: dict[str, Any]) -> None:
         highlight=False,
     )
     names = ("answered", "late", "missed", "repeats", "malformed", "refused", "clipped", "trips")
-    console.print("  ".join(f"{n} {status[n]}" for n in names), highlight=False)
+    # What a sound run has few of, or none, is shown where there is any.
+    rare = ("fallbacks", "clock_jumps", "undelivered", "records_lost")
+    shown = (*names, *(n for n in rare if status.get(n)))
+    console.print("  ".join(f"{n} {status[n]}" for n in shown), highlight=False)
     service = status["service_nsec"]
     if service:
         spread = "  ".join(f"{k} {v / 1000:.1f}" for k, v in service.items())
