@@ -37,7 +37,7 @@ def serve(rig_file: Path, arm: bool, force: bool, json_output: bool) -> int:
         signal.signal(number, ask_stop)
     try:
         server.start()
-        if arm:
+        if arm and not stop_asked:
             server.arm(force)
             say("armed from the start" + (", whatever the check says" if force else ""))
         _announce(server.endpoints(), json_output)
