@@ -138,6 +138,9 @@ def load(
 @app.command()
 def swap(
     cell: CellName = None,
+    force: Annotated[
+        bool, typer.Option("--force", help="Swap an armed loop against the check's advice.")
+    ] = False,
     control: Endpoint = CONTROL,
     curve_server: CurveServer = None,
     curve_client: CurveClient = None,
@@ -146,7 +149,7 @@ def swap(
     """Put the prepared model in force between two samples."""
     from .commands.steer import ask
 
-    return ask("swap", control, json_output, curve_server, curve_client, cell=cell)
+    return ask("swap", control, json_output, curve_server, curve_client, cell=cell, force=force)
 
 
 @app.command("set")

@@ -144,9 +144,9 @@ class Control:
             model = str(path.resolve())
         return self.ask("load", timeout_s=10 * self.timeout_s, model=model, cell=cell)
 
-    def swap(self, cell: str | None = None) -> dict[str, Any]:
-        """Put the prepared model in force."""
-        return self.ask("swap", cell=cell)
+    def swap(self, cell: str | None = None, force: bool = False) -> dict[str, Any]:
+        """Put the prepared model in force; while armed not one that would ring, unless forced."""
+        return self.ask("swap", cell=cell, force=force or None)
 
     def set(self, key: str, value: float, cell: str | None = None) -> dict[str, Any]:
         """Change a parameter of the model in force, such as ``K.gmax_ns``."""

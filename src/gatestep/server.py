@@ -147,6 +147,7 @@ class Server:
             if self._control in ready:
                 self._take_requests()
             self._answer_built()
+            self._warn(self._verbs.catch_up())
             self._publish_status()
             self._host.follow(self.watch.state == State.ARMED)
         while self._log_in.poll(0):
@@ -174,6 +175,8 @@ class Server:
         if hasattr(self, "_thread") and self._thread.is_alive():
             self.order_stop()
             self._thread.join(2 * _QUIET_S)
+            if self._thread.is_alive():
+                return  # nothing is taken from under a loop that still runs
         self._builder.shutdown(wait=False, cancel_futures=True)
         if hasattr(self, "_port"):
             self._port.close()
@@ -274,6 +277,11 @@ class Server:
                     self._say(event.text)
                 self._publish("event", {"kind": event.kind, "seq": event.seq, "text": event.text})
             self._publish_samples(samples)
+
+    def _warn(self, warnings: list[str]) -> None:
+        for text in warnings:
+            self._say(f"armed against advice: {text}")
+            self._publish("event", {"kind": "advice", "seq": None, "text": text})
 
     def _take_requests(self) -> None:
         for _ in range(_REQUESTS_A_TURN):

@@ -20,6 +20,7 @@ from .library import LoadedModel, load_model
 from .loop import Order, Outcome
 from .shelf import Ready, Shelf
 from .specs import MAX_GMAX_NS, MAX_REVERSAL_MV
+from .states import State
 from .tables import Tables, build_tables
 from .watch import LoopEvent, Watch
 
@@ -94,6 +95,7 @@ class Verbs:
         self._names = [cell.name for cell in rig.spec.cell]
         self._busy: dict[int, str] = {}
         self._changed: set[int] = set()
+        self._judging: dict[int, tuple[dict[str, float], Future[Choice]]] = {}
         # As the loop has confirmed them, and as it will have them once all orders are done.
         self._parameters: list[dict[str, float]] = [{} for _ in self._names]
         self._ordered_parameters: list[dict[str, float]] = [{} for _ in self._names]
@@ -103,7 +105,7 @@ class Verbs:
             "disarm": (self.disarm, set()),
             "reset": (self.reset, set()),
             "load": (self.load, {"model", "cell"}),
-            "swap": (self.swap, {"cell"}),
+            "swap": (self.swap, {"cell", "force"}),
             "set": (self.set, {"key", "value", "cell"}),
             "mark": (self.mark, {"text"}),
             "stop": (self.stop, set()),
@@ -142,8 +144,7 @@ class Verbs:
 
     def arm(self, force: bool = False) -> Waiting:
         """Let the model's current flow."""
-        if not isinstance(force, bool):
-            raise ControlError(f"arm: force is {show(force)}; it is true or false")
+        _check_force("arm", force)
         self.refuse_to_ring(force)
         return self._ordered(Order.ARM, after=lambda e: self._armed(e, force))
 
@@ -178,14 +179,18 @@ class Verbs:
             raise
         return Built(future, lambda built: self._loaded(k, built))
 
-    def swap(self, cell: str | None = None) -> Waiting:
-        """Put the prepared model in force."""
+    def swap(self, cell: str | None = None, force: bool = False) -> Waiting:
+        """Put the prepared model in force; while armed not one that would ring, unless forced."""
         k = self._cell("swap", cell)
+        _check_force("swap", force)
         ready = self._shelf.prepared[k]
         if ready is None:
             raise ControlError(
                 f"swap: no model is prepared for cell {self._names[k]}; load one first"
             )
+        against = advice([ready.choice]) if self._watch.state == State.ARMED else None
+        if against and not force:
+            raise ControlError(f"swap: {against}")
         self._claim("swap", k)
         return self._ordered(
             Order.SWAP, k, ready.bank, after=lambda e: self._swapped(k, ready), choice=ready.choice
@@ -237,8 +242,13 @@ class Verbs:
                 raise ControlError(
                     f"arm: cell {self._names[k]} has a swap under way; wait for its answer"
                 )
-        self._choose_again()
-        against = advice([ready.choice for ready in self._ready()])
+        for k in sorted(self._changed):
+            self._take_choice(k, self._judged(k))
+        choices = [ready.choice for ready in self._ready()]
+        if self._watch.rig_reports_nothing():
+            # Then every tick falls back to the plain loop.
+            choices = [replace(choice, on=False) for choice in choices]
+        against = advice(choices)
         if against and not force:
             raise ControlError(f"arm: {against}")
 
@@ -246,15 +256,36 @@ class Verbs:
         """The models in force; every cell has one."""
         return [ready for ready in self._shelf.in_force if ready is not None]
 
-    def _choose_again(self) -> None:
-        """Let a gmax that was set count in how its cell anticipates, and in the margin."""
-        for k, ready in enumerate(self._ready()):
-            if k in self._changed:
-                tables = with_parameters(ready.tables, self._ordered_parameters[k])
-                choice = choose(self._rig.spec.cell[k], tables, self._rig.spec.loop)
-                self._shelf.in_force[k] = replace(ready, choice=choice)
-                self._send_order(Order.FORESEE, k, 0, 0.0, choice)
-        self._changed.clear()
+    def catch_up(self) -> list[str]:
+        """Have cells whose parameters were set judged anew, off every other thread.
+
+        Called every so often by the attending thread. Returns what to warn of: a loop
+        that is armed and now carries less than its model opens.
+        """
+        warnings = []
+        for k in [k for k in self._changed if self._busy.get(k) != "swap"]:
+            if k not in self._judging:
+                given = dict(self._ordered_parameters[k])
+                self._judging[k] = given, self._builder.submit(self._judged, k)
+            given, future = self._judging[k]
+            if future.done():
+                del self._judging[k]
+                if given == self._ordered_parameters[k]:
+                    self._take_choice(k, future.result())
+                    warnings.append(advice([self._ready()[k].choice]))
+        armed = self._watch.state == State.ARMED
+        return [warning for warning in warnings if warning and armed]
+
+    def _judged(self, k: int) -> Choice:
+        """How a cell is to anticipate with the parameters that were set, and its margin."""
+        tables = with_parameters(self._ready()[k].tables, dict(self._ordered_parameters[k]))
+        return choose(self._rig.spec.cell[k], tables, self._rig.spec.loop)
+
+    def _take_choice(self, k: int, choice: Choice) -> None:
+        """Let a cell anticipate as judged from now on."""
+        self._shelf.in_force[k] = replace(self._ready()[k], choice=choice)
+        self._send_order(Order.FORESEE, k, 0, 0.0, choice)
+        self._changed.discard(k)
 
     def _ordered(
         self,
@@ -358,6 +389,11 @@ class Verbs:
 def refusal(text: str) -> Answer:
     """The answer that says why not."""
     return {"ok": False, "error": text}
+
+
+def _check_force(verb: str, force: Any) -> None:
+    if not isinstance(force, bool):
+        raise ControlError(f"{verb}: force is {show(force)}; it is true or false")
 
 
 def safely(work: Callable[[], Answer | Waiting]) -> Any:

@@ -35,6 +35,7 @@ _COUNTERS = (
     "undelivered",
 )
 _PERCENTILES = (50.0, 90.0, 99.0, 99.9)
+_TICKS_TO_REPORT = 100
 _BINS_PER_OCTAVE = 16
 _BINS = 40 * _BINS_PER_OCTAVE
 
@@ -133,6 +134,13 @@ class Watch:
             "service_nsec": self.service.percentiles(),
             "uptime_s": round(time.monotonic() - self._started, 3),
         }
+
+    def rig_reports_nothing(self) -> bool:
+        """Whether a rig that has long had answers still reports none in force."""
+        if self._last is None or not self._loop["held"]:
+            return False
+        given = int(self._loop["seq"]) - int(self._loop["first_seq"])
+        return given > _TICKS_TO_REPORT and int(self._last["in_force"]) == NIL
 
     def cell(self, k: int) -> dict[str, Any]:
         """Newest voltage of a cell, and the current it is given: 0 unless armed."""
