@@ -12,7 +12,7 @@ import signal
 import subprocess
 import sys
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
@@ -20,46 +20,22 @@ from pathlib import Path
 import msgpack
 import numpy as np
 import zmq
+from rigs import INTERVAL_US, MODEL
 
 from gatestep.errors import GatestepError, LinkError
+from gatestep.wire import unpack_answer
 from gatestep.zmqlane import load_libzmq
 
 FOLDER = Path(__file__).resolve().parent
-MODEL = "squid-axon"
-INTERVAL_US = 20.0
 FIRST_SEQ = 100_000
 """As in c/client.c: from here on every sample is 26 bytes."""
-ANSWER_BYTES = 19
-"""Of nearly every answer; two more or fewer where the service time is long or short."""
+ANSWER_BYTES, EACH_FURTHER = 19, 9
+"""Of nearly every answer of one cell, and of each further cell's current; two more or
+fewer where the service time is long or short."""
 PATIENCE_S = 5.0
 START_S = 180.0
-_LONGEST = 64
+_LONGEST = 128
 _DEATH_SIGNAL = 1  # PR_SET_PDEATHSIG
-
-RIG = """\
-# Written by bench/roundtrip.py.
-[loop]
-endpoint = "{loop}"
-interval_us = {interval_us}
-budget_us = 1000000                     # how late an answer is, is measured, not judged
-lane = "{lane}"
-
-[control]
-endpoint = "{folder}control"
-
-[feed]
-endpoint = "{folder}feed"
-
-[limits]
-silence_ms = 600000                     # a rig is silent while others have their turn
-late_run = 1000000
-
-[[cell]]
-name = "cell"
-model = "{model}"
-[cell.limits]
-current_pa = 200000
-"""
 
 
 @dataclass(frozen=True)
@@ -109,18 +85,27 @@ def find_libzmq(given: Path | None) -> Path:
     return path.resolve()
 
 
-def _end_with_parent() -> None:
-    """In a child: end when the benchmark ends, however it ends (Linux)."""
+def _prepare_child(priority: int) -> None:
+    """In a child: end when the benchmark ends, however it ends (Linux); SCHED_FIFO if asked."""
     if sys.platform == "linux":
         ctypes.CDLL(None).prctl(_DEATH_SIGNAL, signal.SIGTERM)
+    if priority:
+        os.sched_setscheduler(0, os.SCHED_FIFO, os.sched_param(priority))
 
 
 @contextmanager
-def process(command: list[str], log: Path, **pipes: int) -> Iterator[subprocess.Popen[bytes]]:
+def process(
+    command: list[str], log: Path, priority: int = 0, **pipes: int
+) -> Iterator[subprocess.Popen[bytes]]:
     """A process that has ended when the block ends; what it says on stderr goes to ``log``."""
     with log.open("wb") as errors:
-        # No thread of this program holds a lock when it forks.
-        child = subprocess.Popen(command, stderr=errors, preexec_fn=_end_with_parent, **pipes)  # noqa: PLW1509
+        child = subprocess.Popen(
+            command,
+            stderr=errors,
+            # No thread of this program holds a lock when it forks.
+            preexec_fn=lambda: _prepare_child(priority),  # noqa: PLW1509
+            **pipes,
+        )
         try:
             yield child
         finally:
@@ -144,21 +129,6 @@ def server(command: list[str], log: Path) -> Iterator[None]:
         if not (ready and child.stdout.readline()):
             raise LinkError(f"{shlex.join(command)} did not start: {log.read_text()[-1000:]}")
         yield
-
-
-def gatestep_command(lane: str, endpoint: str, folder: Path) -> list[str]:
-    """A real ``gatestep serve``, armed, with one cell."""
-    rig = folder / f"{lane}.toml"
-    rig.write_text(
-        RIG.format(
-            loop=endpoint,
-            lane=lane,
-            folder=f"ipc://{folder}/{lane}-",
-            interval_us=INTERVAL_US,
-            model=MODEL,
-        )
-    )
-    return [sys.executable, "-m", "gatestep", "serve", str(rig), "--arm", "--json"]
 
 
 def plain_command(endpoint: str) -> list[str]:
@@ -199,8 +169,8 @@ class PythonClient:
         self._context.destroy(linger=0)
 
 
-class CClient:
-    """A rig in C: a process that takes counts on stdin and tells what it measured."""
+class ProcessClient:
+    """A rig in C or compiled: a process that takes counts on stdin and tells what it measured."""
 
     def __init__(self, child: subprocess.Popen[bytes], log: Path) -> None:
         self._child, self._log = child, log
@@ -215,21 +185,21 @@ class CClient:
         size = (count + 3) * 8 + _LONGEST
         content = stdout.read(size)
         if len(content) != size:
-            raise LinkError(f"the C client ended: {self._log.read_text()[-500:]}")
+            raise LinkError(f"the client ended: {self._log.read_text()[-500:]}")
         numbers = np.frombuffer(content[:-_LONGEST], np.int64)
         smallest, largest, last = (int(n) for n in numbers[count:])
         return Trips(numbers[:count], smallest, largest, content[-_LONGEST:][:last])
 
 
-Client = PythonClient | CClient
+Client = PythonClient | ProcessClient
 
 
 @contextmanager
-def c_client(program: Path, endpoint: str, voltages: Path, log: Path) -> Iterator[CClient]:
-    """A C client of a server."""
-    command = [str(program), endpoint, str(voltages)]
-    with process(command, log, stdin=subprocess.PIPE, stdout=subprocess.PIPE) as child:
-        yield CClient(child, log)
+def process_client(command: list[str], log: Path, priority: int = 0) -> Iterator[ProcessClient]:
+    """A client of a server in a process of its own, under SCHED_FIFO if given a priority."""
+    pipes = {"stdin": subprocess.PIPE, "stdout": subprocess.PIPE}
+    with process(command, log, priority, **pipes) as child:
+        yield ProcessClient(child, log)
 
 
 @contextmanager
@@ -242,7 +212,12 @@ def python_client(endpoint: str, v_mv: np.ndarray) -> Iterator[PythonClient]:
         client.close()
 
 
-def check_answer(name: str, trips: Trips, live: bool, unpack: Callable[[bytes], object]) -> None:
+def answer_bytes(cells: int) -> int:
+    """Size of an answer for so many cells."""
+    return ANSWER_BYTES + EACH_FURTHER * (cells - 1)
+
+
+def check_answer(name: str, trips: Trips, live: bool, cells: int = 1) -> None:
     """See that a server answers what it should, in as many bytes as the others.
 
     Raises
@@ -250,13 +225,13 @@ def check_answer(name: str, trips: Trips, live: bool, unpack: Callable[[bytes], 
     GatestepError
         When a model server's answer is not live, or its size is far from the echo's.
     """
-    if not ANSWER_BYTES - 2 <= trips.smallest <= trips.largest <= ANSWER_BYTES + 2:
+    size = answer_bytes(cells)
+    if not size - 2 <= trips.smallest <= trips.largest <= size + 2:
         raise GatestepError(
-            f"{name}: answers of {trips.smallest} to {trips.largest} bytes; the echo sends "
-            f"{ANSWER_BYTES}"
+            f"{name}: answers of {trips.smallest} to {trips.largest} bytes; the echo sends {size}"
         )
     if live:
-        answer = unpack(trips.answer)
+        answer = unpack_answer(trips.answer)
         if not (isinstance(answer, tuple) and answer[1] == 1):
             raise GatestepError(
                 f"{name}: its last answer is not plainly live: {json.dumps(answer)}"

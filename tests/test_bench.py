@@ -159,15 +159,48 @@ def test_round_trip_benchmark_measures_and_ends_what_it_started():
     }
     for cost in group["costs"].values():
         assert 0 < cost["round_median"]["median"] <= cost["largest"]
-    for name, ratio in group["ratios"].items():
-        assert set(name.split(" / ")) < set(group["costs"])
-        assert 0 < ratio["low"] <= ratio["median"] <= ratio["high"]
+    _check_ratios(group)
     assert all(isinstance(met, bool) for met in result["targets"].values())
+
+
+def _check_ratios(group):
+    """Ratios are between contestants of the group, positive, their spreads in order."""
+    for name, ratio in group["ratios"].items():
+        assert set(name.split(" / ")) <= set(group["costs"])
+        for percentile in ("p50", "p99", "p999"):
+            spread = ratio[percentile]
+            assert 0 < spread["low"] <= spread["median"] <= spread["high"]
+
+
+def test_round_trip_benchmark_swaps_and_sizes_under_load():
+    """Swaps happen during rounds and nothing is lost; the larger model's step takes longer."""
+    command = [sys.executable, str(ROOT / "bench" / "roundtrip.py"), "--json", "--load"]
+    command += ["--rounds", "2", "--trips", "50", "--client", "compiled"]
+    command += ["--swap-every", "5", "--conductances", "2,16"]
+    run = subprocess.run(command, capture_output=True, text=True, timeout=300, check=False)
+    assert run.returncode == 0, run.stderr
+    swaps, sizes = json.loads(run.stdout)["groups"]
+    assert swaps["load"]
+    assert swaps["facts"]["swaps"] >= 2
+    assert not any(swaps["facts"]["counted"].values())
+    [growth] = sizes["growths"].values()
+    assert growth["low95"] <= growth["median"] <= growth["high95"]
+    # 28 gates more, at some ns each (bench step): the sign, not the size.
+    assert growth["step_us"] > 0
+    for group in (swaps, sizes):
+        _check_ratios(group)
 
 
 @pytest.mark.parametrize(
     ("options", "word"),
-    [(["--rounds", "0"], "--rounds 0"), (["--libzmq", "/nowhere/lib.so"], "/nowhere/lib.so")],
+    [
+        (["--rounds", "0"], "--rounds 0"),
+        (["--libzmq", "/nowhere/lib.so"], "/nowhere/lib.so"),
+        (["--cells", "1,9"], "--cells 9"),
+        (["--conductances", "65"], "--conductances 65"),
+        (["--swap-every", "0"], "--swap-every 0"),
+        (["--host", "--client", "Python"], "--client Python"),
+    ],
 )
 def test_round_trip_benchmark_refuses_in_one_line(options, word):
     """Status 1 and one line, before anything is started."""

@@ -1,12 +1,13 @@
 /* A rig as a plain C program: a libzmq DEALER that times round trips.
  *
- *   client ENDPOINT VOLTAGES
+ *   client ENDPOINT VOLTAGES CELLS
  *
- * VOLTAGES is a file of doubles in mV, played over and over. Each line on stdin is a
+ * VOLTAGES is a file of doubles in mV, played over and over, the same for each of 1 to 8
+ * cells. Each line on stdin is a
  * count; that many samples are sent, each as soon as the answer to the one before is
  * there, and to stdout go (native byte order): one int64 a trip, from before the send to
  * after the receive, in ns; then the smallest and largest answer and the size of the
- * last, as int64; then the last answer in 64 bytes. Ends at the end of stdin; status 1
+ * last, as int64; then the last answer in 128 bytes. Ends at the end of stdin; status 1
  * when an answer does not come within five seconds.
  */
 #define _POSIX_C_SOURCE 199309L
@@ -19,7 +20,7 @@
 #include "zmq_calls.h"
 
 /* From here on a sequence number takes four bytes, so that every sample is as long. */
-enum { FIRST_SEQ = 100000, TICK_US = 20, MOST_TRIPS = 1000000, LONGEST = 64 };
+enum { FIRST_SEQ = 100000, TICK_US = 20, MOST_TRIPS = 1000000, LONGEST = 128, MOST_CELLS = 8 };
 
 static int fail(const char *what, const char *why)
 {
@@ -45,16 +46,18 @@ static unsigned char *put_f64(unsigned char *out, double value)
     return out;
 }
 
-/* [seq, t_us, in_force, lag_us, v]: the answer two ticks back is in force, its lag not known. */
-static size_t sample(unsigned char *out, uint32_t seq, double v_mv)
+/* [seq, t_us, in_force, lag_us, v, ...]: the answer two ticks back is in force, its lag not known. */
+static size_t sample(unsigned char *out, uint32_t seq, double v_mv, int cells)
 {
     unsigned char *at = out;
-    *at++ = 0x95;
+    *at++ = (unsigned char)(0x94 + cells);
     at = put_u32(at, seq);
     at = put_u32(at, (seq - FIRST_SEQ) * TICK_US + FIRST_SEQ);
     at = put_u32(at, seq - 2);
     *at++ = 0xc0;
-    return (size_t)(put_f64(at, v_mv) - out);
+    for (int k = 0; k < cells; k++)
+        at = put_f64(at, v_mv);
+    return (size_t)(at - out);
 }
 
 static int64_t now_nsec(void)
@@ -85,13 +88,13 @@ struct tally {
 };
 
 static int trips(void *socket, long count, uint32_t *seq, const double *v, long voltages,
-                 int64_t *nsec, struct tally *tally)
+                 int cells, int64_t *nsec, struct tally *tally)
 {
     unsigned char out[LONGEST];
     tally->smallest = LONGEST;
     tally->largest = 0;
     for (long k = 0; k < count; k++, ++*seq) {
-        size_t size = sample(out, *seq, v[*seq % voltages]);
+        size_t size = sample(out, *seq, v[*seq % voltages], cells);
         int64_t start = now_nsec();
         if (zmq_send(socket, out, size, 0) < 0)
             return fail("send", zmq_strerror(zmq_errno()));
@@ -110,8 +113,9 @@ static int trips(void *socket, long count, uint32_t *seq, const double *v, long 
 
 int main(int argc, char **argv)
 {
-    if (argc != 3)
-        return fail("usage", "client ENDPOINT VOLTAGES");
+    int cells = argc == 4 ? atoi(argv[3]) : 0;
+    if (cells < 1 || cells > MOST_CELLS)
+        return fail("usage", "client ENDPOINT VOLTAGES CELLS, 1 to 8 cells");
     long voltages = 0;
     double *v = read_voltages(argv[2], &voltages);
     if (!v || voltages < 1)
@@ -136,7 +140,7 @@ int main(int argc, char **argv)
         if (count < 1 || count > MOST_TRIPS)
             status = fail("count", "give 1 to 1000000");
         else
-            status = trips(socket, count, &seq, v, voltages, nsec, &tally);
+            status = trips(socket, count, &seq, v, voltages, cells, nsec, &tally);
         if (!status) {
             fwrite(nsec, sizeof *nsec, (size_t)count, stdout);
             fwrite(&tally.smallest, sizeof(int64_t), 3, stdout);
