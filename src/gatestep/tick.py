@@ -13,7 +13,7 @@ from typing import Any
 
 import numpy as np
 
-from .anticipate import MOST_SEGMENTS, SHADOW, anticipated, estimate, forget
+from .anticipate import MOST_SEGMENTS, SHADOW, anticipated, cross, estimate, forget
 from .compiling import compiled, inner
 from .guard import limited, voltage_fault
 from .inforce import HISTORY, fill_coming, flowed, note_lag
@@ -220,10 +220,11 @@ def _step_cell(loop: Any, cell: Any, bank: Any, table: Any, v_mv: float) -> floa
 def _know(loop: Any, cell: Any, past: Any, sample: Any, k: int) -> bool:
     """[hot] Take the last tick into what is known of the cell; whether that suffices."""
     shadow, interval_ms = cell.shadow, loop.interval_us * 1e-3
+    v_mv = sample.v_mv[np.uint64(k)]
     known = cell.settled and cell.owed_ticks == 1.0 and sample.in_force != NIL
-    if known:
+    if known and cell.low_mv <= v_mv <= cell.high_mv:
         mean_pa = flowed(loop, past, sample, k)
-        estimate(shadow, cell.v_mv, sample.v_mv[np.uint64(k)], mean_pa, interval_ms)
+        estimate(shadow, cell.v_mv, v_mv, mean_pa, interval_ms)
     else:
         forget(shadow)
     return shadow.estimates > 0 and fill_coming(loop, past, sample, k, cell.coming_pa)
@@ -237,17 +238,18 @@ def _model_current(
     v_mv = sample.v_mv[np.uint64(k)]
     if not isfinite(v_mv):
         return 0.0
-    foreseen = cell.shadow.on != 0 and _know(loop, cell, past, sample, k)
-    wanted = _step_cell(loop, cell, bank, table, v_mv)
-    cell.v_mv = v_mv
-    cell.owed_ticks = 0.0
-    if foreseen:
+    if cell.shadow.on != 0 and _know(loop, cell, past, sample, k):
         loop.foreseen += 1
         delay_ms, interval_ms = loop.delay_us * 1e-3, loop.interval_us * 1e-3
-        return anticipated(
+        cross(cell.shadow, bank, table, cell.x, cell.v_mv, v_mv, delay_ms, interval_ms)
+        wanted = anticipated(
             cell.shadow, bank, table, cell.x, v_mv, cell.coming_pa, delay_ms, interval_ms
         )
-    loop.fallbacks += cell.shadow.on
+    else:
+        loop.fallbacks += cell.shadow.on
+        wanted = _step_cell(loop, cell, bank, table, v_mv)
+    cell.v_mv = v_mv
+    cell.owed_ticks = 0.0
     return wanted
 
 
