@@ -265,8 +265,10 @@ def test_workers_of_any_kind_give_the_same_figures():
     assert measure_all(asked, progress=lambda k, n: done.append((k, n))) == alone
     assert done == [(k + 1, 4) for k in range(4)]
     with ProcessPoolExecutor(1, mp_context=get_context("spawn")) as pool:
-        assert measure_all(asked, pool) == alone
+        found = measure_all(asked, pool)
         assert pool.submit(int, "7").result() == 7
+    assert found == alone
+    assert all(m.point is point for m, point in zip(found, asked, strict=True))
 
 
 def test_an_interrupt_drops_what_has_not_begun():

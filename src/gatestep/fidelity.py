@@ -270,7 +270,9 @@ def measure_all(
     try:
         waiting = {executor.submit(measure, point): k for k, point in enumerate(asked)}
         for future in as_completed(waiting):
-            found[waiting[future]] = future.result()
+            k = waiting[future]
+            # Another process sends back a copy of the point.
+            found[k] = replace(future.result(), point=asked[k])
             if progress is not None:
                 progress(len(found), len(asked))
     except BaseException:
