@@ -8,7 +8,7 @@ import msgpack
 import pytest
 import zmq
 
-from gatestep.errors import ControlError
+from gatestep.errors import ControlError, LinkError
 
 # 30 pF at 50 us in the next tick: a plain loop carries at most 600 nS (Jury test on
 # z^2 - (1 - a(1 - d)) z + a d), and squid Na and K open far more.
@@ -144,3 +144,12 @@ def test_resending_one_sample_for_ever_is_silence(serving, rig_of):
     server.control.arm()
     _until(lambda: rig.ask(0)[1] & 8)
     assert "silent" in server.control.status()["fault"]
+
+
+def test_a_second_server_takes_no_socket_from_the_first(serving, tmp_path):
+    """Control and feed over ipc are refused to a second server while the first runs."""
+    first = serving(cell=[CELL])
+    taken = first.rig.spec.control.endpoint
+    with pytest.raises(LinkError, match="another server listens there"):
+        serving(cell=[CELL], control={"endpoint": taken})
+    assert first.control.status()["state"] == "idle"

@@ -38,6 +38,13 @@ def listen(endpoint: str) -> socket.socket:
     return listener
 
 
+def is_taken(endpoint: str) -> bool:
+    """Whether somebody listens at an ``ipc://PATH``, which libzmq would take from them."""
+    name = endpoint.removeprefix("ipc://")
+    a_file = endpoint.startswith("ipc://") and not name.startswith("@")
+    return a_file and Path(name).is_socket() and not _is_stale(name)
+
+
 def _host_and_port(endpoint: str) -> tuple[str, int]:
     host, _, port = endpoint.removeprefix("tcp://").rpartition(":")
     return host.strip("[]"), int(port)

@@ -11,7 +11,7 @@ import zmq
 from .config import LoadedRig
 from .direct import MAX_ALLOWED, attach_direct, make_direct
 from .errors import LinkError
-from .listening import listen
+from .listening import is_taken, listen
 from .network import LOOPBACK, Gatekeeper
 from .zmqlane import make_zmq_lane
 
@@ -113,6 +113,8 @@ def bound_socket(
     LinkError
         When the endpoint is taken or cannot be bound.
     """
+    if is_taken(endpoint):
+        raise LinkError(f"{endpoint}: another server listens there")
     socket: zmq.Socket[bytes] = context.socket(kind)
     socket.setsockopt(zmq.LINGER, 200)
     socket.setsockopt(zmq.MAXMSGSIZE, MAX_INCOMING)

@@ -26,7 +26,7 @@ from numba import typeof
 from . import __version__
 from .choosing import Choice
 from .config import LoadedRig, load_rig_models
-from .errors import LinkError
+from .errors import ControlError, LinkError
 from .hosttune import HostTuning
 from .kernel import records
 from .loop import ORDER, Order, make_memory, run_loop
@@ -261,7 +261,12 @@ class Server:
         if choice is not None:
             order[0].on, order[0].substeps = choice.on, choice.substeps
             order[0].alpha, order[0].beta = choice.alpha, choice.beta
-        self._orders_out.send(order.tobytes())
+        try:
+            self._orders_out.send(order.tobytes(), zmq.DONTWAIT)
+        except zmq.Again:
+            raise ControlError(
+                "the loop takes no orders; stop the server with SIGKILL if it does not answer"
+            ) from None
         return self._orders_sent
 
     def _read_log(self) -> None:
