@@ -68,6 +68,7 @@ class Control:
     def _connected(self) -> zmq.Socket[bytes]:
         socket: zmq.Socket[bytes] = self._context.socket(zmq.DEALER)
         socket.setsockopt(zmq.LINGER, 0)
+        socket.setsockopt(zmq.IPV6, int("[" in self.endpoint))
         if self._curve:
             use_curve(socket, *self._curve)
         try:

@@ -115,6 +115,7 @@ class SimRig:
         self._configure(timeout_ms)
         self._context = zmq.Context()
         self._socket = self._context.socket(zmq.DEALER)
+        self._socket.setsockopt(zmq.IPV6, int("[" in self.endpoint))
         try:
             self._connect(curve_secret, connect_s, resend_ms)
         except BaseException:

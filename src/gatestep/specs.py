@@ -6,6 +6,7 @@ hold. Reading files and reporting their faults is in :mod:`gatestep.files`.
 
 from __future__ import annotations
 
+import ipaddress
 import re
 from typing import Annotated, Literal, Self
 
@@ -26,6 +27,8 @@ MAX_GATES = 256
 MAX_GMAX_NS = 1e6
 MAX_REVERSAL_MV = 300.0
 MAX_CURRENT_PA = 1e6
+MAX_PEERS = 62
+"""Peers on the list; with loopback's two addresses the direct lane keeps 64."""
 USUAL_PRIORITY = 50
 
 Name = Annotated[str, StringConstraints(pattern=r"^[A-Za-z][A-Za-z0-9_\-]{0,31}$")]
@@ -228,9 +231,19 @@ class NetworkSpec(Spec):
     certificate and a folder of the public certificates of its clients.
     """
 
-    peers: tuple[str, ...] = ()
+    peers: tuple[str, ...] = Field(default=(), max_length=MAX_PEERS)
     curve_secret: str | None = None
     curve_clients: str | None = None
+
+    @field_validator("peers")
+    @classmethod
+    def _peers_are_addresses(cls, peers: tuple[str, ...]) -> tuple[str, ...]:
+        for peer in peers:
+            try:
+                ipaddress.ip_address(peer)
+            except ValueError:
+                raise ValueError(f"{peer!r} is not an IPv4 or IPv6 address") from None
+        return peers
 
     @model_validator(mode="after")
     def _curve_is_whole(self) -> Self:
@@ -437,9 +450,8 @@ class RigSpec(Spec):
         _refuse_twins("cell", [c.name for c in self.cell])
         endpoints = [self.loop.endpoint, self.control.endpoint, self.feed.endpoint]
         for endpoint in endpoints:
-            if not re.fullmatch(
-                r"tcp://[^:/\s]+:\d{1,5}|tcp://\[[0-9A-Fa-f:]+\]:\d{1,5}|ipc://\S+", endpoint
-            ):
+            found = _ENDPOINT.fullmatch(endpoint)
+            if not found or int(found["port"] or 0) > 65_535:
                 raise ValueError(f"endpoint {endpoint!r} is not tcp://ADDRESS:PORT or ipc://PATH")
         _refuse_twins("endpoint", endpoints)
         if self.loop.lane == "direct" and self.network.curve_secret:
@@ -450,6 +462,9 @@ class RigSpec(Spec):
                 f"{len(self.cell)} cells but {len(simulated.cell)} simulated cells; give one each"
             )
         return self
+
+
+_ENDPOINT = re.compile(r"tcp://(?:[^:/\s]+|\[[0-9A-Fa-f:]+\]):(?P<port>\d{1,5})|ipc://\S+")
 
 
 def _refuse_twins(what: str, names: list[str]) -> None:
