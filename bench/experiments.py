@@ -32,6 +32,7 @@ DIRECT, LIBZMQ = "gatestep direct lane", "gatestep libzmq lane"
 ECHO, PLAIN = "C libzmq echo", "plain Python server"
 LANES = ((DIRECT, ECHO), (LIBZMQ, ECHO), (PLAIN, DIRECT), (PLAIN, LIBZMQ))
 QUIET, SWAPPED = "without swaps", "with swaps"
+SERVERS = (DIRECT, LIBZMQ, ECHO, PLAIN)
 USUAL, REAL_TIME = "as any program", "SCHED_FIFO at both ends"
 CLIENTS = ("C", "Python", "compiled", "spinning")
 WARM_UP = 500
@@ -93,18 +94,18 @@ class Group:
     facts: dict[str, Any] = field(default_factory=dict)
 
 
-def lanes(bench: Bench, transport: str, client: str) -> Group:
+def lanes(bench: Bench, transport: str, client: str, servers: tuple[str, ...] = SERVERS) -> Group:
     """Both lanes beside the echo and the plain server; the compiled client's echo has a C one."""
     with ExitStack() as stack:
         running = {}
-        for name in (DIRECT, LIBZMQ, ECHO, PLAIN):
+        for name in servers:
             rig = {DIRECT: Rig(), LIBZMQ: Rig("libzmq")}.get(name)
             # The compiled client reads answers, and an echo's are none.
             kind = "C" if name == ECHO and client != "Python" else client
             running[name] = _start(stack, bench, transport, kind, rig or name)
         title = f"{transport}, {client} client"
         done = _take_turns(bench, running, title)
-    return _group(bench, title, transport, client, done, LANES)
+    return _group(bench, title, transport, client, done, tuple(p for p in LANES if {*p} <= {*done}))
 
 
 def host(bench: Bench, client: str) -> Group:

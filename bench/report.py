@@ -32,7 +32,7 @@ def targets(groups: list[Group]) -> dict[str, bool]:
 
 def _targets(group: Group) -> list[tuple[str, bool]]:
     """Each target of one group in words, and whether it holds there."""
-    if PLAIN in group.costs and group.client in {"compiled", "spinning"}:
+    if ECHO in group.costs and group.client in {"compiled", "spinning"}:
         most = TARGETS["compiled"]
         holds = group.ratios[f"{DIRECT} / {ECHO}"].p50.median <= most
         return [(f"{DIRECT} p50 at most {most:.2f} of the {ECHO} with its C client", holds)]

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
-from experiments import Bench, Group, host, lanes, sizes, swaps
+from experiments import DIRECT, ECHO, Bench, Group, host, lanes, sizes, swaps
 
 SWAP_EVERY_MS = 100.0
 CONDUCTANCES, CELLS = [2, 16, 64], [1, 8]
@@ -12,8 +12,9 @@ CONDUCTANCES, CELLS = [2, 16, 64], [1, 8]
 
 def run(bench: Bench) -> Iterator[Group]:
     """Every group of the selection, one after the other."""
-    for client in ("C", "compiled", "spinning"):
-        yield lanes(bench.of(120, 500), "tcp", client)
+    yield lanes(bench.of(120, 500), "tcp", "C")
+    for client in ("compiled", "spinning"):
+        yield lanes(bench.of(120, 500), "tcp", client, (DIRECT, ECHO))
     for client in ("C", "compiled"):
         yield host(bench.of(60, 500, load=True), client)
     for client, real_time in (("C", False), ("compiled", False), ("compiled", True)):
