@@ -19,6 +19,6 @@ def run(bench: Bench) -> Iterator[Group]:
         yield host(bench.of(60, 500, load=True), client)
     for client, real_time in (("C", False), ("compiled", False), ("compiled", True)):
         # At 25 to 45 µs a trip, a turn holds one to three swaps.
-        yield swaps(bench.of(40, 6000), client, SWAP_EVERY_MS, real_time)
+        yield swaps(bench.of(25, 6000), client, SWAP_EVERY_MS, real_time)
     yield sizes(bench.of(200, 300), "compiled", [1], CONDUCTANCES)
     yield sizes(bench.of(120, 300), "compiled", CELLS, [0])
