@@ -140,6 +140,8 @@ class Control:
 
     def load(self, model: str, cell: str | None = None) -> dict[str, Any]:
         """Prepare a model, a shipped one's name or a file, in the cell's other bank."""
+        # Tables may take their time; that there is no server should show as soon as ever.
+        self.status()
         path = Path(model)
         if path.suffix == ".toml" and path.exists():
             model = str(path.resolve())
