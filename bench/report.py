@@ -106,29 +106,32 @@ def as_text(result: dict[str, Any], groups: list[Group]) -> str:
 
 
 def draw(groups: list[Group], path: Path, title: str) -> None:
-    """Draw every group: medians and their spreads as bars, p99 and p99.9 as marks."""
+    """Draw every group: medians and their spreads as dots with bars, p99 and p99.9 as marks.
+
+    All panels have one scale, so that lengths may be compared.
+    """
     from matplotlib.figure import Figure
 
     rows = (len(groups) + 1) // 2
     figure = Figure(figsize=(11, 1.2 + 1.9 * rows), layout="constrained")
-    panels = figure.subplots(rows, 2, squeeze=False).ravel()
+    panels = figure.subplots(rows, 2, squeeze=False, sharex=True).ravel()
     for axes in panels[len(groups) :]:
         axes.set_visible(False)
-    colours = ("#1b6ca8", "#6aa5d0", "#8a8a8a", "#c8553d")
     for axes, group in zip(panels, groups, strict=False):
         names, costs = list(group.costs), list(group.costs.values())
         spreads = [cost.round_median for cost in costs]
         sides = [[s.median - s.low for s in spreads], [s.high - s.median for s in spreads]]
         middle = [s.median for s in spreads]
-        axes.barh(names, middle, xerr=sides, color=colours, height=0.7, capsize=3)
+        axes.errorbar(middle, names, xerr=sides, fmt="o", color="#1b6ca8", capsize=3, label="p50")
         axes.plot([cost.p99 for cost in costs], names, "k|", markersize=11, label="p99")
         axes.plot([cost.p999 for cost in costs], names, "kx", markersize=5, label="p99.9")
         axes.set_xscale("log")
-        axes.invert_yaxis()
-        axes.set_title(group.title, fontsize=10)
+        axes.set_ylim(len(names) - 0.5, -0.5)
+        axes.grid(axis="x", alpha=0.3)
+        axes.set_title(group.title, fontsize=9)
         axes.spines[["top", "right"]].set_visible(False)
         axes.set_xlabel("round trip (µs): median of the rounds, p99 and p99.9 of all trips")
         axes.xaxis.label.set_fontsize(8)
-    panels[0].legend(fontsize=8, frameon=False, loc="lower right")
+    figure.legend(*panels[0].get_legend_handles_labels(), loc="outside lower center", ncols=3)
     figure.suptitle(title, fontsize=10.5)
     figure.savefig(path, dpi=130)
