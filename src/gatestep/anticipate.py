@@ -21,10 +21,7 @@ conductance in its membrane: a sample at the share ``p`` of a hold lies ``p (1 -
 of ``V'' dt^2`` to one side of it, and the mean of two samples ``1 / 12`` further.
 :func:`cross` carries the committed gates along the path, not the chord, its bend taken
 from the newest three voltages. Fast gates need it: for the fast-spiking cortical cell at
-36 °C, 20 µs and half a tick it takes the error of the 23rd spike from 182 µs to 5. Beyond
-50 µs the three voltages reach too far back for their bend to be the present one (squid
-axon, 100 µs and half a tick: 14th spike -64 µs with it, -19 without): there the gates
-cross on the mean of the two end voltages, as in a plain loop.
+36 °C, 20 µs and half a tick it takes the error of the 23rd spike from 182 µs to 5.
 
 Sources: a predictor in the loop, Smith 1957 (Chem. Eng. Prog. 53:217-219); exponential
 integrators, Hochbruck and Ostermann 2010 (Acta Numerica 19:209-286). The estimate of
@@ -67,8 +64,6 @@ SHADOW = np.dtype(
 
 FARTHEST_MV = 200.0
 """The shadow's voltage is held within this, the range of the tables."""
-LONGEST_BEND_MS = 0.0501
-"""Longest tick across which the bend of the path counts; beyond, gates cross on the chord."""
 MOST_SEGMENTS = 8
 """Answers under way at once that the carry takes account of."""
 
@@ -176,11 +171,7 @@ def cross(
     ticks = delay_ms / dt_ms
     share = np.floor(ticks) + 1.0 - ticks
     aside = 1.0 / 12.0 + 0.5 * share * (1.0 - share)
-    chord_mv = 0.5 * (v_old_mv + v_mv)
-    if dt_ms > LONGEST_BEND_MS:
-        advance(bank, table, x, chord_mv, dt_ms)
-        return
-    mean_mv = chord_mv - aside * shadow.bend_mv
+    mean_mv = 0.5 * (v_old_mv + v_mv) - aside * shadow.bend_mv
     quarter_mv = 0.25 * (v_mv - v_old_mv)
     advance(bank, table, x, _on_grid(mean_mv - quarter_mv), 0.5 * dt_ms)
     advance(bank, table, x, _on_grid(mean_mv + quarter_mv), 0.5 * dt_ms)

@@ -19,12 +19,12 @@ import zmq
 from pydantic import ValidationError
 
 from .errors import FileError, LinkError
-from .zmqlane import load_libzmq
 from .simcell import make_cells
 from .simloop import Columns, fall_silent, make_columns, make_loop, send_sample
 from .simpace import Status, run_lockstep, run_real
 from .simtrace import Floats, Trace
 from .specs import RigSpec, SimCellSpec, SimulatedSpec
+from .zmqlane import load_libzmq
 
 CHUNK = 2_000
 """Ticks between two looks at the interpreter in lockstep: progress and Ctrl-C."""
