@@ -23,7 +23,8 @@ WAITING, MESSAGE, BROKEN = 0, 1, 2
 """What :func:`feed` found: nothing whole yet, a message, or a breach that ends it."""
 
 INCOMING = 4096
-OUTGOING = 1024
+OUTGOING = 16_384
+"""Room for what waits for a peer: some 700 small answers; one further behind is dropped."""
 LONGEST_SKIP = 1 << 20
 """A longer frame ends the connection; a shorter one, too long to be a sample, is passed over."""
 TOO_LONG = MAX_MESSAGE + 1
