@@ -180,12 +180,13 @@ def _sample(frames: list[bytes]) -> tuple[int, bytes, bool]:
 
 def deframe(stream: bytes) -> tuple[list[tuple[int, bytes]], bytes]:
     """Frames of what a ROUTER sent after its handshake, as (flags, body), and the rest."""
-    found = []
-    while (first := _split(stream)) is not None:
-        assert first != "breach", stream[:16]
-        flags, body, stream = first
+    found, at = [], 0
+    while (first := _split(stream[at : at + 2048])) is not None:
+        assert not isinstance(first, str), stream[at : at + 16]
+        flags, body, _ = first
+        at += len(body) + (9 if flags & LONG else 2)
         found.append((flags, body))
-    return found, stream
+    return found, stream[at:]
 
 
 class Wire:
@@ -199,9 +200,17 @@ class Wire:
         Sent on connecting.
     source : str, optional
         Address to connect from.
+    receive_buffer : int, optional
+        Bytes that the system keeps for this end; small for a peer that is not to read.
     """
 
-    def __init__(self, endpoint: str, opening: bytes = OPENING, source: str | None = None) -> None:
+    def __init__(
+        self,
+        endpoint: str,
+        opening: bytes = OPENING,
+        source: str | None = None,
+        receive_buffer: int | None = None,
+    ) -> None:
         if endpoint.startswith("ipc://"):
             self.socket = socket.socket(socket.AF_UNIX)
             where: object = endpoint.removeprefix("ipc://")
@@ -211,6 +220,8 @@ class Wire:
             self.socket = socket.socket(socket.AF_INET6 if ":" in host else socket.AF_INET)
             self.socket.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
             where = (host, int(port))
+        if receive_buffer:
+            self.socket.setsockopt(socket.SOL_SOCKET, socket.SO_RCVBUF, receive_buffer)
         if source:
             self.socket.bind((source, 0))
         self.socket.settimeout(30.0)
@@ -231,6 +242,24 @@ class Wire:
     def close(self) -> None:
         self.socket.close()
 
+    def shake_hands(self) -> Wire:
+        """Go on from the greeting step by step, as libzmq's own clients do."""
+        while len(self._come) < 64:
+            assert self._more(), "ended in the greeting"
+        self.send(ready())
+        self._open()
+        return self
+
+    def _open(self) -> None:
+        """Take the other end's greeting and READY."""
+        self._opened = True
+        while len(self._come) < 64:
+            assert self._more(), "ended in the handshake"
+        assert self._come[0] == 0xFF
+        assert self._come[9:11] == b"\x7f\x03"
+        self._at = 64
+        assert self.frame()[1].startswith(b"\x05READY")
+
     def reset(self) -> None:
         """Close so that the other end finds a reset connection, on TCP."""
         self.socket.setsockopt(socket.SOL_SOCKET, socket.SO_LINGER, struct.pack("ii", 1, 0))
@@ -250,12 +279,8 @@ class Wire:
 
     def frame(self) -> tuple[int, bytes]:
         """The next frame after the handshake, as (flags, body)."""
-        start = greeting() + ready(b"ROUTER")
-        while not self._opened and len(self._come) < len(start):
-            assert self._more(), "ended in the handshake"
         if not self._opened:
-            assert self._come[: len(start)] == start
-            self._opened, self._at = True, len(start)
+            self._open()
         while (first := _split(bytes(self._come[self._at : self._at + 2048]))) is None:
             del self._come[: self._at]
             self._at = 0
