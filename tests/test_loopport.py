@@ -16,9 +16,8 @@ from zmtp_reference import Wire
 
 from gatestep.control import Control
 from gatestep.errors import LinkError
-from gatestep.loopport import choose_lane
 from gatestep.server import Server
-from gatestep.specs import RigSpec
+from gatestep.specs import MAX_PEERS, RigSpec
 
 DIRECT = {"interval_us": 20.0, "lane": "direct"}
 
@@ -74,21 +73,16 @@ def test_peers_over_ipv6(serving):
         assert wire.rest() == b""
 
 
-def test_a_wrong_list_of_peers(tmp_path):
-    """What is no address is an error that names the rig file and the key; so is a long list.
-
-    Left to choose, a server with a long list takes the libzmq lane.
-    """
-    many = [f"10.0.0.{n}" for n in range(63)]
-    for peers in (["rig.local"], ["10.0.0.0/24"], many):
-        rig = make_rig(tmp_path, loop=PEERS_ONLY, network={"peers": peers})
-        server = Server(rig)
-        with pytest.raises(LinkError, match=r"rig\.toml: network\.peers: "):
-            server.start()
-        server.close()
-    loop = {**PEERS_ONLY, "lane": "auto"}
-    assert choose_lane(make_rig(tmp_path, loop=loop, network={"peers": many})) == "libzmq"
-    assert choose_lane(make_rig(tmp_path, loop=loop, network={"peers": many[:62]})) == "direct"
+def test_the_longest_list_of_peers(serving):
+    """As many peers as a rig file may name fit into the direct lane, the last one too."""
+    peers = [*(f"10.0.0.{n}" for n in range(MAX_PEERS - 1)), "127.0.0.2"]
+    made = serving(loop=PEERS_ONLY, network={"peers": peers})
+    where = f"tcp://127.0.0.1:{port_of(made)}"
+    with Wire(where, source="127.0.0.2") as wire:
+        wire.send(rfc.message(sample(3, -60.0)))
+        assert read_reply(wire.answer()).seq == 3
+    with Wire(where, b"", source="127.0.0.3") as wire:
+        assert wire.rest() == b""
 
 
 def test_the_socket_file_comes_and_goes_with_the_server(tmp_path):

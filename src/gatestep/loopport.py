@@ -9,16 +9,14 @@ from typing import Any, Literal
 import zmq
 
 from .config import LoadedRig
-from .direct import MAX_ALLOWED, attach_direct, make_direct
+from .direct import attach_direct, make_direct
 from .errors import LinkError
 from .listening import is_taken, listen
-from .network import LOOPBACK, Gatekeeper
+from .network import Gatekeeper
 from .zmqlane import make_zmq_lane
 
 WAIT_MS = 5
 """Longest that the loop waits for a message before it looks at its orders again."""
-MAX_PEERS = MAX_ALLOWED - len(LOOPBACK)
-"""Longest list of peers in the direct lane."""
 MAX_INCOMING = 1 << 20
 """A longer message ends the connection that it comes from."""
 
@@ -27,9 +25,7 @@ def choose_lane(rig: LoadedRig) -> Literal["direct", "libzmq"]:
     """The lane that a rig file asks for; ``auto`` is direct wherever that can serve."""
     asked = rig.spec.loop.lane
     if asked == "auto":
-        network = rig.spec.network
-        able = sys.platform == "linux" and network.curve_secret is None
-        able = able and len(network.peers) <= MAX_PEERS
+        able = sys.platform == "linux" and rig.spec.network.curve_secret is None
         return "direct" if able else "libzmq"
     if asked == "direct" and sys.platform != "linux":
         raise LinkError(f"{rig.path}: loop.lane = 'direct' needs Linux; use 'auto' or 'libzmq'")
@@ -51,15 +47,9 @@ class LoopPort:
         self.endpoint = rig.spec.loop.endpoint
         self._listener: Any = None
         self._file = (0, 0)
-        self.lane = self._make_lane()
-
-    def _make_lane(self) -> Any:
-        if self.kind == "libzmq":
-            return make_zmq_lane()
-        try:
-            return make_direct(WAIT_MS, self._gatekeeper.loop_peers(self.endpoint))
-        except LinkError as fault:
-            raise LinkError(f"{self._rig.path}: network.peers: {fault}") from fault
+        direct = self.kind == "direct"
+        peers = gatekeeper.loop_peers(self.endpoint)
+        self.lane = make_direct(WAIT_MS, peers) if direct else make_zmq_lane()
 
     def bind(self) -> None:
         """Bind and listen.
