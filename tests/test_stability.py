@@ -130,8 +130,8 @@ RINGING = [
     (Circuit(30.0, 0.02, 0.006), None),
     (Circuit(30.0, 0.05, 0.11), None),
     (Circuit(30.0, 0.02, 0.02, 0.0, 0.4), None),
-    (Circuit(30.0, 0.05, 0.05, -0.1), Settings(4, 1.0, 2.0)),
-    (Circuit(30.0, 0.05, 0.05, 0.1), Settings(4, 1.0, 2.0)),
+    (Circuit(30.0, 0.05, 0.05, -0.1), Settings(3, 1.0, 2.0)),
+    (Circuit(30.0, 0.05, 0.05, 0.1), Settings(3, 1.0, 2.0)),
     (Circuit(30.0, 0.05, 0.05, -0.3), Settings(2, 1.0, 0.0)),
     (Circuit(30.0, 0.02, 0.02, 0.0, 0.1), Settings(4, 0.35, 3.857)),
     (Circuit(30.0, 0.02, 0.01, 0.1, 0.4), Settings(4, 0.2, 0.0)),
@@ -182,7 +182,7 @@ def test_the_less_is_known_the_less_is_carried(chosen, one, other, residue, dela
 def test_a_ceiling_only_shortens_the_search():
     """Below the ceiling the limit is the same, and above it there is none to be found."""
     circuit = Circuit(30.0, 0.05, 0.05, -0.1)
-    chosen = Settings(4, 1.0, 2.0)
+    chosen = Settings(3, 1.0, 2.0)
     limit = limit_ns(circuit, chosen)
     assert limit_ns(circuit, chosen, 1.5 * limit) == pytest.approx(limit, rel=1e-5)
     assert limit_ns(circuit, chosen, 0.99 * limit) == math.inf
@@ -444,5 +444,5 @@ def test_candidates_come_in_order_of_fidelity():
     tried = list(candidates(cell, Circuit(30.0, 0.05, 0.05)))
     reach = [s.beta - (1.0 - s.alpha) / s.alpha for s in tried]
     assert all(a >= b - 1e-9 for a, b in itertools.pairwise(reach))
-    assert tried[0] == Settings(4, 1.0, 2.0)
+    assert tried[0] == Settings(3, 1.0, 2.0)
     assert len(tried) == 4 * len(ALPHAS) + 9

@@ -237,10 +237,21 @@ class AnyOperations(RuleBasedStateMachine):
         clock=st.one_of(st.just(TICK_US), st.floats(-1e12, 1e12)),
     )
     def sample(self, data, ticks, in_force, lag, clock):
+        self.take(self.voltages(data), ticks, in_force, lag, clock)
+
+    @rule(data=st.data(), count=st.integers(1, 12))
+    def run_live(self, data, count):
+        self.reset()
+        self.arm()
+        for _ in range(count):
+            v_mv = [data.draw(st.floats(-150.0, 100.0)) for _ in range(self.count)]
+            self.take(v_mv, 1, None, None, TICK_US)
+
+    def take(self, v_mv, ticks, in_force, lag, clock):
+        """One new sample, held to everything that is promised of its answer."""
         seq = ticks if self.newest is None else self.newest + ticks
         if seq > 2**63 - 1:
             return
-        v_mv = self.voltages(data)
         self.t_us = max(self.t_us + clock, 0.0)
         tick = self.bench.take(seq, *v_mv, t_us=self.t_us, in_force=in_force, lag_us=lag)
         assert tick.kind == ANSWERED
@@ -258,7 +269,7 @@ class AnyOperations(RuleBasedStateMachine):
         self.newest, self.last, self.kept[seq] = seq, tick.i_pa, tick
 
     @precondition(lambda self: self.newest is not None)
-    @rule(data=st.data(), back=st.integers(0, 200), in_force=KNOWN)
+    @rule(data=st.data(), back=st.integers(0, 3) | st.integers(0, 200), in_force=KNOWN)
     def again(self, data, back, in_force):
         seq = max(self.newest - back, 0)
         before = self.everything()
@@ -529,6 +540,19 @@ def test_a_repeat_is_the_same_answer_and_no_step(bench):
     assert (loop.repeats, loop.answered, loop.seq, loop.late, loop.trips) == (5, 70, 69, 0, 0)
     assert bench.take(3, -60.0)[2:] == (REPEAT, [0.0]), "too old to be remembered: 0 pA"
     assert bench.take(70, -60.0).flags == LIVE
+
+
+def test_a_repeat_from_before_arming_again_is_zero(bench):
+    """A current that disarming has ended does not come back with the next arming either."""
+    bench.order(Order.ARM)
+    bench.take(0, -65.0)
+    assert bench.take(1, -20.0).i_pa[0] != 0.0
+    bench.order(Order.DISARM)
+    bench.order(Order.ARM)
+    assert bench.take(1, -20.0)[2:] == (REPEAT, [0.0])
+    live = bench.take(2, -20.0)
+    assert live.flags == LIVE
+    assert bench.take(2, -20.0)[2:] == (LIVE | REPEAT, live.i_pa)
 
 
 @pytest.mark.parametrize("after", ["disarm", "trip", "stop", "reset"])

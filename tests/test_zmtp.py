@@ -21,7 +21,7 @@ from gatestep.kernel import records
 from gatestep.zmtp import BROKEN, MESSAGE, OUTGOING, PEER, WAITING
 
 UNCOMPILED, CHECKED = bool(config.DISABLE_JIT), bool(config.BOUNDSCHECK)
-FUZZED = 500 if UNCOMPILED else 20_000 if CHECKED else 100_000
+FUZZED = 500 if UNCOMPILED else 10_000 if CHECKED else 50_000
 BUFFERS = ("message", "incoming", "outgoing")
 CANARY = 64
 BETWEEN_CANARIES = 20
