@@ -280,6 +280,22 @@ def test_noise_keeps_no_one_in_hold(serving):
         assert "silent" in server.control.status()["fault"]
 
 
+def test_a_rig_that_only_resends_is_silent(serving):
+    """Repeats get their answers, but no new sample is no voice: an armed loop trips."""
+    server = serving(limits={"silence_ms": 300.0})
+    server.control.arm()
+    with RawRig(endpoint(server)) as rig:
+        assert rig.ask(0, -65.0).flags == LIVE
+
+        def tripped():
+            reply = rig.ask(0, -65.0)
+            assert reply.seq == 0
+            return reply.flags & TRIPPED
+
+        wait_until(tripped, "the trip")
+    assert server.control.status()["trips"] == 1
+
+
 def test_noise_takes_no_hold(serving):
     """A peer that has sent nothing valid holds nothing: the next rig is not refused."""
     server = serving()
