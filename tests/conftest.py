@@ -57,26 +57,40 @@ def make_rig(folder: Path, **changes: Any) -> LoadedRig:
     return LoadedRig(folder / "rig.toml", "", RigSpec.model_validate(sections))
 
 
-class Running:
-    """A server attended on a thread, and a control client of it."""
+class Attended:
+    """A server attended on a thread of its own, which is the only one to touch its sockets."""
 
     def __init__(self, rig: LoadedRig) -> None:
         self.rig, self.said, self.result = rig, [], None  # type: ignore[var-annotated]
         self.server = Server(rig, self.said.append)
-        self.server.start()
+        try:
+            self.server.start()
+        except BaseException:
+            self.server.close()
+            raise
+        self._over = threading.Event()
         self.thread = threading.Thread(target=self._attend)
         self.thread.start()
-        self.control = Control(self.server.endpoints()["control"], timeout_s=20)
 
     def _attend(self) -> None:
-        self.result = self.server.attend()
+        self.result = self.server.attend(until=self._over.is_set)
 
     def close(self) -> None:
-        if self.thread.is_alive():
-            self.server.order_stop()
-            self.thread.join(20)
-        self.control.close()
+        self._over.set()
+        self.thread.join(PATIENCE_S)
         self.server.close()
+
+
+class Running(Attended):
+    """A server attended on a thread, and a control client of it."""
+
+    def __init__(self, rig: LoadedRig) -> None:
+        super().__init__(rig)
+        self.control = Control(self.server.endpoints()["control"], timeout_s=20)
+
+    def close(self) -> None:
+        self.control.close()
+        super().close()
 
 
 @contextmanager
@@ -127,6 +141,9 @@ class RawRig:
         self.context = zmq.Context()
         self.socket: zmq.Socket[bytes] = self.context.socket(kind)
         self.socket.setsockopt(zmq.LINGER, 0)
+        # A refused handshake leaves a socket that takes nothing: a fault must not be a hang.
+        for option in (zmq.SNDTIMEO, zmq.RCVTIMEO):
+            self.socket.setsockopt(option, int(1000 * PATIENCE_S))
         for name, value in options.items():
             setattr(self.socket, name, value)
         self.socket.connect(endpoint)

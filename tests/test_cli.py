@@ -6,16 +6,14 @@ import json
 import os
 import subprocess
 import sys
-import threading
 
 import pytest
 import typer
 import zmq.auth
-from conftest import RawRig, make_rig, running, wait_until
+from conftest import Attended, RawRig, make_rig, running, wait_until
 
 from gatestep import cli
 from gatestep.control import Control
-from gatestep.server import Server
 
 
 class Done:
@@ -392,9 +390,9 @@ def test_keys_for_the_control_socket(call, tmp_path):
     clients.mkdir()
     (clients / "client.key").write_bytes((tmp_path / "client.key").read_bytes())
     network = {"curve_secret": str(tmp_path / "server.key_secret"), "curve_clients": str(clients)}
-    server = running_with_keys(tmp_path, network)
+    server = Attended(make_rig(tmp_path, network=network))
     try:
-        end = server.endpoints()["control"]
+        end = server.server.endpoints()["control"]
         keys = ("--curve-server", tmp_path / "server.key", "--curve-client")
         done = call("status", "--control", end, *keys, tmp_path / "client.key_secret", "--json")
         assert json.loads(done.out)["ok"]
@@ -402,23 +400,7 @@ def test_keys_for_the_control_socket(call, tmp_path):
         call("status", "--control", end, *keys, tmp_path / "none").refused("CURVE")
         call("status", "--control", end, timeout_s=0.5).refused("no gatestep server answers")
     finally:
-        server.stop_it()
-
-
-def running_with_keys(folder, network):
-    """A guarded server, attended on a thread, with a method that ends it."""
-    server = Server(make_rig(folder, network=network))
-    server.start()
-    thread = threading.Thread(target=server.attend)
-    thread.start()
-
-    def stop_it():
-        server.order_stop()
-        thread.join(30)
         server.close()
-
-    server.stop_it = stop_it
-    return server
 
 
 def test_models_and_curves_in_json(call):

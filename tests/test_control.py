@@ -30,6 +30,8 @@ class RawClient:
     def __init__(self, server, kind=zmq.DEALER):
         self.context = zmq.Context()
         self.socket = self.context.socket(kind)
+        for option in (zmq.SNDTIMEO, zmq.RCVTIMEO):
+            self.socket.setsockopt(option, int(1000 * PATIENCE_S))
         self.socket.connect(server.server.endpoints()["control"])
 
     def __enter__(self):
