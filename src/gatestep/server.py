@@ -186,11 +186,7 @@ class Server:
 
     def endpoints(self) -> dict[str, str]:
         """The endpoints as bound."""
-        return {
-            "loop": self._port.endpoint,
-            "control": bound_endpoint(self._control),
-            "feed": bound_endpoint(self._feed),
-        }
+        return dict(self._endpoints)
 
     def _bind(self) -> None:
         spec, keeper = self.rig.spec, self._gatekeeper
@@ -206,6 +202,12 @@ class Server:
             raise LinkError(
                 f"{self.rig.path}: {name}.endpoint = {fault}; is another server running there?"
             ) from fault
+        # Kept: any thread may ask, and only the attending one may touch these sockets.
+        self._endpoints = {
+            "loop": self._port.endpoint,
+            "control": bound_endpoint(self._control),
+            "feed": bound_endpoint(self._feed),
+        }
 
     def _pipe(self, name: str) -> tuple[zmq.Socket[bytes], zmq.Socket[bytes]]:
         """The two ends, sending and receiving, of a one-way line between threads."""
