@@ -326,8 +326,11 @@ def test_rig_without_simulated_part_gets_cells():
 def test_interruption_leaves_zero_current():
     """An exception between chunks (Ctrl-C) ends the run with the output at 0 pA."""
 
+    reached = []
+
     def interrupt(done, _):
         if done >= 2 * simrig.CHUNK:
+            reached.append(done)
             raise KeyboardInterrupt
 
     with (
@@ -337,7 +340,8 @@ def test_interruption_leaves_zero_current():
         with pytest.raises(KeyboardInterrupt):
             rig.run(1.0, progress=interrupt)
         assert rig.now_pa == [0.0]
-        assert rig.counters["answered"] == 2 * simrig.CHUNK
+        # A resent sample shifts the chunks, so where it stopped is what progress was told.
+        assert rig.counters["answered"] == reached[0] < 50_000
         assert rig.run(0.001).ticks == 50
 
 
