@@ -23,8 +23,16 @@ class TableError(GatestepError, ValueError):
     """A gate whose table cannot reach the stated accuracy, or does not fit."""
 
 
+class FirmwareError(GatestepError, ValueError):
+    """A model that cannot be made into firmware as asked."""
+
+
 class WireError(GatestepError, ValueError):
     """Bytes that are not a valid message."""
+
+
+class JournalError(GatestepError, ValueError):
+    """A journal that cannot be read there, or cannot be written."""
 
 
 class ControlError(GatestepError, RuntimeError):
