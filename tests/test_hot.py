@@ -68,7 +68,7 @@ def hot(request, tmp_path_factory):
     load_libzmq()
     rig = make_rig(tmp_path_factory.mktemp("hot")).spec
     lane = make_direct(5) if request.param == "direct" else make_zmq_lane()
-    memory = make_memory(rig, lane, 0, 0, np.zeros(8))
+    memory = make_memory(rig, lane, 0, 0, np.zeros(8), np.zeros((2, 8)))
     return request.param, code_of(run_loop.py_func, typeof(memory), **NATIVE)
 
 

@@ -325,7 +325,6 @@ def test_rig_without_simulated_part_gets_cells():
 
 def test_interruption_leaves_zero_current():
     """An exception between chunks (Ctrl-C) ends the run with the output at 0 pA."""
-
     reached = []
 
     def interrupt(done, _):

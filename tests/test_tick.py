@@ -1,6 +1,6 @@
 """What one sample does: safety under any operations, then each promise by itself.
 
-No sockets: messages go to ``consider`` and ``settle_answer`` and orders to the
+No sockets: messages go to ``decode``, ``take_sample`` and ``settle_answer`` and orders to the
 function that the hot loop carries them out with, on memory made as the server
 makes it.
 """
@@ -20,7 +20,9 @@ from numba import njit
 
 from gatestep.kernel import advance, current, records, settle
 from gatestep.library import load_model
-from gatestep.loop import Order, Outcome, _obey, make_memory
+from gatestep.loop import make_memory
+from gatestep.orders import Order, Outcome
+from gatestep.orders import obey as carry_out
 from gatestep.specs import RigSpec
 from gatestep.states import Fault, State
 from gatestep.tables import build_tables, fill_bank
@@ -29,9 +31,10 @@ from gatestep.tick import (
     WAS_MALFORMED,
     WAS_REPEAT,
     begin_session,
-    consider,
+    decode,
     refuse,
     settle_answer,
+    take_sample,
 )
 from gatestep.wire import (
     CLIPPED,
@@ -53,7 +56,7 @@ TICK_US = 20.0
 @njit(nogil=True, error_model="numpy", _nrt=False)
 def obey(m: Any, now: int) -> int:
     """Carry out the order in ``m.order`` as the hot loop does."""
-    return _obey(m, now)
+    return carry_out(m, m.order[0], now)
 
 
 class Tick(NamedTuple):
@@ -79,7 +82,7 @@ class Bench:
             }
         )
         self.spec = spec
-        self.m = make_memory(spec, records(LANE), 0, 0, np.zeros(ROOM))
+        self.m = make_memory(spec, records(LANE), 0, 0, np.zeros(ROOM), np.zeros((2, 8)))
         self.loop, self.cells = self.m.loop[0], self.m.cells
         self.sample, self.answer = self.m.sample[0], self.m.answer[0]
         self.message = np.zeros(MAX_MESSAGE, np.uint8)
@@ -101,10 +104,11 @@ class Bench:
         """Take a message's bytes as the rig's that holds the loop."""
         self.message[: len(message)] = np.frombuffer(message, np.uint8)
         m = self.m
-        kind = consider(
-            self.loop, self.cells, m.banks, m.table, m.past, self.message, len(message),
-            self.sample, self.answer,
-        )  # fmt: skip
+        kind = WAS_MALFORMED
+        if decode(self.loop, self.message, len(message), self.sample):
+            kind = take_sample(
+                self.loop, self.cells, m.banks, m.table, m.past, self.sample, self.answer
+            )
         if kind == ANSWERED:
             settle_answer(self.loop, self.answer, m.past, 1)
         a = self.answer
@@ -870,13 +874,8 @@ def test_malformed_and_oversized_messages_change_nothing(bench):
     bench.take(0, -60.0)
     before = bench.cells.tobytes(), int(bench.loop.seq), int(bench.loop.state)
     assert bench.put(msgpack.packb([1, 20, None, None, "x"])).kind == WAS_MALFORMED
-    m = bench.m
     for size in (513, 2**31, 2**62):
-        found = consider(
-            bench.loop, bench.cells, m.banks, m.table, m.past, bench.message, size,
-            bench.sample, bench.answer,
-        )  # fmt: skip
-        assert found == WAS_MALFORMED
+        assert not decode(bench.loop, bench.message, size, bench.sample)
     assert bench.loop.malformed == 4
     assert before == (bench.cells.tobytes(), int(bench.loop.seq), int(bench.loop.state))
     assert bench.take(1, -60.0).flags == LIVE

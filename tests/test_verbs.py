@@ -16,7 +16,7 @@ from hypothesis import strategies as st
 
 from gatestep.kernel import BANK, records
 from gatestep.library import load_model
-from gatestep.loop import Order, Outcome
+from gatestep.orders import Order, Outcome
 from gatestep.shelf import Shelf
 from gatestep.states import Fault, State
 from gatestep.tables import build_tables

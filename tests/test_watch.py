@@ -9,7 +9,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from gatestep.loop import BLOCK, ENTRY, Entry, Order
+from gatestep.loop import BLOCK, ENTRY, Entry
+from gatestep.orders import Order
 from gatestep.states import FAULT_TEXTS, Fault, State
 from gatestep.tick import LOOP
 from gatestep.watch import Durations, Watch

@@ -219,6 +219,7 @@ def anticipated(
     x: Any,
     v_mv: float,
     coming_pa: Any,
+    stimulus_pa: float,
     delay_ms: float,
     dt_ms: float,
 ) -> float:
@@ -235,6 +236,8 @@ def anticipated(
     coming_pa : array of float64
         Currents in force until the hold: ``coming_pa[0]`` is the answer before this one,
         in force over the last ``dt_ms`` before it, ``coming_pa[1]`` the one before that.
+    stimulus_pa : float
+        A known current that is to flow over the hold beside the model's.
     delay_ms, dt_ms : float
         From the sample to the hold, and the length of the hold.
     """
@@ -242,7 +245,7 @@ def anticipated(
     for k in range(np.uint64(bank.dynamic)):
         y[k] = x[k]
     rest_pa = _rest(shadow)
-    own_pa = rest_pa + leak_ns * shadow.leak_mv
+    own_pa = rest_pa + leak_ns * shadow.leak_mv + stimulus_pa
     h_ms = dt_ms / substeps
     h = h_ms / shadow.capacitance_pf
     at_mv = _to_hold(shadow, v_mv, rest_pa, coming_pa, delay_ms, dt_ms)

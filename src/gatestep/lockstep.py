@@ -42,7 +42,7 @@ from .stability import Settings
 from .states import State
 from .tables import Tables, fill_bank
 from .tick import CELL, LOOP, begin_session, settle_answer, take_sample
-from .wire import ANSWER
+from .wire import ANSWER, NIL
 
 FINE_US = 10.0
 """Longest time between two of the voltages that spikes are found in, in µs."""
@@ -270,7 +270,7 @@ def _server_side(conditions: Conditions, cell: SimCellSpec, model: Tables) -> _S
     loop.budget_us = max(1.0, longest_ticks) * conditions.tick_us
     loop.due_ticks = floor(longest_ticks) + 1
     loop.late_run_limit = np.iinfo(np.int64).max
-    loop.on_arrival = not conditions.next_tick
+    loop.play_slot = NIL
     loop.usual_delay_us = usual_ticks * conditions.tick_us
     loop.state = _IDLE
     _fill_cell(cells[0], conditions, cell)

@@ -7,7 +7,8 @@ loop's own record, go out over another. Orders are taken between two samples, an
 the order of work is always reply first, log after.
 
 Arrays that the loop reads and others prepare: the banks and their tables. A control
-thread writes only banks that are not in force and hands them over with a ``SWAP``.
+thread writes only banks that are not in force and hands them over with a ``SWAP``; the
+same goes for the slots of stimuli and ``PLAY``.
 """
 
 from __future__ import annotations
@@ -17,50 +18,29 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
-from .anticipate import forget
 from .compiling import compiled, inner
 from .inforce import HISTORY
-from .kernel import BANK, records, settle
+from .kernel import BANK, records
 from .lanebase import CLOSED, GONE, MAX_PEER, NOTHING, now_nsec
 from .lanes import close_lane, receive, reply
+from .orders import AGENDA, ORDER, Order, Outcome, obey
 from .specs import MAX_CELLS, RigSpec
-from .states import Event, Fault, State, next_state
+from .states import Fault
 from .tick import (
     ANSWERED,
     CELL,
     LOOP,
     WAS_MALFORMED,
     begin_session,
-    consider,
+    decode,
+    play,
     refuse,
     settle_answer,
+    take_sample,
     trip,
 )
-from .wire import ANSWER, NIL, SAMPLE, write_answer, write_malformed
+from .wire import ANSWER, NIL, REPEAT, SAMPLE, write_answer, write_malformed
 from .zmqlane import send, take
-
-
-class Order(IntEnum):
-    """What the loop can be told to do."""
-
-    ARM = 0
-    DISARM = 1
-    RESET = 2
-    STOP = 3
-    SWAP = 4
-    SET_GMAX = 5
-    SET_REVERSAL = 6
-    MARK = 7
-    FORESEE = 8
-
-
-class Outcome(IntEnum):
-    """What became of an order."""
-
-    DONE = 0
-    TRIPPED = 1
-    WRONG_TICK = 2
-    STOPPING = 3
 
 
 class Entry(IntEnum):
@@ -74,20 +54,6 @@ class Entry(IntEnum):
     CLOCK_JUMP = 5
 
 
-ORDER = np.dtype(
-    [
-        ("number", "i8"),  # echoed in the log entry that tells the outcome
-        ("kind", "i8"),
-        ("cell", "i8"),
-        ("index", "i8"),  # bank for SWAP, conductance for SET_GMAX and SET_REVERSAL
-        ("value", "f8"),
-        ("on", "i8"),  # how the cell anticipates, for SWAP and FORESEE
-        ("substeps", "i8"),
-        ("alpha", "f8"),
-        ("beta", "f8"),
-    ],
-    align=True,
-)
 ENTRY = np.dtype(
     [
         ("kind", "i8"),
@@ -106,6 +72,7 @@ ENTRY = np.dtype(
         ("value", "f8"),
         ("v_mv", "f8", (MAX_CELLS,)),
         ("i_pa", "f8", (MAX_CELLS,)),
+        ("stimulus_pa", "f8", (MAX_CELLS,)),  # what the sweep asked for; 0 unless live
     ],
     align=True,
 )
@@ -120,6 +87,9 @@ DESK = np.dtype(
         ("order_at", "u8"),
         ("block_at", "u8"),
         ("entries", "i8"),  # waiting in the block
+        ("planned", "i8"),  # orders on the agenda
+        ("next", "i8"),  # the first of them
+        ("urgent", "i8"),  # whether an entry waits that should be handed over at once
         ("untold", "i8"),  # whether a counter has moved that no waiting entry tells
         ("flushed_nsec", "i8"),
         ("holder_serial", "i8"),
@@ -133,16 +103,13 @@ _FLUSH_NSEC = 20_000_000
 _STOP_NSEC = 250_000_000
 _ORDERS_A_TURN = 4
 _BLOCK = BLOCK
+_AGENDA = np.int64(AGENDA)
+_REPEAT = np.int64(REPEAT)
 _LOOP_SIZE = LOOP.itemsize
 _ENTRY_SIZE = ENTRY.itemsize
 _ORDER_SIZE = ORDER.itemsize
-_IDLE, _TRIPPED, _DISARM = int(State.IDLE), int(State.TRIPPED), int(Event.DISARM)
-_ORDER_EVENTS = np.array([Event.ARM, Event.DISARM, Event.RESET], dtype=np.int64)
-_ARM, _RESET, _STOP = int(Order.ARM), int(Order.RESET), int(Order.STOP)
-_MARK, _SWAP, _FORESEE = int(Order.MARK), int(Order.SWAP), int(Order.FORESEE)
-_SET_GMAX, _SET_REVERSAL = int(Order.SET_GMAX), int(Order.SET_REVERSAL)
-_DONE, _WAS_TRIPPED = int(Outcome.DONE), int(Outcome.TRIPPED)
-_WAS_WRONG_TICK, _WAS_STOPPING = int(Outcome.WRONG_TICK), int(Outcome.STOPPING)
+_NO_ROOM, _DROPPED = int(Outcome.NO_ROOM), int(Outcome.DROPPED)
+_CANCEL = int(Order.CANCEL)
 # Typed, so that compiled callers share one body: a plain literal makes a type of its own.
 _SAMPLE, _ORDER, _TRIP = (np.int64(e) for e in (Entry.SAMPLE, Entry.ORDER, Entry.TRIP))
 _HOLD, _RELEASE, _CLOCK_JUMP = (np.int64(e) for e in (Entry.HOLD, Entry.RELEASE, Entry.CLOCK_JUMP))
@@ -167,11 +134,15 @@ class LoopMemory(NamedTuple):
     table: Any
     past: Any
     order: Any
+    agenda: Any
+    stimulus: Any
     sample: Any
     answer: Any
 
 
-def make_memory(rig: RigSpec, lane: Any, orders: int, log: int, table: Any) -> LoopMemory:
+def make_memory(
+    rig: RigSpec, lane: Any, orders: int, log: int, table: Any, stimulus: Any
+) -> LoopMemory:
     """Allocate and set up what the loop needs.
 
     Parameters
@@ -184,6 +155,8 @@ def make_memory(rig: RigSpec, lane: Any, orders: int, log: int, table: Any) -> L
         ``Socket.underlying`` of the loop's ends of the inproc sockets.
     table : ndarray of float64
         Room for the tables of two banks a cell.
+    stimulus : ndarray (slots, ticks) of float64
+        Where the stimuli of sweeps are written, pA; only to slots that do not play.
     """
     block = np.zeros(_LOOP_SIZE + BLOCK * _ENTRY_SIZE, np.uint8)
     loop = block[:_LOOP_SIZE].view(LOOP).view(np.recarray)
@@ -207,7 +180,8 @@ def make_memory(rig: RigSpec, lane: Any, orders: int, log: int, table: Any) -> L
         cell.bank = 2 * k
     return LoopMemory(
         desk, lane, block, loop, entries, cells, records(BANK, 2 * len(rig.cell)), table,
-        records(ANSWER, HISTORY), order, records(SAMPLE), records(ANSWER),
+        records(ANSWER, HISTORY), order, records(ORDER, AGENDA), stimulus, records(SAMPLE),
+        records(ANSWER),
     )  # fmt: skip
 
 
@@ -219,9 +193,10 @@ def _set_up_loop(loop: Any, rig: RigSpec) -> None:
     loop.due_ticks = max(whole_ticks, 1) + (rig.loop.apply == "next-tick")
     loop.silence_nsec = int(rig.limits.silence_ms * 1e6)
     loop.late_run_limit = rig.limits.late_run
-    loop.on_arrival = rig.loop.apply == "on-arrival"
-    loop.usual_delay_us = rig.loop.interval_us * (0.5 if loop.on_arrival else 1.0)
+    on_arrival = rig.loop.apply == "on-arrival"
+    loop.usual_delay_us = rig.loop.interval_us * (0.5 if on_arrival else 1.0)
     loop.fault_cell = NIL
+    loop.play_slot = NIL
     loop.late_through = NIL
     loop.due_through = NIL
 
@@ -236,6 +211,7 @@ def _flush(m: Any, now: int) -> None:
         m.loop[0].records_lost += desk.entries
     desk.entries = 0
     desk.untold = 0
+    desk.urgent = 0
     desk.flushed_nsec = now
 
 
@@ -279,9 +255,11 @@ def _log_sample(m: Any, received: int) -> None:
     entry.lag_us = sample.lag_us
     entry.flags = answer.flags
     entry.service_nsec = answer.service_nsec
+    first = np.float64(answer.flags & _REPEAT == 0)
     for k in range(np.uint64(m.loop[0].cells)):
         entry.v_mv[k] = sample.v_mv[k]
         entry.i_pa[k] = answer.i_pa[k]
+        entry.stimulus_pa[k] = first * m.cells[k].stimulus_pa
 
 
 @inner
@@ -317,72 +295,56 @@ def _let_go(m: Any, fault: int, now: int) -> None:
     loop.held = 0
     loop.running = 0
     m.desk[0].holder_size = 0
+    _clear_agenda(m, now)
     _log_event(m, _RELEASE, loop.session, NIL, now)
 
 
 @inner
-def _swap(cell: Any, banks: Any, table: Any, bank: int) -> None:
-    """[hot] Put a prepared bank in force, its gates at steady state for the present voltage."""
-    cell.bank = bank
-    if cell.settled:
-        settle(banks[np.uint64(bank)], table, cell.x, cell.v_mv)
-        cell.owed_ticks = 0.0
+def _log_order(m: Any, order: Any, outcome: int, now: int) -> None:
+    """[hot] Log what became of an order; it is handed over when the turn ends."""
+    entry = _new_entry(m, _ORDER, now)
+    entry.number = order.number
+    entry.code = order.kind
+    entry.outcome = outcome
+    entry.cell = order.cell
+    entry.index = order.index
+    entry.value = order.value
+    m.desk[0].urgent = 1
 
 
 @inner
-def _foresee(shadow: Any, order: Any) -> None:
-    """[hot] Let a cell anticipate, or not, as an order says."""
-    shadow.on = order.on
-    shadow.substeps = order.substeps
-    shadow.alpha = order.alpha
-    shadow.beta = order.beta
-    forget(shadow)
+def _plan(m: Any, order: Any, now: int) -> None:
+    """[hot] Put an order on the agenda; the planner gives them in the order of their samples."""
+    desk = m.desk[0]
+    if desk.planned == _AGENDA:
+        _log_order(m, order, _NO_ROOM, now)
+        return
+    m.agenda[np.uint64((desk.next + desk.planned) % _AGENDA)] = order
+    desk.planned += 1
 
 
 @inner
-def _change_state(loop: Any, kind: int) -> int:
-    """[hot] Arm, disarm or reset as the transition table says; the outcome."""
-    if kind == _ARM:
-        if loop.stopping:
-            return _WAS_STOPPING
-        if loop.state == _TRIPPED:
-            return _WAS_TRIPPED
-        if loop.tick_wrong:
-            return _WAS_WRONG_TICK
-        loop.late_run = 0
-        if loop.state == _IDLE:
-            loop.armed_after = loop.seq if loop.running else np.int64(NIL)
-    loop.state = next_state(loop.state, _ORDER_EVENTS[np.uint64(kind)])
-    if loop.state != _TRIPPED:
-        loop.fault = _NO_FAULT
-        loop.fault_cell = NIL
-    return _DONE
+def _clear_agenda(m: Any, now: int) -> None:
+    """[hot] Drop what waits for its sample, and end a stimulus."""
+    desk = m.desk[0]
+    while desk.planned > 0:
+        _log_order(m, m.agenda[np.uint64(desk.next)], _DROPPED, now)
+        desk.next = (desk.next + 1) % _AGENDA
+        desk.planned -= 1
+    m.loop[0].play_slot = NIL
 
 
 @inner
-def _obey(m: Any, now: int) -> int:
-    """[hot] Carry out one order; its outcome."""
-    loop, order = m.loop[0], m.order[0]
-    if order.kind <= _RESET:
-        return _change_state(loop, order.kind)
-    if order.kind == _STOP:
-        loop.state = next_state(loop.state, _DISARM)
-        loop.stopped_nsec = loop.stopped_nsec if loop.stopping else now
-        loop.stopping = 1
-        return _DONE
-    if order.kind == _MARK:
-        return _DONE
-    cell = m.cells[np.uint64(order.cell)]
-    bank = m.banks[np.uint64(cell.bank)]
-    if order.kind == _SWAP or order.kind == _FORESEE:
-        _foresee(cell.shadow, order)
-    if order.kind == _SWAP:
-        _swap(cell, m.banks, m.table, order.index)
-    elif order.kind == _SET_GMAX:
-        bank.gmax_ns[np.uint64(order.index)] = order.value
-    elif order.kind == _SET_REVERSAL:
-        bank.reversal_mv[np.uint64(order.index)] = order.value
-    return _DONE
+def _keep_agenda(m: Any, seq: int, now: int) -> None:
+    """[hot] Carry out what was to be done before the step of this sample."""
+    desk = m.desk[0]
+    while desk.planned > 0:
+        order = m.agenda[np.uint64(desk.next)]
+        if order.at > seq:
+            return
+        _log_order(m, order, obey(m, order, now), now)
+        desk.next = (desk.next + 1) % _AGENDA
+        desk.planned -= 1
 
 
 @inner
@@ -393,15 +355,12 @@ def _take_orders(m: Any) -> None:
         if take(desk.orders, desk.order_at, _ORDER_SIZE) != _ORDER_SIZE:
             return
         now = now_nsec(m.lane[0])
-        outcome = _obey(m, now)
-        entry = _new_entry(m, _ORDER, now)
-        entry.number = order.number
-        entry.code = order.kind
-        entry.outcome = outcome
-        entry.cell = order.cell
-        entry.index = order.index
-        entry.value = order.value
-        _flush(m, now)
+        if order.at != NIL:
+            _plan(m, order, now)
+        else:
+            if order.kind == _CANCEL:
+                _clear_agenda(m, now)
+            _log_order(m, order, obey(m, order, now), now)
 
 
 @inner
@@ -428,7 +387,12 @@ def _answer_holder(m: Any, size: int, received: int) -> None:
     trips, jumps, held = loop.trips, loop.clock_jumps, loop.held
     if not held:
         begin_session(loop, m.cells, m.past)
-    found = consider(loop, m.cells, m.banks, m.table, m.past, lane.message, size, sample, answer)
+    found = np.int64(WAS_MALFORMED)
+    if decode(loop, lane.message, size, sample):
+        if not loop.running or sample.seq > loop.seq:
+            _keep_agenda(m, sample.seq, received)
+            play(loop, m.cells, m.stimulus, sample.seq)
+        found = take_sample(loop, m.cells, m.banks, m.table, m.past, sample, answer)
     if found == ANSWERED:
         settle_answer(loop, answer, m.past, now_nsec(lane) - received)
     sent = _send_answer(m, found)
@@ -490,7 +454,7 @@ def run_loop(m: Any) -> int:
                 _answer_holder(m, size, now)
         _take_orders(m)
         news = desk.entries or desk.untold or lane.undelivered != loop.undelivered
-        if news and now - desk.flushed_nsec > _FLUSH_NSEC:
+        if desk.urgent or (news and now - desk.flushed_nsec > _FLUSH_NSEC):
             _flush(m, now)
     close_lane(lane)
     _flush(m, now)

@@ -29,14 +29,16 @@ from .config import LoadedRig, load_rig_models
 from .errors import ControlError, LinkError
 from .hosttune import HostTuning
 from .kernel import records
-from .loop import ORDER, Order, make_memory, run_loop
+from .loop import make_memory, run_loop
 from .loopport import LoopPort, bound_endpoint, bound_socket, choose_lane
 from .network import Gatekeeper
-from .shelf import Shelf, make_room
+from .orders import ORDER, Order
+from .shelf import Shelf, make_room, make_slots
 from .states import State
 from .tables import build_tables
 from .verbs import Answer, Built, Confirmed, Verbs, Waiting, refusal, safely
 from .watch import LoopEvent, Watch
+from .wire import NIL
 from .zmqlane import load_libzmq
 
 Say = Callable[[str], None]
@@ -104,13 +106,14 @@ class Server:
         self._port = LoopPort(self.rig, self._context, self._gatekeeper)
         self._orders_out, self._orders_in = self._pipe("orders")
         self._log_out, self._log_in = self._pipe("log")
-        table = make_room()
+        table, self._slots = make_room(), make_slots()
         self._memory = make_memory(
             self.rig.spec,
             self._port.lane,
             self._orders_in.underlying,
             self._log_out.underlying,
             table,
+            self._slots,
         )
         self._compile()
         self._bind()
@@ -254,11 +257,17 @@ class Server:
         self._result.append(int(run_loop(self._memory)))
 
     def _send_order(
-        self, kind: Order, cell: int, index: int, value: float, choice: Choice | None = None
+        self,
+        kind: Order,
+        cell: int = 0,
+        index: int = 0,
+        value: float = 0.0,
+        choice: Choice | None = None,
+        at: int = int(NIL),
     ) -> int:
         self._orders_sent += 1
         order = records(ORDER)
-        order[0].number, order[0].kind = self._orders_sent, kind
+        order[0].number, order[0].kind, order[0].at = self._orders_sent, kind, at
         order[0].cell, order[0].index, order[0].value = cell, index, value
         if choice is not None:
             order[0].on, order[0].substeps = choice.on, choice.substeps

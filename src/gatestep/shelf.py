@@ -43,6 +43,15 @@ def make_room() -> npt.NDArray[np.float64]:
     return np.empty(ROOM, np.float64)
 
 
+STIMULUS_TICKS = 1 << 24
+"""Longest sweep in ticks: two slots of 128 MiB each, touched only where used."""
+
+
+def make_slots() -> npt.NDArray[np.float64]:
+    """Two slots for stimuli: while one plays, the next is written to the other."""
+    return np.empty((2, STIMULUS_TICKS), np.float64)
+
+
 class Shelf:
     """The models in force and prepared, cell by cell.
 

@@ -1,6 +1,6 @@
 """What one sample does to the loop, without any socket.
 
-:func:`consider` takes a message's bytes and fills the answer: decode, account for
+:func:`decode` reads a message and :func:`take_sample` fills the answer: account for
 gaps, repeats, lateness and the rig's clock, step every cell's gates, then let the
 guard pass a current. Gates follow the measured voltage in every state, so that
 arming finds them where the cell's history has put them.
@@ -18,6 +18,7 @@ from .compiling import compiled, inner
 from .guard import limited, voltage_fault
 from .inforce import HISTORY, fill_coming, flowed, note_lag
 from .kernel import STATES, current, settle, step
+from .specs import MAX_CONDUCTANCES
 from .states import Event, Fault, State, next_state
 from .wire import CLIPPED, GAP, LATE, LIVE, NIL, REFUSED, REPEAT, TRIPPED, read_sample
 
@@ -30,7 +31,6 @@ LOOP = np.dtype(
         ("due_ticks", "i8"),  # an answer should be in force this many samples later
         ("silence_nsec", "i8"),
         ("late_run_limit", "i8"),
-        ("on_arrival", "i8"),
         ("usual_delay_us", "f8"),  # from a sample to its answer's current, before it is known
         # The state, and what led to it.
         ("state", "i8"),
@@ -39,6 +39,11 @@ LOOP = np.dtype(
         ("armed_after", "i8"),  # newest answered when it was last armed; NIL in a new session
         ("stopping", "i8"),
         ("stopped_nsec", "i8"),  # when it was ordered to stop
+        # The stimulus of a sweep.
+        ("play_slot", "i8"),  # NIL when none plays
+        ("play_cell", "i8"),
+        ("play_from", "i8"),  # its first sample
+        ("play_ticks", "i8"),
         # The rig that holds the loop, and its sequence.
         ("held", "i8"),
         ("session", "i8"),  # rigs that have taken hold so far
@@ -86,6 +91,11 @@ CELL = np.dtype(
         ("owed_ticks", "f8"),  # ticks the gates have not been carried across
         ("v_mv", "f8"),  # newest finite voltage
         ("i_pa", "f8"),  # current last answered
+        ("stimulus_pa", "f8"),  # to be added to the model's current in the next answer
+        ("ramp_ticks", "i8"),  # how long a change of gmax takes
+        ("ramp_left", "i8"),
+        ("ramp_from_ns", "f8", (MAX_CONDUCTANCES,)),
+        ("ramp_to_ns", "f8", (MAX_CONDUCTANCES,)),
         ("x", "f8", (STATES,)),
         ("coming_pa", "f8", (MOST_SEGMENTS,)),
         ("shadow", SHADOW),
@@ -99,7 +109,7 @@ TICK_TOLERANCE = 0.01
 _JUMP_US = 1e6
 
 ANSWERED, WAS_REPEAT, WAS_MALFORMED = 0, 1, 2
-"""What :func:`consider` found the message to be."""
+"""What a message was found to be."""
 
 _LAST = np.int64(HISTORY - 1)
 _IDLE, _ARMED, _TRIPPED = int(State.IDLE), int(State.ARMED), int(State.TRIPPED)
@@ -122,6 +132,7 @@ def begin_session(loop: Any, cells: Any, past: Any) -> None:
     loop.tick_us = 0.0
     loop.tick_wrong = 0
     loop.in_force = NIL
+    loop.play_slot = NIL
     loop.delay_us = loop.usual_delay_us
     for k in range(HISTORY):
         past[k].seq = NIL
@@ -129,6 +140,7 @@ def begin_session(loop: Any, cells: Any, past: Any) -> None:
         cells[k].settled = 0
         cells[k].owed_ticks = 0.0
         cells[k].i_pa = 0.0
+        cells[k].stimulus_pa = 0.0
         forget(cells[k].shadow)
 
 
@@ -243,14 +255,25 @@ def _model_current(
         delay_ms, interval_ms = loop.delay_us * 1e-3, loop.interval_us * 1e-3
         cross(cell.shadow, bank, table, cell.x, cell.v_mv, v_mv, delay_ms, interval_ms)
         wanted = anticipated(
-            cell.shadow, bank, table, cell.x, v_mv, cell.coming_pa, delay_ms, interval_ms
-        )
+            cell.shadow, bank, table, cell.x, v_mv, cell.coming_pa, cell.stimulus_pa,
+            delay_ms, interval_ms,
+        )  # fmt: skip
     else:
         loop.fallbacks += cell.shadow.on
         wanted = _step_cell(loop, cell, bank, table, v_mv)
     cell.v_mv = v_mv
     cell.owed_ticks = 0.0
-    return wanted
+    return wanted + cell.stimulus_pa
+
+
+@inner
+def _ramp(cell: Any, bank: Any, ticks: int) -> None:
+    """[hot] Carry a change of gmax on by ``ticks``; its end is exact."""
+    cell.ramp_left = max(cell.ramp_left - ticks, 0)
+    share = np.float64(cell.ramp_left) / np.float64(cell.ramp_ticks)
+    for c in range(np.uint64(MAX_CONDUCTANCES)):
+        back_ns = share * (cell.ramp_from_ns[c] - cell.ramp_to_ns[c])
+        bank.gmax_ns[c] = cell.ramp_to_ns[c] + back_ns
 
 
 @inner
@@ -270,6 +293,8 @@ def _answer_cells(
         cell = cells[k]
         cell.owed_ticks += ticks
         bank = banks[np.uint64(cell.bank)]
+        if cell.ramp_left > 0:
+            _ramp(cell, bank, ticks)
         wanted = _model_current(loop, cell, bank, table, past, sample, np.int64(k))
         if not isfinite(wanted):
             trip(loop, _BAD_CURRENT, k)
@@ -337,6 +362,17 @@ def _account(loop: Any, sample: Any, past: Any) -> int:
 
 
 @compiled
+def play(loop: Any, cells: Any, stimulus: Any, seq: int) -> None:
+    """[hot] Take the stimulus of a new sample, 0 where none plays."""
+    for k in range(np.uint64(loop.cells)):
+        cells[k].stimulus_pa = 0.0
+    at = seq - loop.play_from
+    if loop.play_slot != NIL and 0 <= at < loop.play_ticks:
+        slot = np.uint64(loop.play_slot)
+        cells[np.uint64(loop.play_cell)].stimulus_pa = stimulus[slot, np.uint64(at)]
+
+
+@compiled
 def take_sample(
     loop: Any, cells: Any, banks: Any, table: Any, past: Any, sample: Any, answer: Any
 ) -> int:
@@ -362,32 +398,20 @@ def take_sample(
     elif clipped:
         answer.flags |= CLIPPED
         loop.clipped += 1
+    live = np.float64(loop.state == _ARMED)
     for k in range(np.uint64(loop.cells)):
         cells[k].i_pa = answer.i_pa[k]
+        cells[k].stimulus_pa *= live
     return ANSWERED
 
 
 @compiled
-def consider(
-    loop: Any,
-    cells: Any,
-    banks: Any,
-    table: Any,
-    past: Any,
-    message: Any,
-    size: int,
-    sample: Any,
-    answer: Any,
-) -> int:
-    """[hot] Take one message of the rig that holds the loop and fill the answer.
-
-    Returns ``ANSWERED``, ``WAS_REPEAT`` or ``WAS_MALFORMED``; in the last case the
-    answer is not filled.
-    """
+def decode(loop: Any, message: Any, size: int, sample: Any) -> bool:
+    """[hot] Read a message of the rig that holds the loop; False, and counted, if malformed."""
     if size > message.size or not read_sample(message, size, loop.cells, sample):
         loop.malformed += 1
-        return WAS_MALFORMED
-    return take_sample(loop, cells, banks, table, past, sample, answer)
+        return False
+    return True
 
 
 @compiled

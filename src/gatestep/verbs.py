@@ -17,7 +17,7 @@ from .choosing import Choice, advice, choose
 from .config import LoadedRig
 from .errors import ControlError, GatestepError
 from .library import LoadedModel, load_model
-from .loop import Order, Outcome
+from .orders import Order, Outcome
 from .shelf import Ready, Shelf
 from .specs import MAX_GMAX_NS, MAX_REVERSAL_MV
 from .states import State

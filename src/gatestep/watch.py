@@ -14,7 +14,8 @@ from typing import Any
 
 import numpy as np
 
-from .loop import ENTRY, Entry, Order
+from .loop import ENTRY, Entry
+from .orders import Order
 from .states import FAULT_TEXTS, Fault, State
 from .tick import LOOP
 from .wire import NIL
