@@ -26,7 +26,6 @@ of its last addition into the next (Kahan 1965, Commun ACM 8:40).
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -45,10 +44,6 @@ ROWS = (257, 513, 1025, 2049, 4097, 8193)
 USUAL_ROWS = 2049
 INTERVAL_US = (5.0, 100_000.0)
 """Shortest and longest tick, µs: a rig file's own bounds."""
-USUAL_MV = (-120.0, 60.0)
-"""Range for the gain's error relative to its own local value."""
-
-_PARTS = 4  # each cell of the grid is examined at its quarters
 
 
 @dataclass(frozen=True)
@@ -110,23 +105,6 @@ class DeviceTables:
         return int(self.table.nbytes)
 
 
-@dataclass(frozen=True)
-class RowsError:
-    """What one choice of rows costs and misses.
-
-    ``inf_error`` is the largest distance of any steady state from its formula, of 1;
-    ``gain_error`` that of any gain, relative to it, over ``USUAL_MV``. ``jumps`` counts
-    the cells in which a piecewise formula switches, which both leave out.
-    """
-
-    rows: int
-    step_mv: float
-    table_bytes: int
-    inf_error: float
-    gain_error: float
-    jumps: int
-
-
 def device_tables(
     model: ModelSpec, rows: int = USUAL_ROWS, interval_us: float = 50.0
 ) -> DeviceTables:
@@ -156,7 +134,7 @@ def device_tables(
     column = np.zeros(len(gates), dtype=np.int64)
     for place, k in enumerate(moving):
         column[k] = 2 * place
-        table[:, 2 * place], table[:, 2 * place + 1] = _inf_and_gain(gates[k], v_mv, interval_us)
+        table[:, 2 * place], table[:, 2 * place + 1] = inf_and_gain(gates[k], v_mv, interval_us)
     for place, k in enumerate(instant):
         column[k] = 2 * len(moving) + place
         table[:, column[k]] = gates[k].at(v_mv)[0]
@@ -186,50 +164,7 @@ def _check(rows: int, interval_us: float) -> None:
         raise FirmwareError(f"a tick of {interval_us:g} µs: give {low:g} to {high:g} µs")
 
 
-def _inf_and_gain(gate: Kinetics, v_mv: Floats, interval_us: float) -> tuple[Floats, Floats]:
+def inf_and_gain(gate: Kinetics, v_mv: Floats, interval_us: float) -> tuple[Floats, Floats]:
+    """A gate's steady state and its gain over a tick, from its formulas, in float64."""
     inf, rate = gate.at(v_mv)
     return inf, -np.expm1(-rate * (interval_us * 1e-3))
-
-
-def rows_error(model: ModelSpec, rows: int, interval_us: float) -> RowsError:
-    """Measure what a float32 table of so many rows misses, at the quarters of its cells.
-
-    Raises
-    ------
-    FirmwareError
-        If there is no such grid or tick.
-    """
-    tables = device_tables(model, rows, interval_us)
-    v_mv = LOW_MV + SPAN_MV * np.arange((rows - 1) * _PARTS + 1) / ((rows - 1) * _PARTS)
-    usual = (v_mv >= USUAL_MV[0]) & (v_mv <= USUAL_MV[1])
-    worst_inf = worst_gain = 0.0
-    jumps = 0
-    for gate, column in zip(kinetics_of(model), tables.column, strict=True):
-        smooth = ~_switching(gate, v_mv)
-        jumps += int((~smooth[1::_PARTS]).sum())  # a first quarter lies in one cell only
-        inf, gain = _inf_and_gain(gate, v_mv, interval_us)
-        missed = np.abs(_between(tables.table[:, column]) - inf)
-        worst_inf = max(worst_inf, float(missed[smooth].max(initial=0.0)))
-        if not gate.instantaneous:
-            missed = np.abs(_between(tables.table[:, column + 1]) / gain - 1.0)
-            worst_gain = max(worst_gain, float(missed[smooth & usual].max(initial=0.0)))
-    step_mv = SPAN_MV / (rows - 1)
-    return RowsError(rows, step_mv, tables.table_bytes, worst_inf, worst_gain, jumps)
-
-
-def _between(column: Any) -> Floats:
-    """A column and linear interpolation at the quarters between its values."""
-    places = np.arange((column.size - 1) * _PARTS + 1) / _PARTS
-    between: Floats = np.interp(places, np.arange(column.size), column.astype(np.float64))
-    return between
-
-
-def _switching(gate: Kinetics, v_mv: Floats) -> NDArray[np.bool_]:
-    """Which examined places lie in a cell where a piecewise formula switches."""
-    marked = np.zeros(v_mv.size, dtype=bool)
-    if not gate.branching:
-        return marked
-    switches = (np.diff(gate.branches(v_mv).reshape(-1)) != 0).reshape(-1, _PARTS).any(axis=1)
-    for part in range(_PARTS + 1):
-        marked[part : part + _PARTS * switches.size : _PARTS] |= switches
-    return marked
