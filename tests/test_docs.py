@@ -15,10 +15,11 @@ import typer
 from pydantic.fields import FieldInfo
 from typer.core import TyperGroup
 
-from gatestep import specs
+from gatestep import planspecs, specs
 from gatestep.cli import app
 from gatestep.config import load_rig, load_rig_models
 from gatestep.library import shipped_models
+from gatestep.plans import load_plan
 from gatestep.states import diagram
 from gatestep.wire import FLAG_NAMES
 
@@ -27,11 +28,12 @@ README = (ROOT / "README.md").read_text("utf-8")
 DEVELOPERS = (ROOT / "DEVELOPERS.md").read_text("utf-8")
 CONFIGS = (ROOT / "configs" / "README.md").read_text("utf-8")
 RIGS = sorted((ROOT / "configs" / "rigs").glob("*.toml"))
+PLANS = sorted((ROOT / "configs" / "plans").glob("*.toml"))
 TEMPLATE = ROOT / "configs" / "rigs" / "template.toml"
 
 SPECS = {
     name: value
-    for name, value in vars(specs).items()
+    for name, value in {**vars(specs), **vars(planspecs)}.items()
     if isinstance(value, type) and issubclass(value, specs.Spec) and value is not specs.Spec
 }
 RIG_SPECS = tuple(specs.RigSpec.model_json_schema()["$defs"])
@@ -52,6 +54,16 @@ def test_the_simulated_scenarios_say_that_they_are_invented():
     for path in RIGS:
         comments = re.sub(r"\n# ", " ", path.read_text("utf-8"))
         assert "gatestep's own inventions" in comments, path
+
+
+@pytest.mark.parametrize("path", PLANS, ids=lambda path: path.stem)
+def test_every_plan_loads_is_listed_and_says_that_it_is_invented(path):
+    """A plan that ships is one that can be run, a short one, and its amplitudes are no advice."""
+    plan = load_plan(path)
+    assert plan.duration_ms() < 120_000
+    assert f"(plans/{path.name})" in CONFIGS
+    comments = re.sub(r"\n# ", " ", path.read_text("utf-8"))
+    assert "gatestep's own inventions" in comments
 
 
 def _switched_on(text: str) -> str:
@@ -100,6 +112,8 @@ def default_of(field: FieldInfo) -> str:
         return "none"
     if isinstance(default, specs.Spec):
         return "its defaults"
+    if isinstance(default, tuple) and len(default) == 1:
+        default = default[0]  # where a list may stand for one value, one value may be written
     return f"`{json.dumps(default)}`"
 
 
