@@ -43,6 +43,8 @@ extern const struct gsb_link_type gsb_serial;
 struct gsb_link {
     const struct gsb_link_type *type;
     uint32_t cells;         /* what a hello tells, and an answer must have */
+    float interval_us;      /* what a hello tells; gsb_device_init sets it */
+    uint8_t features;       /* likewise: 1 samples for a server, 2 a model on the device */
     const uint8_t *message; /* of the event before */
     size_t message_size;
     uint8_t kind;           /* of a frame; serial only */

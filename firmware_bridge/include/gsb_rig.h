@@ -82,6 +82,7 @@ struct gsb_rig {
     int64_t applied;        /* answer that i_pa is from, or GSB_NIL */
     uint32_t applied_t_us;  /* when its sample was taken, low bits */
     struct gsb_answer next; /* waits for its tick */
+    uint32_t next_t_us;     /* when its sample was taken, low bits */
     float i_pa[GSB_CELLS_MAX];
     struct gsb_counters counters;
 };
@@ -101,7 +102,7 @@ int gsb_rig_fault(struct gsb_rig *rig, uint64_t now_us, int error);
 /* A tick of the sample clock: makes the sample to send from the voltages just measured,
  * and with next-tick lets the waiting answer flow from now on. seq follows the clock:
  * ticks that it went past are counted and left out. GSB_OK, or a fault; the sample is to be
- * sent in either case while the rig is running or silent. `sample` may be null otherwise. */
+ * sent in either case while the rig is running or silent. */
 int gsb_rig_tick(struct gsb_rig *rig, uint64_t now_us, const float *v_mv,
                  struct gsb_sample *sample);
 
@@ -113,7 +114,8 @@ int gsb_rig_answer(struct gsb_rig *rig, uint64_t now_us, const struct gsb_answer
 int gsb_rig_poll(struct gsb_rig *rig, uint64_t now_us);
 
 /* After every call above: while this is 1, write gsb_rig_current_pa to the converter and
- * say when that was done. Only then is it in force, and the lag is up to then. */
+ * say when that was done. Only then is it in force, and the lag is up to then. An answer
+ * of which any cell's current had to be limited here is not reported as in force. */
 int gsb_rig_write_due(const struct gsb_rig *rig);
 const float *gsb_rig_current_pa(const struct gsb_rig *rig);
 void gsb_rig_wrote(struct gsb_rig *rig, uint64_t now_us);
