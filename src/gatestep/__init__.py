@@ -1,7 +1,7 @@
 """gatestep: a real-time model server for dynamic clamp.
 
-The classes a script needs are here: :class:`Control`, :class:`Server` and
-:class:`SimRig`. They are imported when first used, so that importing the package
+What a script needs is here: :class:`Control`, :class:`Server`, :class:`SimRig` and
+:func:`open_journal`. They are imported when first used, so that importing the package
 costs nothing.
 """
 
@@ -13,6 +13,7 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from .config import load_rig as load_rig
     from .control import Control as Control
+    from .journalfile import open_journal as open_journal
     from .library import load_model as load_model
     from .server import Server as Server
     from .simrig import SimRig as SimRig
@@ -25,8 +26,11 @@ _HOMES = {
     "SimRig": "simrig",
     "load_model": "library",
     "load_rig": "config",
+    "open_journal": "journalfile",
 }
-__all__ = ["Control", "Server", "SimRig", "__version__", "load_model", "load_rig"]
+__all__ = [
+    "Control", "Server", "SimRig", "__version__", "load_model", "load_rig", "open_journal",
+]  # fmt: skip
 
 
 def __getattr__(name: str) -> Any:

@@ -1,0 +1,423 @@
+"""The journal's writer: everything that happens, on disk, while it happens.
+
+The attending thread hands over the loop's log and its own notes and never waits; one
+writer thread owns the file. Between them stands a queue of bounded size. A disk that is
+slow fills it, and then samples are dropped and counted, events are kept; a disk that
+fails ends the record. The loop goes on in every case, and it is said once.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import datetime
+import os
+import threading
+import time
+from collections import deque
+from collections.abc import Callable, Mapping
+from pathlib import Path
+from typing import Any, NamedTuple
+
+import numpy as np
+
+from .errors import JournalError
+from .journalbytes import Kind, dtype_as_json, pack_block, pack_json, sample_dtype, unpack_json
+from .journalentries import Entries, Event, only_events
+from .journalfacts import model_payload, start_now
+from .journalout import Out, sync_folder
+from .library import LoadedModel
+from .specs import RecordSpec
+from .tables import Tables
+
+BLOCK_BYTES = 1 << 20
+"""Most bytes of samples in one block."""
+
+_BATCH_BYTES = 4 << 20  # of the queue, made into blocks at once
+_WAKE_BYTES = 2 << 20  # waiting: then the writer need not be due to be woken
+_CLOSE_S = 30.0
+
+
+class _Dropped(NamedTuple):
+    """Samples that found no room in the queue, at one place in it."""
+
+    samples: int
+    blocks: int
+    newest: int | None
+
+
+class _Note(NamedTuple):
+    kind: str
+    nsec: int
+    fields: bytes
+
+
+class _Expected(NamedTuple):
+    number: int
+    kind: str
+    fields: bytes
+
+
+class _Model(NamedTuple):
+    id: int
+    model: LoadedModel
+    tables: Tables
+
+
+_Item = bytes | _Dropped | _Note | _Expected | _Model | threading.Event
+
+
+class Journal:
+    """A journal that is being written.
+
+    Nothing here raises for a disk's sake: a journal that cannot be made or carried on is
+    ``failed``, ``say`` is told once, and everything handed over from then on is counted.
+
+    Parameters
+    ----------
+    spec : RecordSpec
+    folder : Path
+        Where the file is made; made itself when missing.
+    header : mapping
+        From :func:`gatestep.journalfacts.header_of`.
+    cells : int
+        Voltages of a sample.
+    say : callable
+        Takes a line for the user; called on the writer's thread or the caller's.
+    name : str
+        The middle of the file's name: the rig file's, without its suffix.
+    """
+
+    def __init__(
+        self,
+        spec: RecordSpec,
+        folder: Path,
+        header: Mapping[str, Any],
+        cells: int,
+        say: Callable[[str], None],
+        name: str,
+        out: Callable[[Path], Out] = Out,
+    ) -> None:
+        self._spec, self._say = spec, say
+        self._limit = int(spec.queue_mb * 1e6)
+        self._lock = threading.Lock()
+        self._queue: deque[tuple[_Item, int]] = deque()
+        self._queued = self._high_water = 0
+        self._dropped_samples = self._dropped_blocks = 0
+        self._missing = _Dropped(0, 0, None)
+        self._models: dict[tuple[str, str], int] = {}
+        self._state, self._reason = ("on", "") if spec.on else ("off", "")
+        self._path: Path | None = None
+        self._size = self._written = self._serial = 0
+        self._index: dict[str, list[int]] = {
+            "offset": [], "kind": [], "length": [], "position": []
+        }  # fmt: skip
+        self._entries = Entries(cells)
+        self._wake, self._closing = threading.Event(), threading.Event()
+        self._thread: threading.Thread | None = None
+        self._synced, self._synced_size = 0.0, 0
+        if spec.on:
+            self._begin(folder, dict(header), cells, name, out)
+
+    def add_model(self, model: LoadedModel, tables: Tables) -> int:
+        """Have a model in the journal, once for each text and table; its number there."""
+        with self._lock:
+            key = model.sha256, tables.sha256
+            if key not in self._models:
+                self._models[key] = len(self._models)
+                number = self._models[key]
+                self._put(_Model(number, model, tables), tables.table.nbytes)
+            return self._models[key]
+
+    def expect(self, number: int, kind: str, **fields: Any) -> None:
+        """Say what an order means, before the log that tells its outcome is handed over."""
+        content = pack_json(fields)
+        with self._lock:
+            self._put(_Expected(number, kind, content), len(content))
+
+    def note(self, kind: str, **fields: Any) -> None:
+        """Put in an event after all that was handed over so far."""
+        content = pack_json(fields)
+        with self._lock:
+            self._put(_Note(kind, time.monotonic_ns(), content), len(content))
+
+    def take(self, block: bytes) -> None:
+        """Hand over a block of the loop's log: its ``LOOP`` record and its entries."""
+        with self._lock:
+            if self._state == "on" and self._queued + len(block) <= self._limit:
+                self._put(block, len(block))
+                return
+            if self._state not in {"on", "failed"}:
+                return
+            first = self._state == "on" and not self._dropped_samples
+            dropped = self._drop(block)
+        if first and dropped:
+            self._say(
+                "RECORD INCOMPLETE: the disk is too slow, and samples are left out of "
+                f"{self._path}; the loop goes on. Record to a faster disk ([record] folder)"
+            )
+
+    def status(self) -> dict[str, Any]:
+        """How the journal stands."""
+        with self._lock:
+            return {
+                "state": self._state,
+                "path": None if self._path is None else str(self._path),
+                "bytes": self._size,
+                "samples": self._written,
+                "queue_high_water_bytes": self._high_water,
+                "dropped_samples": self._dropped_samples,
+                "reason": self._reason or None,
+            }
+
+    def flush(self, timeout_s: float = _CLOSE_S) -> bool:
+        """Wait until all that was handed over so far is in the file; whether it is."""
+        written = threading.Event()
+        with self._lock:
+            if self._state != "on":
+                return False
+            self._put(written, 0)
+        self._wake.set()
+        return written.wait(timeout_s) and self._state == "on"
+
+    def close(self) -> dict[str, Any]:
+        """Write what waits, and the end; how the journal stands then."""
+        if self._thread is not None:
+            self._closing.set()
+            self._wake.set()
+            self._thread.join(_CLOSE_S)
+            if self._thread.is_alive():
+                self._declare_failed(f"the disk has not taken the rest in {_CLOSE_S:g} s")
+        return self.status()
+
+    def _put(self, item: _Item, size: int) -> None:
+        """Queue an item, behind what is missing before it; the lock is held."""
+        if self._state != "on":
+            return
+        self._put_missing()
+        self._queue.append((item, size))
+        self._queued += size
+        self._high_water = max(self._high_water, self._queued)
+        if self._queued >= _WAKE_BYTES:
+            self._wake.set()
+
+    def _put_missing(self) -> None:
+        if self._missing.blocks:
+            self._queue.append((self._missing, 0))
+            self._missing = _Dropped(0, 0, None)
+
+    def _drop(self, block: bytes) -> int:
+        """Leave out a block's samples, but not what else it tells; the lock is held."""
+        rest, samples, newest = only_events(block)
+        self._dropped_samples += samples
+        self._dropped_blocks += 1
+        if self._state == "on":
+            was = self._missing
+            newest = was.newest if newest is None else newest
+            self._missing = _Dropped(was.samples + samples, was.blocks + 1, newest)
+            # Events are few; if they alone fill the queue again, they are left out too.
+            if rest is not None and self._queued < 2 * self._limit:
+                self._put(rest, len(rest))
+        return samples
+
+    def _begin(
+        self,
+        folder: Path,
+        header: dict[str, Any],
+        cells: int,
+        name: str,
+        out: Callable[[Path], Out],
+    ) -> None:
+        """Make the file and its first block, and start the writer."""
+        header = {
+            "start": start_now(),
+            **header,
+            "sample_dtype": dtype_as_json(sample_dtype(cells)),
+        }
+        start = datetime.datetime.fromisoformat(header["start"]["time"])
+        self._path = folder / f"{start:%Y%m%dT%H%M%S}-{name}-{os.getpid()}.journal"
+        try:
+            folder.mkdir(parents=True, exist_ok=True)
+            self._out = out(self._path)
+            self._append(Kind.HEADER, pack_json(header))
+            self._out.sync()
+            sync_folder(folder)
+        except (OSError, JournalError) as fault:
+            self._declare_failed(_reason_of(fault))
+            return
+        self._thread = threading.Thread(target=self._run, name="journal", daemon=True)
+        self._thread.start()
+
+    def _run(self) -> None:
+        """[writer] Write until closed, or until the disk fails."""
+        try:
+            while not self._closing.is_set():
+                self._wake.wait(self._spec.flush_ms / 1000)
+                self._wake.clear()
+                self._turn()
+            self._turn()
+            self._end()
+        except Exception as fault:  # whatever it is, the loop goes on
+            self._give_up(_reason_of(fault))
+        finally:
+            with contextlib.suppress(OSError):
+                self._out.close()
+
+    def _turn(self) -> None:
+        """[writer] Write all that waits."""
+        more = True
+        while more:
+            batch = self._next_batch()
+            self._write(batch)
+            with self._lock:
+                self._queued -= sum(size for _, size in batch)
+                more = bool(self._queue)
+            _tell(batch)
+            if not self._out.is_in_place():
+                raise JournalError("the file has been moved or removed")
+            self._sync()
+
+    def _next_batch(self) -> list[tuple[_Item, int]]:
+        """[writer] Some of what waits; it still counts as waiting."""
+        batch, size = [], 0
+        with self._lock:
+            if self._closing.is_set():
+                self._put_missing()
+            while self._queue and size < _BATCH_BYTES:
+                batch.append(self._queue.popleft())
+                size += batch[-1][1]
+        return batch
+
+    def _write(self, batch: list[tuple[_Item, int]]) -> None:
+        """[writer] A batch as blocks: what samples need to be understood stands before them."""
+        logs: list[bytes] = []
+        for item, _ in batch:
+            if isinstance(item, bytes):
+                logs.append(item)
+                continue
+            self._entries.take(logs)
+            logs = []
+            self._write_item(item)
+        self._entries.take(logs)
+        samples, events = self._entries.give()
+        if events:
+            self._append(Kind.EVENTS, pack_json(events))
+        if samples:
+            self._append_samples(np.concatenate(samples) if len(samples) > 1 else samples[0])
+
+    def _write_item(self, item: _Item) -> None:
+        """[writer] One item that is not a block of the log."""
+        entries = self._entries
+        if isinstance(item, _Model):
+            payload = model_payload(item.id, item.model, item.tables, self._spec.tables)
+            self._append(Kind.MODEL, payload)
+        elif isinstance(item, _Expected):
+            entries.expect(item.number, item.kind, unpack_json(item.fields))
+        elif isinstance(item, _Note):
+            entries.note(item.kind, item.nsec, unpack_json(item.fields))
+        elif isinstance(item, _Dropped):
+            entries.skip(item.samples, item.newest)
+            fields = {"samples": item.samples, "blocks": item.blocks}
+            entries.note("dropped", time.monotonic_ns(), fields)
+
+    def _append_samples(self, samples: np.ndarray) -> None:
+        """[writer] Samples as blocks of at most ``BLOCK_BYTES``."""
+        most = max(BLOCK_BYTES // samples.dtype.itemsize, 1)
+        for start in range(0, len(samples), most):
+            part = samples[start : start + most]
+            self._append(Kind.SAMPLES, part.tobytes())
+            with self._lock:
+                self._written += len(part)
+
+    def _append(self, kind: Kind, payload: bytes) -> None:
+        """[writer] One block to the file's end."""
+        block = pack_block(kind, payload, self._written, self._serial)
+        self._out.write(block)
+        entry = {"offset": self._size, "kind": int(kind), "length": len(payload)}
+        for name, value in {**entry, "position": self._written}.items():
+            self._index[name].append(value)
+        self._serial += 1
+        with self._lock:
+            self._size += len(block)
+
+    def _sync(self) -> None:
+        """[writer] Have the disk take it all, where that is due."""
+        now = time.monotonic()
+        if self._size > self._synced_size and now - self._synced >= self._spec.sync_s:
+            self._out.sync()
+            self._synced, self._synced_size = now, self._size
+
+    def _end(self) -> None:
+        """[writer] The last block of an orderly end."""
+        with self._lock:
+            known = {
+                "queue_high_water_bytes": self._high_water,
+                "dropped_samples": self._dropped_samples,
+                "dropped_blocks": self._dropped_blocks,
+            }
+        close = {
+            "nsec": time.monotonic_ns(),
+            "samples": self._written,
+            "counters": self._entries.counters(),
+            **known,
+            "index": {name: list(values) for name, values in self._index.items()},
+        }
+        self._append(Kind.CLOSE, pack_json(close))
+        self._out.sync()
+        with self._lock:
+            self._state = "ended"
+
+    def _give_up(self, reason: str) -> None:
+        """[writer] The record ends here; the file is left whole, saying so where it can."""
+        lost = self._entries.position - self._written
+        with self._lock:
+            for item, _ in self._queue:
+                if isinstance(item, bytes):
+                    lost += only_events(item)[1]
+                    self._dropped_blocks += 1
+            waiting = list(self._queue)
+            self._queue.clear()
+            self._queued = 0
+            self._dropped_samples += lost
+            fields = {"samples": lost, "blocks": self._dropped_blocks, "reason": reason}
+        self._entries.give()
+        self._declare_failed(reason)
+        self._leave_word(fields)
+        _tell(waiting)
+
+    def _leave_word(self, fields: Event) -> None:
+        """[writer] Take back a torn block, and put in its place that the record failed."""
+        with contextlib.suppress(OSError):
+            if self._out.is_reachable():
+                self._out.cut(self._size)
+                self._entries.position = self._written
+                self._entries.note("dropped", time.monotonic_ns(), fields)
+                try:
+                    self._append(Kind.EVENTS, pack_json(self._entries.give()[1]))
+                    self._out.sync()
+                except OSError:
+                    self._out.cut(self._size)
+
+    def _declare_failed(self, reason: str) -> None:
+        """Say once that the record has ended."""
+        with self._lock:
+            if self._state == "failed":
+                return
+            self._state, self._reason = "failed", reason
+        self._say(
+            f"RECORD FAILED: {self._path}: {reason}. Nothing more is recorded; the loop goes on. "
+            "Mend the disk or [record] folder and start the server again for a new record"
+        )
+
+
+def _tell(batch: list[tuple[_Item, int]]) -> None:
+    """[writer] Let those go on who wait for what was before them in the queue."""
+    for item, _ in batch:
+        if isinstance(item, threading.Event):
+            item.set()
+
+
+def _reason_of(fault: BaseException) -> str:
+    """Why it failed, in few words."""
+    if isinstance(fault, OSError):
+        return fault.strerror or str(fault) or type(fault).__name__
+    return str(fault) if isinstance(fault, JournalError) else f"{type(fault).__name__}: {fault}"
