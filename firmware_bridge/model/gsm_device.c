@@ -97,7 +97,7 @@ static int32_t set(struct gsm_device *device, uint32_t index, float value)
 /* Carry out what the poll has put there. */
 static void obey(struct gsm_device *device)
 {
-    const volatile struct gsm_order *order = &device->order;
+    const struct gsm_order *order = &device->order;
 
     if (device->released != device->releases) {
         device->released = device->releases;
@@ -197,7 +197,7 @@ static float step(struct gsm_device *device, float v_mv)
 
 static void trace(struct gsm_device *device, float v_mv)
 {
-    volatile struct gsm_trace *to = &device->trace[device->traces_put % GSM_TRACES];
+    struct gsm_trace *to = &device->trace[device->traces_put % GSM_TRACES];
 
     if (device->every == 0u) {
         return;

@@ -58,9 +58,9 @@ struct gsm_config {
 #define GSM_TRACES 16u
 
 struct gsm_trace {
-    uint64_t seq, t_us;
-    uint32_t state;
-    float v_mv, i_pa; /* the voltage, and the current that flows from this tick on */
+    volatile uint64_t seq, t_us;
+    volatile uint32_t state;
+    volatile float v_mv, i_pa; /* the voltage, and the current that flows from this tick on */
 };
 
 struct gsm_counters {
@@ -74,8 +74,8 @@ struct gsm_counters {
 
 /* An order on its way from the poll to the tick. */
 struct gsm_order {
-    uint32_t kind, index;
-    float value;
+    volatile uint32_t kind, index;
+    volatile float value;
 };
 
 struct gsm_device {
@@ -102,7 +102,7 @@ struct gsm_device {
     volatile int32_t fault; /* the newest (enum gsb_error), 0 before the first */
 
     /* From poll to tick. */
-    volatile struct gsm_order order;
+    struct gsm_order order;
     volatile uint32_t orders_put;
     volatile uint32_t heard_us;  /* when the supervisor was last heard */
     volatile uint32_t releases;  /* raised to disarm, whatever else goes on */
@@ -111,7 +111,7 @@ struct gsm_device {
     volatile uint32_t orders_done;
     volatile int32_t order_result;
     uint32_t released;
-    volatile struct gsm_trace trace[GSM_TRACES];
+    struct gsm_trace trace[GSM_TRACES];
     volatile uint32_t traces_put, traces_sent;
 
     /* The poll's own. */

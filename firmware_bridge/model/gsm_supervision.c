@@ -201,7 +201,7 @@ static void send_traces(struct gsm_device *device)
     uint8_t payload[40];
 
     while (device->traces_sent != device->traces_put) {
-        const volatile struct gsm_trace *from = &device->trace[device->traces_sent % GSM_TRACES];
+        const struct gsm_trace *from = &device->trace[device->traces_sent % GSM_TRACES];
         struct gsb_writer out = {0, sizeof payload, 0, 0};
 
         out.bytes = payload;
