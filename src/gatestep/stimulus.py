@@ -107,8 +107,9 @@ def _add_file(out: Floats, first: int, interval_us: float, part: Mapping[str, An
     wave = read_wave(Path(part["path"]), part["column"])
     if wave.sha256 != part["sha256"]:
         raise FileError(f"{part['path']}: is not what it was when the plan was read; read it again")
-    middles = _middles_ms(out.size, first, interval_us, part)
-    places = np.floor(middles * (US_PER_MS / part["interval_us"])).astype(np.int64)
+    middles_us = US_PER_MS * _middles_ms(out.size, first, interval_us, part)
+    # The allowance: a middle that falls on the edge of a value takes the one that begins.
+    places = np.floor(middles_us / part["interval_us"] + 1e-6).astype(np.int64)
     count = int(np.searchsorted(places, wave.values.size))
     out[:count] += wave.values[np.maximum(places[:count], 0)]
 
