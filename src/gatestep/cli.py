@@ -208,6 +208,22 @@ def curves(
 
 
 @app.command()
+def firmware(
+    model: Annotated[str, typer.Argument(metavar="MODEL", help="A shipped model or a file.")],
+    out: Annotated[Path, typer.Option("--out", metavar="DIR", help="The folder to write.")],
+    rows: Annotated[int, typer.Option("--rows", help="Rows of the table.")] = 2049,
+    interval_us: Annotated[
+        float, typer.Option("--interval-us", metavar="US", help="The device's tick.")
+    ] = 50.0,
+    json_output: Json = False,
+) -> int:
+    """Write a model as C for a microcontroller, with its errors and a self-test."""
+    from .commands.firmware import write_firmware
+
+    return write_firmware(model, out, rows, interval_us, json_output)
+
+
+@app.command()
 def simrig(
     rig: RigFile,
     seconds: Annotated[float | None, typer.Option("--seconds", help="How long to run.")] = None,
@@ -242,6 +258,18 @@ def check(rig: RigFile, json_output: Json = False) -> int:
     from .commands.check import check as body
 
     return body(rig, json_output)
+
+
+@app.command()
+def journal(
+    path: Annotated[Path, typer.Argument(metavar="JOURNAL", help="The journal's file.")],
+    events: Annotated[bool, typer.Option("--events", help="List every event.")] = False,
+    json_output: Json = False,
+) -> int:
+    """Show what a journal holds: samples, models, lateness, trips, and what is lost."""
+    from .commands.journal import show_journal
+
+    return show_journal(path, json_output, events)
 
 
 @bench_app.command("step")
