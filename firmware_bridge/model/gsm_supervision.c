@@ -190,9 +190,12 @@ static int receive(struct gsm_device *device)
         return GSB_OK;
     }
     came = device->port.receive_bytes(device->port.context, device->bytes, sizeof device->bytes);
-    device->bytes_at = 0u;
-    device->bytes_size = came > 0 ? (uint8_t)came : 0u;
-    return came < 0 ? GSB_ERROR_LINK : GSB_OK;
+    device->bytes_at = device->bytes_size = 0u;
+    if (came < 0 || came > (int)sizeof device->bytes) {
+        return GSB_ERROR_LINK;
+    }
+    device->bytes_size = (uint8_t)came;
+    return GSB_OK;
 }
 
 /* Thinned samples, as many as find room to be sent. */
