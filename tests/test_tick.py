@@ -56,7 +56,7 @@ TICK_US = 20.0
 @njit(nogil=True, error_model="numpy", _nrt=False)
 def obey(m: Any, now: int) -> int:
     """Carry out the order in ``m.order`` as the hot loop does."""
-    return carry_out(m, m.order[0], now)
+    return carry_out(m, m.order[0], m.loop[0].seq + 1, now)
 
 
 class Tick(NamedTuple):

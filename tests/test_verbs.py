@@ -14,6 +14,7 @@ from conftest import make_rig
 from hypothesis import given
 from hypothesis import strategies as st
 
+from gatestep.answers import Built, Confirmed, safely
 from gatestep.kernel import BANK, records
 from gatestep.library import load_model
 from gatestep.orders import Order, Outcome
@@ -21,7 +22,7 @@ from gatestep.shelf import Shelf
 from gatestep.states import Fault, State
 from gatestep.tables import build_tables
 from gatestep.tick import LOOP
-from gatestep.verbs import Built, Confirmed, Verbs, safely
+from gatestep.verbs import Verbs
 from gatestep.watch import LoopEvent, Watch
 
 LIMITS = {"current_pa": 1000.0}
@@ -55,7 +56,7 @@ class Desk:
         for k in range(len(cells)):
             self.verbs.put_in_force(k, model, build_tables(model.spec))
 
-    def send(self, *order):
+    def send(self, *order, **_meaning):
         self.orders.append(order[:4])
         return len(self.orders)
 

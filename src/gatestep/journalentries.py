@@ -55,12 +55,15 @@ class Entries:
         self._seq: int | None = None
         self._newest = _NEVER  # the newest sample that was no repeat, where it is known
         self._expected: dict[int, tuple[str, dict[str, Any]]] = {}
+        self._ending: dict[int, Any] = {}  # the sweep of an order that began its stimulus
         self._samples: list[np.ndarray] = []
         self._events: list[Event] = []
 
     def expect(self, number: int, kind: str, fields: Mapping[str, Any]) -> None:
         """[writer] Remember what an order means until the log tells its outcome."""
         self._expected[number] = kind, dict(fields)
+        if kind == "sweep_start":
+            self._ending[number] = fields.get("sweep")
 
     def note(self, kind: str, nsec: int, fields: Mapping[str, Any]) -> None:
         """[writer] An event of another thread, here."""
@@ -192,6 +195,8 @@ class Entries:
     def _of_order(self, entry: Any, code: int) -> tuple[str, Event]:
         """[writer] An order that was carried out: what was expected, and the outcome."""
         number = int(entry["number"])
+        if code == Order.REST and number in self._ending:
+            return "sweep_end", {"sweep": self._ending.pop(number), "complete": True}
         kind, expected = self._expected.pop(number, (Order(code).name.lower(), {}))
         told = {"number": number, "outcome": Outcome(int(entry["outcome"])).name.lower()}
         return kind, {**told, **_of_order_kind(entry, code), **expected}

@@ -109,7 +109,7 @@ _LOOP_SIZE = LOOP.itemsize
 _ENTRY_SIZE = ENTRY.itemsize
 _ORDER_SIZE = ORDER.itemsize
 _NO_ROOM, _DROPPED = int(Outcome.NO_ROOM), int(Outcome.DROPPED)
-_CANCEL = int(Order.CANCEL)
+_CANCEL, _REST = int(Order.CANCEL), int(Order.REST)
 # Typed, so that compiled callers share one body: a plain literal makes a type of its own.
 _SAMPLE, _ORDER, _TRIP = (np.int64(e) for e in (Entry.SAMPLE, Entry.ORDER, Entry.TRIP))
 _HOLD, _RELEASE, _CLOCK_JUMP = (np.int64(e) for e in (Entry.HOLD, Entry.RELEASE, Entry.CLOCK_JUMP))
@@ -300,9 +300,10 @@ def _let_go(m: Any, fault: int, now: int) -> None:
 
 
 @inner
-def _log_order(m: Any, order: Any, outcome: int, now: int) -> None:
+def _log_order(m: Any, order: Any, outcome: int, seq: int, now: int) -> None:
     """[hot] Log what became of an order; it is handed over when the turn ends."""
     entry = _new_entry(m, _ORDER, now)
+    entry.seq = seq
     entry.number = order.number
     entry.code = order.kind
     entry.outcome = outcome
@@ -317,7 +318,7 @@ def _plan(m: Any, order: Any, now: int) -> None:
     """[hot] Put an order on the agenda; the planner gives them in the order of their samples."""
     desk = m.desk[0]
     if desk.planned == _AGENDA:
-        _log_order(m, order, _NO_ROOM, now)
+        _log_order(m, order, _NO_ROOM, NIL, now)
         return
     m.agenda[np.uint64((desk.next + desk.planned) % _AGENDA)] = order
     desk.planned += 1
@@ -328,21 +329,37 @@ def _clear_agenda(m: Any, now: int) -> None:
     """[hot] Drop what waits for its sample, and end a stimulus."""
     desk = m.desk[0]
     while desk.planned > 0:
-        _log_order(m, m.agenda[np.uint64(desk.next)], _DROPPED, now)
+        _log_order(m, m.agenda[np.uint64(desk.next)], _DROPPED, NIL, now)
         desk.next = (desk.next + 1) % _AGENDA
         desk.planned -= 1
     m.loop[0].play_slot = NIL
 
 
 @inner
+def _rest(m: Any, seq: int, now: int) -> None:
+    """[hot] End a stimulus that is over; logged by the number of the order that began it."""
+    loop = m.loop[0]
+    if loop.play_slot == NIL or seq - loop.play_from < loop.play_ticks:
+        return
+    loop.play_slot = NIL
+    entry = _new_entry(m, _ORDER, now)
+    entry.seq = seq
+    entry.number = loop.play_number
+    entry.code = _REST
+    entry.cell = loop.play_cell
+    m.desk[0].urgent = 1
+
+
+@inner
 def _keep_agenda(m: Any, seq: int, now: int) -> None:
     """[hot] Carry out what was to be done before the step of this sample."""
     desk = m.desk[0]
+    _rest(m, seq, now)
     while desk.planned > 0:
         order = m.agenda[np.uint64(desk.next)]
         if order.at > seq:
             return
-        _log_order(m, order, obey(m, order, now), now)
+        _log_order(m, order, obey(m, order, seq, now), seq, now)
         desk.next = (desk.next + 1) % _AGENDA
         desk.planned -= 1
 
@@ -360,7 +377,9 @@ def _take_orders(m: Any) -> None:
         else:
             if order.kind == _CANCEL:
                 _clear_agenda(m, now)
-            _log_order(m, order, obey(m, order, now), now)
+            loop = m.loop[0]
+            seq = loop.seq if loop.running else np.int64(NIL)
+            _log_order(m, order, obey(m, order, seq + 1, now), seq, now)
 
 
 @inner

@@ -33,7 +33,7 @@ class Order(IntEnum):
     MARK = 7
     FORESEE = 8
     PLAY = 9
-    REST = 10
+    REST = 10  # never sent: the loop's own, when a stimulus has come to its end
     RAMP = 11
     CANCEL = 12
 
@@ -73,7 +73,7 @@ _ORDER_EVENTS = np.array([Event.ARM, Event.DISARM, Event.RESET], dtype=np.int64)
 _ARM, _RESET, _STOP = int(Order.ARM), int(Order.RESET), int(Order.STOP)
 _SWAP, _FORESEE = int(Order.SWAP), int(Order.FORESEE)
 _SET_GMAX, _SET_REVERSAL = int(Order.SET_GMAX), int(Order.SET_REVERSAL)
-_PLAY, _REST, _RAMP = int(Order.PLAY), int(Order.REST), int(Order.RAMP)
+_PLAY, _RAMP = int(Order.PLAY), int(Order.RAMP)
 _CANCEL = int(Order.CANCEL)
 _DONE, _WAS_TRIPPED = int(Outcome.DONE), int(Outcome.TRIPPED)
 _WAS_WRONG_TICK, _WAS_STOPPING = int(Outcome.WRONG_TICK), int(Outcome.STOPPING)
@@ -103,12 +103,16 @@ def _change_state(loop: Any, kind: int) -> int:
 
 @inner
 def _foresee(shadow: Any, order: Any) -> None:
-    """[hot] Let a cell anticipate, or not, as an order says."""
+    """[hot] Let a cell anticipate, or not, as an order says.
+
+    What is known of the cell's own current stays known.
+    """
+    if order.on != shadow.on:
+        forget(shadow)
     shadow.on = order.on
     shadow.substeps = order.substeps
     shadow.alpha = order.alpha
     shadow.beta = order.beta
-    forget(shadow)
 
 
 @inner
@@ -162,14 +166,15 @@ def _set_gmax(cell: Any, bank: Any, order: Any) -> None:
 
 
 @inner
-def _play(loop: Any, order: Any) -> None:
-    """[hot] Begin a stimulus, with the next sample where no other is named; or end it."""
+def _play(loop: Any, order: Any, seq: int) -> None:
+    """[hot] Begin a stimulus with the sample ``seq``, or with any order but ``PLAY`` end it."""
     loop.play_slot = NIL
     if order.kind == _PLAY:
         loop.play_slot = order.index
         loop.play_cell = order.cell
         loop.play_ticks = np.int64(order.value)
-        loop.play_from = loop.seq + 1 if order.at == NIL else order.at
+        loop.play_from = seq
+        loop.play_number = order.number
 
 
 @inner
@@ -190,7 +195,7 @@ def _obey_cell(m: Any, order: Any) -> None:
 
 
 @inner
-def obey(m: Any, order: Any, now: int) -> int:
+def obey(m: Any, order: Any, seq: int, now: int) -> int:
     """[hot] Carry out one order; its outcome.
 
     Parameters
@@ -199,6 +204,8 @@ def obey(m: Any, order: Any, now: int) -> int:
         Anything with ``loop``, ``cells``, ``banks`` and ``table``: the loop's memory, or
         that of a replay.
     order : ORDER record
+    seq : int
+        The sample before whose step it acts.
     now : int
         Monotonic time, ns.
     """
@@ -209,8 +216,8 @@ def obey(m: Any, order: Any, now: int) -> int:
         loop.state = next_state(loop.state, _DISARM)
         loop.stopped_nsec = loop.stopped_nsec if loop.stopping else now
         loop.stopping = 1
-    elif order.kind == _PLAY or order.kind == _REST or order.kind == _CANCEL:
-        _play(loop, order)
+    elif order.kind == _PLAY or order.kind == _CANCEL:
+        _play(loop, order, seq)
     else:
         _obey_cell(m, order)
     return _DONE

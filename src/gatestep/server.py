@@ -16,6 +16,7 @@ import time
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 import msgpack
@@ -24,21 +25,22 @@ import zmq
 from numba import typeof
 
 from . import __version__
-from .choosing import Choice
+from .answers import Answer, Built, Confirmed, Waiting, refusal, safely
 from .config import LoadedRig, load_rig_models
-from .errors import ControlError, LinkError
+from .errors import LinkError
 from .hosttune import HostTuning
-from .kernel import records
+from .journal import Journal
+from .journalfacts import header_of
 from .loop import make_memory, run_loop
 from .loopport import LoopPort, bound_endpoint, bound_socket, choose_lane
 from .network import Gatekeeper
-from .orders import ORDER, Order
+from .orderline import NoRecord, OrderLine, Record
+from .orders import Order
 from .shelf import Shelf, make_room, make_slots
 from .states import State
 from .tables import build_tables
-from .verbs import Answer, Built, Confirmed, Verbs, Waiting, refusal, safely
+from .verbs import Verbs
 from .watch import LoopEvent, Watch
-from .wire import NIL
 from .zmqlane import load_libzmq
 
 Say = Callable[[str], None]
@@ -92,7 +94,6 @@ class Server:
         if choose_lane(rig) == "libzmq":
             self._host.set_up_io(self._context)
         self._builder = ThreadPoolExecutor(1, thread_name_prefix="tables")
-        self._orders_sent = 0
         self._waiting: list[tuple[Waiting, _Caller]] = []
         self._result: list[int] = []
         self._gatekeeper = Gatekeeper(self._context, rig)
@@ -106,14 +107,16 @@ class Server:
         self._port = LoopPort(self.rig, self._context, self._gatekeeper)
         self._orders_out, self._orders_in = self._pipe("orders")
         self._log_out, self._log_in = self._pipe("log")
-        table, self._slots = make_room(), make_slots()
+        self._record = self._open_record()
+        self._line = OrderLine(self._orders_out, self._record)
+        table, slots = make_room(), make_slots()
         self._memory = make_memory(
             self.rig.spec,
             self._port.lane,
             self._orders_in.underlying,
             self._log_out.underlying,
             table,
-            self._slots,
+            slots,
         )
         self._compile()
         self._bind()
@@ -121,13 +124,15 @@ class Server:
             self.rig,
             Shelf(self._memory.banks, table),
             self.watch,
-            self._send_order,
+            self._line.send,
             self._builder,
             self._facts(),
+            self._record,
+            slots,
         )
         for k, model in enumerate(models):
             ready = self._verbs.put_in_force(k, model, build_tables(model.spec))
-            self._send_order(Order.FORESEE, k, 0, 0.0, ready.choice)
+            self._line.send(Order.FORESEE, k, choice=ready.choice)
         self._thread = threading.Thread(target=self._run, name="hot loop", daemon=True)
         self._thread.start()
         self._host.confirm()
@@ -150,11 +155,13 @@ class Server:
             if self._control in ready:
                 self._take_requests()
             self._answer_built()
+            self._verbs.player.follow()
             self._warn(self._verbs.catch_up())
             self._publish_status()
             self._host.follow(self.watch.state == State.ARMED)
         while self._log_in.poll(0):
             self._read_log()
+        self._record.close()
         return self._result[0] if self._result else 1
 
     def arm(self, force: bool = False) -> None:
@@ -166,12 +173,12 @@ class Server:
             When the loop would carry less than the model opens, unless forced.
         """
         self._verbs.refuse_to_ring(force)
-        self._send_order(Order.ARM, 0, 0, 0.0)
+        self._line.send(Order.ARM, forced=force)
 
     def order_stop(self) -> None:
         """Order the loop to answer 0 pA once more and end."""
         self._stopping = True
-        self._send_order(Order.STOP, 0, 0, 0.0)
+        self._line.send(Order.STOP)
 
     def close(self) -> None:
         """Stop what still runs and give every socket back."""
@@ -183,6 +190,8 @@ class Server:
         self._builder.shutdown(wait=False, cancel_futures=True)
         if hasattr(self, "_port"):
             self._port.close()
+        if hasattr(self, "_record"):
+            self._record.close()
         self._gatekeeper.close()
         self._host.release()
         self._context.destroy(linger=200)
@@ -225,19 +234,29 @@ class Server:
 
     def _facts(self) -> Answer:
         spec = self.rig.spec
-        if spec.record:
-            self._say("[record]: this version keeps no record")
         return {
             "version": __version__,
             "pid": os.getpid(),
             "rig_file": str(self.rig.path),
             "lane": self._port.kind,
-            "recording": False,
             "interval_us": spec.loop.interval_us,
             "budget_us": spec.loop.budget,
             "endpoints": self.endpoints(),
             "host": self._host.report,
         }
+
+    def _open_record(self) -> Record:
+        record = self.rig.spec.record
+        if not record.on:
+            return NoRecord()
+        return Journal(
+            record,
+            self.rig.folder / Path(record.folder).expanduser(),
+            header_of(self.rig, self._host.report),
+            len(self.rig.spec.cell),
+            self._say,
+            self.rig.path.stem,
+        )
 
     def _compile(self) -> None:
         """Have the loop ready; a start that must compile says so."""
@@ -256,47 +275,28 @@ class Server:
         self._host.tune_thread()
         self._result.append(int(run_loop(self._memory)))
 
-    def _send_order(
-        self,
-        kind: Order,
-        cell: int = 0,
-        index: int = 0,
-        value: float = 0.0,
-        choice: Choice | None = None,
-        at: int = int(NIL),
-    ) -> int:
-        self._orders_sent += 1
-        order = records(ORDER)
-        order[0].number, order[0].kind, order[0].at = self._orders_sent, kind, at
-        order[0].cell, order[0].index, order[0].value = cell, index, value
-        if choice is not None:
-            order[0].on, order[0].substeps = choice.on, choice.substeps
-            order[0].alpha, order[0].beta = choice.alpha, choice.beta
-        try:
-            self._orders_out.send(order.tobytes(), zmq.DONTWAIT)
-        except zmq.Again:
-            raise ControlError(
-                "the loop takes no orders; stop the server with SIGKILL if it does not answer"
-            ) from None
-        return self._orders_sent
-
     def _read_log(self) -> None:
         """Read on in the loop's log, but not so long that a request or a signal has to wait."""
         for _ in range(_BLOCKS_A_TURN):
             if not self._log_in.poll(0):
                 return
-            events, samples = self.watch.take(self._log_in.recv())
+            block = self._log_in.recv()
+            self._record.take(block)
+            events, samples = self.watch.take(block)
             for event in events:
                 if event.kind == "order":
                     self._confirm(event)
+                    self._verbs.player.confirm(event)
                 else:
                     self._say(event.text)
                 self._publish("event", {"kind": event.kind, "seq": event.seq, "text": event.text})
+            self._verbs.player.observe(samples)
             self._publish_samples(samples)
 
     def _warn(self, warnings: list[str]) -> None:
         for text in warnings:
             self._say(f"armed against advice: {text}")
+            self._record.note("advice", text=text)
             self._publish("event", {"kind": "advice", "seq": None, "text": text})
 
     def _take_requests(self) -> None:

@@ -7,7 +7,7 @@ array, first fit, so that any mix of models finds room as long as the sum does.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -36,6 +36,28 @@ class Ready:
     def end(self) -> int:
         """First index of the common array after this model's table."""
         return self.base + self.tables.table.size
+
+
+PARAMETERS = ("gmax_ns", "reversal_mv")
+"""What of a conductance can be set while its model is in force."""
+
+
+def parameters_of(tables: Tables) -> dict[str, float]:
+    """Every parameter of a model, by names as ``K.gmax_ns``."""
+    return {
+        f"{conductance.name}.{parameter}": float(tables.bank[parameter][..., c].item())
+        for c, conductance in enumerate(tables.spec.conductance)
+        for parameter in PARAMETERS
+    }
+
+
+def with_parameters(tables: Tables, parameters: dict[str, float]) -> Tables:
+    """The tables of a model with other parameters; all of them must be given."""
+    bank = tables.bank.copy()
+    for c, conductance in enumerate(tables.spec.conductance):
+        for parameter in PARAMETERS:
+            bank[parameter][..., c] = parameters[f"{conductance.name}.{parameter}"]
+    return replace(tables, bank=bank)
 
 
 def make_room() -> npt.NDArray[np.float64]:

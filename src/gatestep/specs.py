@@ -33,6 +33,7 @@ USUAL_PRIORITY = 50
 
 Name = Annotated[str, StringConstraints(pattern=r"^[A-Za-z][A-Za-z0-9_\-]{0,31}$")]
 Formula = Annotated[str, StringConstraints(min_length=1, max_length=500)]
+Text = Annotated[str, StringConstraints(min_length=1, max_length=2000)]
 Finite = Annotated[float, Field(allow_inf_nan=False)]
 Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
 Celsius = Annotated[float, Field(ge=-5, le=60)]
@@ -219,9 +220,41 @@ class FeedSpec(Spec):
 
 
 class RecordSpec(Spec):
-    """Where records go."""
+    """The record: one journal a run of the server, in ``folder`` beside the rig file."""
 
-    folder: str
+    on: bool = True
+    folder: str = Field(default="records", min_length=1, max_length=1000)
+    flush_ms: float = Field(default=200.0, ge=1, le=60_000)
+    sync_s: float = Field(default=1.0, ge=0, le=86_400)
+    queue_mb: float = Field(default=256.0, ge=1, le=65_536)
+    tables: bool = True
+
+
+class SubjectSpec(Spec):
+    """Facts of the animal or tissue, as the record's export names them; none is invented."""
+
+    subject_id: Text | None = None
+    species: Text | None = None
+    strain: Text | None = None
+    genotype: Text | None = None
+    sex: Literal["M", "F", "U", "O"] | None = None
+    age: Text | None = None
+    weight: Text | None = None
+    description: Text | None = None
+
+
+class SessionSpec(Spec):
+    """Facts of the session, likewise."""
+
+    description: Text | None = None
+    experimenter: tuple[Text, ...] = Field(default=(), max_length=50)
+    lab: Text | None = None
+    institution: Text | None = None
+    experiment: Text | None = None
+    slices: Text | None = None
+    pharmacology: Text | None = None
+    electrode: Text | None = None
+    notes: Text | None = None
 
 
 class NetworkSpec(Spec):
@@ -438,7 +471,9 @@ class RigSpec(Spec):
     loop: LoopSpec
     control: ControlSpec = Field(default_factory=ControlSpec)
     feed: FeedSpec = Field(default_factory=FeedSpec)
-    record: RecordSpec | None = None
+    record: RecordSpec = Field(default_factory=RecordSpec)
+    subject: SubjectSpec = Field(default_factory=SubjectSpec)
+    session: SessionSpec = Field(default_factory=SessionSpec)
     network: NetworkSpec = Field(default_factory=NetworkSpec)
     limits: LimitsSpec = Field(default_factory=LimitsSpec)
     host: HostSpec = Field(default_factory=HostSpec)

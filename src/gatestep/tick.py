@@ -44,6 +44,7 @@ LOOP = np.dtype(
         ("play_cell", "i8"),
         ("play_from", "i8"),  # its first sample
         ("play_ticks", "i8"),
+        ("play_number", "i8"),  # of the order that began it
         # The rig that holds the loop, and its sequence.
         ("held", "i8"),
         ("session", "i8"),  # rigs that have taken hold so far

@@ -7,26 +7,33 @@ by itself; the server carries requests in and answers out.
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from concurrent.futures import Executor, Future
-from dataclasses import dataclass, replace
+from dataclasses import replace
+from pathlib import Path
 from reprlib import repr as show
 from typing import Any
 
+import numpy as np
+
+from .answers import Answer, Built, Confirmed, Waiting, safely
+from .arithmetic import Floats
 from .choosing import Choice, advice, choose
 from .config import LoadedRig
-from .errors import ControlError, GatestepError
+from .errors import ControlError
 from .library import LoadedModel, load_model
+from .orderline import NoRecord, Record, model_meaning
 from .orders import Order, Outcome
-from .shelf import Ready, Shelf
+from .playing import Player
+from .shelf import Ready, Shelf, parameters_of, with_parameters
 from .specs import MAX_GMAX_NS, MAX_REVERSAL_MV
 from .states import State
+from .sweepsettings import Prepared, prepare_plan
 from .tables import Tables, build_tables
 from .watch import LoopEvent, Watch
 
-Answer = dict[str, Any]
 BuiltModel = tuple[LoadedModel, Tables, Choice]
-SendOrder = Callable[[Order, int, int, float, Choice | None], int]
+SendOrder = Callable[..., int]
 
 _PARAMETERS = {
     "gmax_ns": (Order.SET_GMAX, MAX_GMAX_NS),
@@ -35,23 +42,8 @@ _PARAMETERS = {
 _MAX_TEXT = 1000
 
 
-@dataclass(frozen=True)
-class Confirmed:
-    """An answer that waits until the loop has carried out an order."""
-
-    number: int
-    finish: Callable[[LoopEvent], Answer]
-
-
-@dataclass(frozen=True)
-class Built:
-    """An answer that waits until tables are built."""
-
-    future: Future[BuiltModel]
-    finish: Callable[[Future[BuiltModel]], Answer]
-
-
-Waiting = Confirmed | Built
+_ALWAYS = {Order.DISARM, Order.RESET, Order.STOP, Order.MARK}
+"""Orders that anyone may give while a plan runs."""
 
 
 def build_model(name: str, rig: LoadedRig, cell: int) -> BuiltModel:
@@ -73,12 +65,18 @@ class Verbs:
     shelf : Shelf
     watch : Watch
     send_order : callable
-        Sends an order (kind, cell, index, value, how the cell anticipates) to the loop;
-        returns its number.
+        As :meth:`gatestep.orderline.OrderLine.send`.
     builder : Executor
         Where tables are built, off every other thread.
     facts : dict
         Constant entries of the status: version, lane, endpoints.
+    record : Record, optional
+    slots : ndarray (2, ticks), optional
+        Where the loop reads the stimuli of sweeps.
+
+    Attributes
+    ----------
+    player : Player
     """
 
     def __init__(
@@ -89,10 +87,17 @@ class Verbs:
         send_order: SendOrder,
         builder: Executor,
         facts: Answer,
+        record: Record | None = None,
+        slots: Floats | None = None,
     ) -> None:
         self._rig, self._shelf, self._watch = rig, shelf, watch
+        self._record: Record = record or NoRecord()
         self._send_order, self._builder, self._facts = send_order, builder, facts
         self._names = [cell.name for cell in rig.spec.cell]
+        slots = np.empty((2, 0)) if slots is None else slots
+        self.player = Player(
+            rig, shelf, slots, watch, send_order, builder, self._record, self._take_parameters
+        )
         self._busy: dict[int, str] = {}
         self._changed: set[int] = set()
         self._judging: dict[int, tuple[dict[str, float], Future[Choice]]] = {}
@@ -108,6 +113,9 @@ class Verbs:
             "swap": (self.swap, {"cell", "force"}),
             "set": (self.set, {"key", "value", "cell"}),
             "mark": (self.mark, {"text"}),
+            "run": (self.run, {"text", "path", "seed", "force"}),
+            "halt": (self.halt, set()),
+            "sweeps": (self.sweeps, {"since"}),
             "stop": (self.stop, set()),
         }
 
@@ -139,14 +147,21 @@ class Verbs:
             **self._watch.summary(),
             **self._facts,
             "anticipate": anticipate,
+            "recording": self._record.status(),
+            "plan": self._plan_told(),
             "cells": self._cells(),
         }
+
+    def _plan_told(self) -> Answer | None:
+        """The plan for the status, without its sweeps."""
+        told = self.player.status()
+        return {k: v for k, v in told.items() if k != "done"} if told else None
 
     def arm(self, force: bool = False) -> Waiting:
         """Let the model's current flow."""
         _check_force("arm", force)
         self.refuse_to_ring(force)
-        return self._ordered(Order.ARM, after=lambda e: self._armed(e, force))
+        return self._ordered(Order.ARM, after=lambda e: self._armed(e, force), forced=force)
 
     def disarm(self) -> Waiting:
         """Go to 0 pA."""
@@ -164,11 +179,50 @@ class Verbs:
         """Put a note at the present sample."""
         if not isinstance(text, str) or not 0 < len(text) <= _MAX_TEXT:
             raise ControlError(f"mark: text is missing or not 1 to {_MAX_TEXT} characters long")
-        return self._ordered(Order.MARK, after=lambda _: {"text": text})
+        return self._ordered(Order.MARK, after=lambda _: {"text": text}, text=text)
+
+    def run(
+        self,
+        text: str | None = None,
+        path: str | None = None,
+        seed: int | None = None,
+        force: bool = False,
+    ) -> Waiting:
+        """Play a plan: its text, and the whole path of its file, for what it names beside it."""
+        _check_force("run", force)
+        self.player.refuse_if_busy("run")
+        if self._busy:
+            raise ControlError("run: a load or swap is under way; wait for its answer")
+        if not isinstance(text, str) or not isinstance(path, str) or not Path(path).is_absolute():
+            raise ControlError("run: give the plan's text, and the whole path of its file")
+        if seed is not None and (type(seed) is not int or not 0 <= seed < 2**63):
+            raise ControlError(f"run: seed is {show(seed)}; it is a whole number from 0")
+        in_force = [self._as_set(k) for k in range(len(self._names))]
+        self._claim_all("run")
+        try:
+            future = self._builder.submit(prepare_plan, text, Path(path), seed, self._rig, in_force)
+        except BaseException:
+            self._busy.clear()
+            raise
+        return Built(future, lambda built: self._play(built, in_force, force))
+
+    def halt(self) -> Answer:
+        """End the plan under way, at 0 pA."""
+        if not self.player.busy:
+            raise ControlError("halt: no plan is running")
+        self.player.halt("halted")
+        return {"ok": True, "plan": self.player.status()}
+
+    def sweeps(self, since: int = 0) -> Answer:
+        """The plan under way or the last one, and its sweeps from one of them on."""
+        if type(since) is not int or since < 0:
+            raise ControlError(f"sweeps: since is {show(since)}; it is a whole number from 0")
+        return {"ok": True, "plan": self.player.status(since), "state": self._state()}
 
     def load(self, model: str | None = None, cell: str | None = None) -> Waiting:
         """Prepare a model in the cell's spare bank."""
         k = self._cell("load", cell)
+        self.player.refuse_if_busy("load")
         if not isinstance(model, str) or not model:
             raise ControlError("load: model is missing; give a shipped model's name or a file")
         self._claim("load", k)
@@ -193,7 +247,13 @@ class Verbs:
             raise ControlError(f"swap: {against}")
         self._claim("swap", k)
         return self._ordered(
-            Order.SWAP, k, ready.bank, after=lambda e: self._swapped(k, ready), choice=ready.choice
+            Order.SWAP,
+            k,
+            ready.bank,
+            after=lambda e: self._swapped(k, ready),
+            choice=ready.choice,
+            forced=force,
+            **self._meaning(ready),
         )
 
     def set(
@@ -222,7 +282,7 @@ class Verbs:
             self._parameters[k][str(key)] = new
             return {"cell": self._names[k], "key": key, "value": new}
 
-        return self._ordered(order, k, index, new, after)
+        return self._ordered(order, k, index, new, after, event="set", key=key)
 
     def put_in_force(self, cell: int, model: LoadedModel, tables: Tables) -> Ready:
         """Prepare a model before the loop runs and count it as in force."""
@@ -230,7 +290,11 @@ class Verbs:
         ready = self._shelf.prepare(cell, model, tables, choice)
         self._shelf.put_in_force(cell)
         self._take_parameters(cell, ready)
+        self._record.note("in_force", cell=cell, bank=ready.bank, **self._meaning(ready))
         return ready
+
+    def _meaning(self, ready: Ready) -> Mapping[str, Any]:
+        return model_meaning(ready, self._record.add_model(ready.model, ready.tables))
 
     def refuse_to_ring(self, force: bool) -> None:
         """Refuse to arm a loop that carries less than its model opens, unless forced.
@@ -295,14 +359,43 @@ class Verbs:
         value: float = 0.0,
         after: Callable[[LoopEvent], Answer] = lambda _: {},
         choice: Choice | None = None,
+        **meaning: Any,
     ) -> Confirmed:
-        number = self._send_order(order, cell, index, value, choice)
+        if order not in _ALWAYS:
+            self.player.refuse_if_busy(order.name.lower())
+        number = self._send_order(order, cell, index, value, choice, **meaning)
 
         def finish(event: LoopEvent) -> Answer:
-            state = self._watch.state.name.lower()
-            return {"ok": True, "state": state, "seq": event.seq, **after(event)}
+            return {"ok": True, "state": self._state(), "seq": event.seq, **after(event)}
 
         return Confirmed(number, finish)
+
+    def _state(self) -> str:
+        return self._watch.state.name.lower()
+
+    def _as_set(self, k: int) -> Ready:
+        """The model in force with the parameters that were set, kept so on the shelf."""
+        ready = self._ready()[k]
+        if parameters_of(ready.tables) != self._parameters[k]:
+            ready = replace(ready, tables=with_parameters(ready.tables, self._parameters[k]))
+            self._shelf.in_force[k] = ready
+        return ready
+
+    def _claim_all(self, verb: str) -> None:
+        for k in range(len(self._names)):
+            self._claim(verb, k)
+
+    def _play(self, built: Future[Prepared], in_force: list[Ready], force: bool) -> Answer:
+        """Begin a plan that is prepared, unless a sweep of it would ring."""
+        self._busy.clear()
+        plan, sweeps = built.result()
+        if in_force != [self._as_set(k) for k in range(len(self._names))]:
+            raise ControlError("run: a model or parameter was changed meanwhile; run it again")
+        choices = {id(one.setting): one.setting.choice for one in sweeps}
+        against = advice(list(choices.values()))
+        if against and not force:
+            raise ControlError(f"run: {against}")
+        return {"ok": True, **self.player.begin(plan, sweeps, force)}
 
     def _armed(self, event: LoopEvent, force: bool) -> Answer:
         if event.outcome == Outcome.TRIPPED:
@@ -322,6 +415,7 @@ class Verbs:
         self._busy.pop(k)
         model, tables, choice = built.result()
         ready = self._shelf.prepare(k, model, tables, choice)
+        self._record.note("load", cell=k, **self._meaning(ready))
         return {"ok": True, "cell": self._names[k], "model": model.name, **_table_facts(ready)}
 
     def _swapped(self, k: int, ready: Ready) -> Answer:
@@ -332,8 +426,8 @@ class Verbs:
 
     def _take_parameters(self, k: int, ready: Ready) -> None:
         """A model that has just come into force has its file's parameters."""
-        self._parameters[k] = _file_parameters(ready)
-        self._ordered_parameters[k] = _file_parameters(ready)
+        self._parameters[k] = parameters_of(ready.tables)
+        self._ordered_parameters[k] = parameters_of(ready.tables)
         self._changed.discard(k)
 
     def _claim(self, verb: str, k: int) -> None:
@@ -386,39 +480,9 @@ class Verbs:
         return cells
 
 
-def refusal(text: str) -> Answer:
-    """The answer that says why not."""
-    return {"ok": False, "error": text}
-
-
 def _check_force(verb: str, force: Any) -> None:
     if not isinstance(force, bool):
         raise ControlError(f"{verb}: force is {show(force)}; it is true or false")
-
-
-def safely(work: Callable[[], Answer | Waiting]) -> Any:
-    """What ``work`` gives, or the refusal that says why it could not.
-
-    No request, whatever is in it, may end the thread that carries disarm and stop.
-    """
-    try:
-        return work()
-    except GatestepError as fault:
-        return refusal(str(fault))
-    except Exception as fault:
-        return refusal(
-            f"the request met a fault in the server, {type(fault).__name__}: {fault}; "
-            "nothing was changed by it that an answer has not confirmed"
-        )
-
-
-def with_parameters(tables: Tables, parameters: dict[str, float]) -> Tables:
-    """The tables of a model with the gmax and reversals that were set."""
-    bank = tables.bank.copy()
-    for c, conductance in enumerate(tables.spec.conductance):
-        for parameter in _PARAMETERS:
-            bank[parameter][..., c] = parameters[f"{conductance.name}.{parameter}"]
-    return replace(tables, bank=bank)
 
 
 def _table_facts(ready: Ready) -> Answer:
@@ -428,12 +492,3 @@ def _table_facts(ready: Ready) -> Answer:
         "table_error": max((max(r.inf_error, r.rate_error) for r in reports), default=0.0),
         "table_sha256": ready.tables.sha256,
     }
-
-
-def _file_parameters(ready: Ready) -> dict[str, float]:
-    spec = ready.model.spec
-    found: dict[str, float] = {}
-    for c in spec.conductance:
-        found[f"{c.name}.gmax_ns"] = c.gmax_ns
-        found[f"{c.name}.reversal_mv"] = c.reversal_at(spec.temperature_c)
-    return found

@@ -136,6 +136,16 @@ class Watch:
             "uptime_s": round(time.monotonic() - self._started, 3),
         }
 
+    @property
+    def held(self) -> bool:
+        """Whether a rig holds the loop."""
+        return bool(self._loop["held"])
+
+    @property
+    def session(self) -> int:
+        """How many rigs have taken hold so far."""
+        return int(self._loop["session"])
+
     def rig_reports_nothing(self) -> bool:
         """Whether a rig that has long had answers still reports none in force."""
         if self._last is None or not self._loop["held"]:

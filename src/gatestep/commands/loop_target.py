@@ -20,7 +20,7 @@ from ..config import LoadedRig
 from ..control import Control
 from ..errors import ControlError, LinkError
 from ..library import find_model
-from ..specs import ControlSpec, FeedSpec, LimitsSpec, NetworkSpec, RecordSpec, RigSpec
+from ..specs import ControlSpec, FeedSpec, LimitsSpec, NetworkSpec, RigSpec
 
 START_S = 600.0
 """How long a private server may take to start; the first start on a machine compiles."""
@@ -163,8 +163,7 @@ def private_rig(rig: LoadedRig, folder: Path) -> RigSpec:
         "cell": cells,
         "simulated": None,
     }
-    if spec.record is not None:
-        changes["record"] = RecordSpec(folder=str(folder / "record"))
+    changes["record"] = spec.record.model_copy(update={"folder": str(folder / "record")})
     return spec.model_copy(update=changes)
 
 
