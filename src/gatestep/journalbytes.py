@@ -268,7 +268,9 @@ def find_close(source: Source) -> Block | None:
             block = unpack_header(tail[found : found + HEADER_SIZE], start + found)
             whole = block is not None and block.kind == Kind.CLOSE and block.end == end
             return block if whole else None
-        if start == 0 or size > _CHUNK << 6:
+        # JSON has no control characters: anything else is no closing block's payload.
+        text = tail[: len(tail) - ALIGNMENT]
+        if start == 0 or min(text, default=0) < 0x20:
             return None
         size *= 8
 
@@ -297,11 +299,11 @@ def _plain(value: Any) -> Any:
     return value.tolist() if hasattr(value, "tolist") else str(value)
 
 
-def pack_model(info: dict[str, Any], table: bytes) -> bytes:
-    """The payload of a MODEL block; ``table`` may be empty."""
+def pack_model(info: dict[str, Any], table: bytes | None) -> bytes:
+    """The payload of a MODEL block; ``table`` is None where tables are not recorded."""
     text = pack_json(info)
     # Level 1: the writer has other work, and a table shrinks little more at a higher one.
-    packed = zlib.compress(table, 1) if table else b""
+    packed = b"" if table is None else zlib.compress(table, 1)
     return b"".join((_CHECK.pack(len(text)), text, packed))
 
 

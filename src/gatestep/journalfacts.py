@@ -115,7 +115,7 @@ def model_payload(number: int, model: LoadedModel, tables: Tables, with_table: b
         "bank": {name: _trimmed(bank[name]) for name in BANK.names or ()},
         "layout": LAYOUT,
     }
-    return pack_model(info, tables.table.astype("<f8").tobytes() if with_table else b"")
+    return pack_model(info, tables.table.astype("<f8").tobytes() if with_table else None)
 
 
 def _trimmed(value: Any) -> Any:
