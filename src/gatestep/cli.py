@@ -121,6 +121,39 @@ def stop(
 
 
 @app.command()
+def run(
+    plan: Annotated[Path, typer.Argument(metavar="PLAN.toml", help="The plan file.")],
+    seed: Annotated[
+        int | None, typer.Option(help="Of a shuffled order, in place of the plan's own.")
+    ] = None,
+    force: Annotated[
+        bool, typer.Option("--force", help="Run although the check advises against it.")
+    ] = False,
+    control: Endpoint = CONTROL,
+    curve_server: CurveServer = None,
+    curve_client: CurveClient = None,
+    json_output: Json = False,
+) -> int:
+    """Play a plan's sweeps on a running server: it arms, plays, records, and goes to 0 pA."""
+    from .commands.run import run as body
+
+    return body(plan, control, seed, force, json_output, (curve_server, curve_client))
+
+
+@app.command()
+def halt(
+    control: Endpoint = CONTROL,
+    curve_server: CurveServer = None,
+    curve_client: CurveClient = None,
+    json_output: Json = False,
+) -> int:
+    """End a plan that runs, at 0 pA; the model before it comes back."""
+    from .commands.steer import ask
+
+    return ask("halt", control, json_output, curve_server, curve_client)
+
+
+@app.command()
 def load(
     model: Annotated[str, typer.Argument(metavar="MODEL", help="A shipped model or a file.")],
     cell: CellName = None,

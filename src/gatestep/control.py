@@ -159,6 +159,26 @@ class Control:
         """Put a note into the record."""
         return self.ask("mark", text=text)
 
+    def run(
+        self,
+        text: str,
+        path: Path,
+        seed: int | None = None,
+        force: bool = False,
+        timeout_s: float | None = None,
+    ) -> dict[str, Any]:
+        """Begin a plan: the text of its file, and the file's path for what it names beside it."""
+        self.status()
+        wait_s = timeout_s or 10 * self.timeout_s
+        whole = str(path.resolve())
+        return self.ask(
+            "run", timeout_s=wait_s, text=text, path=whole, seed=seed, force=force or None
+        )
+
+    def halt(self) -> dict[str, Any]:
+        """End the plan under way, at 0 pA."""
+        return self.ask("halt")
+
     def stop(self) -> dict[str, Any]:
         """Stop the server, with 0 pA as its last answer."""
         return self.ask("stop")

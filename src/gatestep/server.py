@@ -200,6 +200,10 @@ class Server:
         """The endpoints as bound."""
         return dict(self._endpoints)
 
+    def recording(self) -> dict[str, Any]:
+        """State of the record: its path, its size, and what went wrong."""
+        return self._record.status()
+
     def _bind(self) -> None:
         spec, keeper = self.rig.spec, self._gatekeeper
         name = "loop"

@@ -7,6 +7,7 @@ import signal
 import sys
 from pathlib import Path
 from types import FrameType
+from typing import Any
 
 CAUTION = (
     "Not a medical device; never for use on people. Try every model and rig on a model cell "
@@ -40,9 +41,9 @@ def serve(rig_file: Path, arm: bool, force: bool, json_output: bool) -> int:
         if arm and not stop_asked:
             server.arm(force)
             say("armed from the start" + (", whatever the check says" if force else ""))
-        _announce(server.endpoints(), json_output)
+        _announce(server.endpoints(), server.recording(), json_output)
         result = server.attend(until=lambda: stop_asked)
-        _close_report(server.watch.summary(), json_output)
+        _close_report(server.watch.summary(), server.recording(), json_output)
     finally:
         server.close()
     if result:
@@ -50,16 +51,23 @@ def serve(rig_file: Path, arm: bool, force: bool, json_output: bool) -> int:
     return result
 
 
-def _announce(endpoints: dict[str, str], json_output: bool) -> None:
+def _announce(endpoints: dict[str, str], record: dict[str, Any], json_output: bool) -> None:
     if json_output:
-        print(json.dumps({"ready": True, "endpoints": endpoints}), flush=True)
-    else:
-        print("ready: " + ", ".join(f"{k} {v}" for k, v in endpoints.items()), flush=True)
+        print(
+            json.dumps({"ready": True, "endpoints": endpoints, "journal": record["path"]}),
+            flush=True,
+        )
+        return
+    print("ready: " + ", ".join(f"{k} {v}" for k, v in endpoints.items()), flush=True)
+    if record["state"] == "on":
+        print(f"journal: {record['path']}", flush=True)
 
 
-def _close_report(summary: dict[str, object], json_output: bool) -> None:
+def _close_report(summary: dict[str, Any], record: dict[str, Any], json_output: bool) -> None:
     if json_output:
-        print(json.dumps({"stopped": True, **summary}), flush=True)
-    else:
-        counts = ("answered", "late", "missed", "clipped", "trips")
-        print("stopped at 0 pA: " + ", ".join(f"{summary[k]} {k}" for k in counts), flush=True)
+        print(json.dumps({"stopped": True, **summary, "recording": record}), flush=True)
+        return
+    counts = ("answered", "late", "missed", "clipped", "trips")
+    print("stopped at 0 pA: " + ", ".join(f"{summary[k]} {k}" for k in counts), flush=True)
+    if record["path"]:
+        print(f"journal: {record['path']}, {record['samples']} samples", flush=True)

@@ -72,6 +72,13 @@ def print_status(status: dict[str, Any]) -> None:
     if service:
         spread = "  ".join(f"{k} {v / 1000:.1f}" for k, v in service.items())
         console.print(f"service time in µs: {spread}", highlight=False)
+    console.print(_record_line(status["recording"]), highlight=False)
+    if status["plan"] and status["plan"]["running"]:
+        plan = status["plan"]
+        console.print(
+            f"plan: {plan['title']}; {plan['ended']} of {plan['sweeps']} sweeps ended",
+            highlight=False,
+        )
     for setting in status.get("host", []):
         if not setting["applied"]:
             console.print(
@@ -88,6 +95,17 @@ def print_status(status: dict[str, Any]) -> None:
             f"±{cell['limits']['current_pa']:g}",
         )
     console.print(table)
+
+
+def _record_line(record: dict[str, Any]) -> str:
+    """The state of the record for people."""
+    if record["state"] == "off":
+        return "record: off"
+    if record["state"] == "failed":
+        return f"record: FAILED, nothing more is kept: {record['reason']}"
+    dropped = record["dropped_samples"]
+    lost = f", {dropped} SAMPLES DROPPED" if dropped else ""
+    return f"record: {record['path']}, {record['bytes'] / 1e6:.1f} MB{lost}"
 
 
 def _figure(value: float | None) -> str:
@@ -110,4 +128,6 @@ def _sentence(verb: str, answer: dict[str, Any]) -> str:
         return f"marked{after}: {answer['text']}"
     if verb == "stop":
         return "stopping at 0 pA"
+    if verb == "halt":
+        return f"the plan is ended at 0 pA after {answer['plan']['ended']} sweeps"
     return f"{answer['state']}{after}"

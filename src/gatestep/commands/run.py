@@ -1,0 +1,145 @@
+"""``gatestep run``: a plan, sweep by sweep, on a running server."""
+
+from __future__ import annotations
+
+import contextlib
+import json
+import sys
+import time
+from pathlib import Path
+from typing import Any
+
+from ..control import Control
+from ..errors import ControlError, GatestepError
+from ..plans import load_plan
+
+_POLL_S = 0.2
+_PREPARE_S = 600.0
+_INTERRUPTED = 130
+_COMPLETE = "complete"
+
+
+def run(
+    plan_file: Path,
+    endpoint: str,
+    seed: int | None,
+    force: bool,
+    json_output: bool,
+    curve: tuple[Path | None, Path | None],
+) -> int:
+    """Play a plan and tell of every sweep; returns the exit status.
+
+    0 when every sweep was played to its end, 1 when the plan ended before, 130 after
+    Ctrl-C. Whatever happens to this command, the server ends a plan at 0 pA.
+
+    Raises
+    ------
+    GatestepError
+        When the plan cannot be read, or the server refuses it.
+    """
+    plan = load_plan(plan_file)
+    with Control(endpoint, curve_server=curve[0], curve_client=curve[1]) as control:
+        recording = control.status()["recording"]
+        if not json_output:
+            _introduce(plan, recording)
+        answer = control.run(plan.text, plan.path, seed, force, timeout_s=_PREPARE_S)
+        try:
+            told = _watch(control, answer, json_output)
+        except KeyboardInterrupt:
+            told = _halt(control)
+            _report(told, recording, json_output)
+            return _INTERRUPTED
+    _report(told, recording, json_output)
+    return 0 if told["why"] == _COMPLETE else 1
+
+
+def _introduce(plan: Any, recording: dict[str, Any]) -> None:
+    seconds = plan.duration_ms() / 1000
+    print(f"{plan.spec.title}: {len(plan.expand())} sweeps, {seconds:.1f} s; preparing them")
+    if recording["state"] == "on":
+        print(f"recorded in {recording['path']}")
+    else:
+        why = f": {recording['reason']}" if recording.get("reason") else ""
+        print(f"NOT recorded: the server's record is {recording['state']}{why}", file=sys.stderr)
+
+
+def _watch(control: Control, answer: dict[str, Any], quiet: bool) -> dict[str, Any]:
+    """Follow the plan to its end; a line for each sweep that has ended."""
+    from rich.console import Console
+    from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
+
+    columns = (TextColumn("{task.description}"), BarColumn(), TimeElapsedColumn())
+    console = Console(stderr=quiet, quiet=quiet)
+    told: dict[str, Any] = {}
+    with Progress(*columns, console=console, transient=True, disable=quiet) as bar:
+        task = bar.add_task("waiting for the first sweep", total=answer["sweeps"])
+        done: list[dict[str, Any]] = []
+        while True:
+            told = _ask_on(control, len(done))
+            for sweep in told["done"]:
+                bar.console.print(_line(sweep, answer["sweeps"]), highlight=False)
+            done += told["done"]
+            if told["now"]:
+                bar.update(task, description=_line(told["now"], answer["sweeps"]))
+            bar.update(task, completed=_share_done(len(done), told["now"]))
+            if not told["running"] and len(done) == told["ended"]:
+                return {**told, "done": done}
+            time.sleep(_POLL_S)
+
+
+def _ask_on(control: Control, since: int) -> dict[str, Any]:
+    """The plan's state; a server that is gone says what that means."""
+    try:
+        plan = control.ask("sweeps", since=since)["plan"]
+    except GatestepError as fault:
+        raise ControlError(
+            f"the server went away while the plan ran ({fault}); the rig goes to 0 pA by itself, "
+            "and the journal holds what was played"
+        ) from fault
+    if plan is None:
+        raise ControlError("the server was started anew while the plan ran; look at its journal")
+    return dict(plan)
+
+
+def _share_done(done: int, now: dict[str, Any] | None) -> float:
+    return done + (now["ticks_done"] / now["ticks"] if now else 0.0)
+
+
+def _line(sweep: dict[str, Any], count: int) -> str:
+    """One sweep in a line."""
+    end = "" if sweep["complete"] is not False else "  cut short"
+    late = f"  {sweep['late']} late" if sweep["late"] else ""
+    clipped = f"  {sweep['clipped']} clipped" if sweep["clipped"] else ""
+    return (
+        f"{sweep['sweep'] + 1:4d}/{count}  {sweep['name']}  {sweep['condition']}  "
+        f"{sweep['spikes']} spikes{late}{clipped}{end}"
+    )
+
+
+def _halt(control: Control) -> dict[str, Any]:
+    """End the plan, and wait until what was in force before it is back."""
+    with contextlib.suppress(ControlError):  # it may just have ended by itself
+        control.halt()
+    done: list[dict[str, Any]] = []
+    while True:
+        told = _ask_on(control, len(done))
+        done += told["done"]
+        if not told["running"] and len(done) == told["ended"]:
+            return {**told, "done": done}
+        time.sleep(_POLL_S)
+
+
+def _report(told: dict[str, Any], recording: dict[str, Any], json_output: bool) -> None:
+    done, path = told["done"], recording["path"]
+    if json_output:
+        complete = told["why"] == _COMPLETE
+        kept = {"journal": path, "complete": complete, "why": told["why"]}
+        print(json.dumps({"title": told["title"], "planned": told["sweeps"], **kept, "done": done}))
+        return
+    whole = sum(1 for sweep in done if sweep["complete"])
+    if told["why"] == _COMPLETE:
+        print(f"{whole} sweeps played; 0 pA, and the model that was in force before is back")
+    else:
+        print(f"ended after {whole} of {told['sweeps']} sweeps ({told['why']}); 0 pA")
+    if path:
+        print(f"gatestep report {path}")
