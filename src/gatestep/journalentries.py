@@ -55,6 +55,7 @@ class Entries:
         self._seq: int | None = None
         self._newest = _NEVER  # the newest sample that was no repeat, where it is known
         self._expected: dict[int, tuple[str, dict[str, Any]]] = {}
+        self._sweeps: dict[int, Any] = {}  # those that play, by their order
         self._ending: dict[int, Any] = {}  # the sweep of an order that began its stimulus
         self._samples: list[np.ndarray] = []
         self._events: list[Event] = []

@@ -235,10 +235,10 @@ class JournalFile:
         for event in self.events:
             if event.position > position:
                 break
-            if event.kind in {"swap", "set"} and _was_done(event):
+            if event.kind in {"in_force", "swap", "set"} and _was_done(event):
                 k = self._cell(event.fields.get("cell"))
                 if k is not None:
-                    change = self._swapped if event.kind == "swap" else self._set
+                    change = self._set if event.kind == "set" else self._swapped
                     state[k] = change(state[k], event.fields)
         return tuple(state)
 

@@ -115,10 +115,10 @@ def _stretches(journal: JournalFile) -> list[Summary]:
     for k, cell in enumerate(journal.cells):
         own = [
             e for e in journal.events
-            if e.kind in {"swap", "set"} and e.fields.get("cell") in {k, cell}
+            if e.kind in {"in_force", "swap", "set"} and e.fields.get("cell") in {k, cell}
             and e.fields.get("outcome", "done") == "done"
         ]  # fmt: skip
-        swaps = [e for e in own if e.kind == "swap"]
+        swaps = [e for e in own if e.kind != "set"]
         ends = [*(e.position for e in swaps[1:]), size]
         for swap, stop in zip(swaps, ends, strict=False):
             start = min(swap.position, size)
