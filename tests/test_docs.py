@@ -232,7 +232,7 @@ def command_faults(text: str) -> list[str]:
     return faults
 
 
-@pytest.mark.parametrize("path", ["README.md", "DEVELOPERS.md", "configs/README.md", *RIGS])
+@pytest.mark.parametrize("path", ["README.md", "DEVELOPERS.md", "configs/README.md", *RIGS, *PLANS])
 def test_every_command_in_the_documents_exists(path):
     """No document names a command or an option that the command line does not have."""
     assert command_faults((ROOT / path).read_text("utf-8")) == []

@@ -305,6 +305,23 @@ def journal(
     return show_journal(path, json_output, events)
 
 
+@app.command()
+def report(
+    journal: Annotated[Path, typer.Argument(metavar="JOURNAL", help="The journal's file.")],
+    figure: Annotated[
+        Path | None, typer.Option("--figure", metavar="DIR", help="Draw figures into this folder.")
+    ] = None,
+    table: Annotated[
+        Path | None, typer.Option("--csv", metavar="FILE", help="Write a line a sweep as CSV.")
+    ] = None,
+    json_output: Json = False,
+) -> int:
+    """Measure each sweep of a journal: spikes and their shapes, resistance, charge, lateness."""
+    from .commands.report import report as body
+
+    return body(journal, figure, table, json_output)
+
+
 @bench_app.command("step")
 def bench_step(
     rounds: Annotated[int, typer.Option("--rounds", help="Alternating rounds.")] = 200,
