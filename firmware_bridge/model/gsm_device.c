@@ -3,7 +3,6 @@
 
 #include <string.h>
 
-#include "gsb_error.h"
 #include "gsb_guard.h"
 
 /* What a hello says that this device can do (SPEC.md). */

@@ -26,6 +26,7 @@
 #define GSM_DEVICE_H
 
 #include "gsb_device.h"
+#include "gsb_error.h"
 #include "model.h"
 
 #ifdef __cplusplus

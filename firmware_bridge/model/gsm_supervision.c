@@ -1,7 +1,6 @@
 /* The poll: orders from the host, answers, thinned samples. SPEC.md has the frames. */
 #include <string.h>
 
-#include "gsb_error.h"
 #include "gsm_device.h"
 
 static void heard(struct gsm_device *device)
