@@ -154,6 +154,17 @@ def halt(
 
 
 @app.command()
+def replay(
+    journal: Annotated[Path, typer.Argument(metavar="JOURNAL", help="A journal of a run.")],
+    json_output: Json = False,
+) -> int:
+    """Compute every recorded current again and compare, bit for bit."""
+    from .commands.replay import replay as body
+
+    return body(journal, json_output)
+
+
+@app.command()
 def load(
     model: Annotated[str, typer.Argument(metavar="MODEL", help="A shipped model or a file.")],
     cell: CellName = None,

@@ -13,7 +13,7 @@ from .kernel import records
 from .library import LoadedModel
 from .orders import ORDER, Order
 from .shelf import Ready
-from .tables import Tables
+from .tables import Tables, as_in_file
 from .wire import NIL
 
 
@@ -134,11 +134,11 @@ def settings_of(choice: Choice) -> dict[str, Any]:
     }
 
 
-def model_meaning(ready: Ready, model: int) -> Mapping[str, Any]:
-    """What the record says of a model that comes into force."""
+def model_meaning(ready: Ready, record: Record) -> Mapping[str, Any]:
+    """What the record says of a model that comes into force; the model itself goes there too."""
     count = len(ready.tables.spec.conductance)
     return {
-        "model": model,
+        "model": record.add_model(ready.model, as_in_file(ready.tables)),
         "name": ready.model.name,
         "gmax_ns": ready.tables.bank["gmax_ns"].reshape(-1)[:count].tolist(),
         "reversal_mv": ready.tables.bank["reversal_mv"].reshape(-1)[:count].tolist(),

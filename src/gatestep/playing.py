@@ -308,7 +308,7 @@ class Player:
             setting.choice,
             at,
             goes_on=goes_on,
-            **model_meaning(ready, self._record.add_model(ready.model, ready.tables)),
+            **model_meaning(ready, self._record),
         )
         run.swaps[number] = ready
 

@@ -14,7 +14,7 @@ from __future__ import annotations
 import hashlib
 import math
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -32,6 +32,7 @@ __all__ = [
     "Break",
     "GateReport",
     "Tables",
+    "as_in_file",
     "build_tables",
     "curves_of",
     "fill_bank",
@@ -287,6 +288,14 @@ def _conductance_fields(model: ModelSpec) -> Iterator[tuple[str, list[float]]]:
     yield "gmax_ns", [c.gmax_ns for c in conductances]
     yield "reversal_mv", [c.reversal_at(model.temperature_c) for c in conductances]
     yield "gates", [len(c.gate) for c in conductances]
+
+
+def as_in_file(tables: Tables) -> Tables:
+    """A model with the parameters of its file, whatever was set since."""
+    bank = tables.bank.copy()
+    for name, values in _conductance_fields(tables.spec):
+        bank[name][: len(values)] = values
+    return replace(tables, bank=bank)
 
 
 def fill_bank(tables: Tables, bank_record: Any, table_out: Floats) -> None:

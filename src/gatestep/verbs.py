@@ -294,7 +294,7 @@ class Verbs:
         return ready
 
     def _meaning(self, ready: Ready) -> Mapping[str, Any]:
-        return model_meaning(ready, self._record.add_model(ready.model, ready.tables))
+        return model_meaning(ready, self._record)
 
     def refuse_to_ring(self, force: bool) -> None:
         """Refuse to arm a loop that carries less than its model opens, unless forced.

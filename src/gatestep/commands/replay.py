@@ -1,0 +1,70 @@
+"""``gatestep replay``: whether a journal's currents can be computed again, bit for bit."""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+
+from ..comparison import Difference, Verdict, compare
+from ..journalfile import JournalFile, open_journal
+
+_IDENTICAL, _DIFFERENT, _INCOMPLETE = 0, 1, 3
+
+
+def replay(path: Path, json_output: bool) -> int:
+    """Replay a journal and print what came of it; returns the exit status.
+
+    0 when every current is identical, 1 when one differs, 3 when all that could be
+    computed is identical and something could not.
+
+    Raises
+    ------
+    JournalError
+        When the file is no journal, or cannot be replayed at all.
+    """
+    with open_journal(path) as journal:
+        verdict = _with_progress(journal)
+    if json_output:
+        print(json.dumps({"journal": str(path), **verdict.plain_data()}))
+    else:
+        _print(verdict)
+    if not verdict.identical:
+        return _DIFFERENT
+    return _IDENTICAL if verdict.complete else _INCOMPLETE
+
+
+def _with_progress(journal: JournalFile) -> Verdict:
+    from rich.console import Console
+    from rich.progress import Progress
+
+    with Progress(console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task("replaying", total=max(len(journal.samples), 1))
+        return compare(journal, lambda done, _of: bar.update(task, completed=done))
+
+
+def _print(verdict: Verdict) -> None:
+    if verdict.identical:
+        print(f"identical: {verdict.compared:,} of {verdict.samples:,} samples, every bit")
+    else:
+        print(
+            f"NOT identical: {verdict.different:,} of {verdict.compared:,} samples differ, by "
+            f"{verdict.largest_pa:.6g} pA at most"
+        )
+    if verdict.unlike:
+        print(verdict.unlike)
+    if verdict.first:
+        _print_difference(verdict.first)
+    if verdict.stopped:
+        print(f"not compared: {verdict.samples - verdict.compared:,} samples: {verdict.stopped}")
+    for note in verdict.notes:
+        print(note)
+
+
+def _print_difference(found: Difference) -> None:
+    print(
+        f"first at sample {found.position:,} (seq {found.seq}), cell {found.cell}, model "
+        f"{found.model}:"
+    )
+    print(f"  recorded {found.recorded_pa!r} pA, flags {' '.join(found.recorded_flags) or 'none'}")
+    print(f"  computed {found.computed_pa!r} pA, flags {' '.join(found.computed_flags) or 'none'}")
+    print(f"  the last events before it: {'; '.join(found.before) or 'none'}")
