@@ -15,8 +15,8 @@ from ..errors import FileError, MissingExtraError
 if TYPE_CHECKING:
     from ..sweepmeasures import Floats, Measured, Stretch
 
-COLOURS = ("#16365c", "#d4661f", "#2b9c8c", "#8c3a74", "#b59b1e", "#6f7f8c")
-"""Of conditions. They differ in lightness too, for eyes that tell few hues, and in print."""
+COLOURS = ("#0a0a4d", "#c56246", "#3bc7bc", "#54262e", "#d0b30a", "#5258d3")
+"""Of conditions: as far apart as they can be for eyes that lack one of the three cones, too."""
 MARKERS = ("o", "s", "^", "D", "v", "P")
 RAMP = ("#e3b04b", "#8fae6e", "#36898c", "#234a76", "#1a1a33")
 """Of rising currents, from light to dark."""
@@ -213,6 +213,8 @@ def draw_rates(conditions: list[dict[str, Any]], title: str) -> Any:
 
 def shades(count: int) -> list[str]:
     """So many colours along ``RAMP``."""
+    if count == 0:
+        return []
     ramp = np.array([[int(c[k : k + 2], 16) for k in (1, 3, 5)] for c in RAMP], dtype=float)
     places = np.linspace(0.0, len(RAMP) - 1.0, count) if count > 1 else np.array([2.0])
     mixed = [np.interp(places, np.arange(len(RAMP)), ramp[:, k]) for k in range(3)]
