@@ -189,6 +189,10 @@ class Journal:
                 self._declare_failed(f"the disk has not taken the rest in {_CLOSE_S:g} s")
         return self.status()
 
+    def is_writing(self) -> bool:
+        """Whether the writer's thread still has the file."""
+        return self._thread is not None and self._thread.is_alive()
+
     def _put(self, item: _Item, size: int) -> None:
         """Queue an item, behind what is missing before it; the lock is held."""
         if self._state != "on":
@@ -364,7 +368,8 @@ class Journal:
         self._append(Kind.CLOSE, pack_json(close))
         self._out.sync()
         with self._lock:
-            self._state = "ended"
+            # A close that gave up on the disk has already said that it failed.
+            self._state = "ended" if self._state == "on" else self._state
 
     def _give_up(self, reason: str) -> None:
         """[writer] The record ends here; the file is left whole, saying so where it can."""
