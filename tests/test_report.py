@@ -24,7 +24,7 @@ from gatestep.loop import Entry
 from gatestep.orders import Order
 from gatestep.plans import parse_plan
 from gatestep.stimulus import waveform
-from gatestep.sweepmeasures import measure, read_stretch, tasks_of
+from gatestep.sweepmeasures import Measurer, read_stretch, tasks_of
 from gatestep.wire import CLIPPED, LATE, LIVE, REPEAT
 
 TICK_MS = 0.02
@@ -241,7 +241,7 @@ def test_every_cell_of_an_armed_stretch_has_its_own_line(tmp_path, capsys):
     rows = rows_of(path, capsys)
     assert [r["cell"] for r in rows] == ["c0", "c1", "c0", "c1"]
     with open_journal(path) as journal:
-        made, stretch = measure(journal, tasks_of(journal)[3])
+        made, stretch = Measurer(journal).measure(tasks_of(journal)[3])
         i_pa = journal.samples[3400:4400]["i_pa"][:, 1]
     assert np.array_equal(stretch.i_pa, i_pa)
     assert made.charge_pc == pytest.approx(i_pa.sum() * TICK_MS / 1000.0)

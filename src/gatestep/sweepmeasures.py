@@ -10,7 +10,9 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from .errors import JournalError
 from .journalfile import JournalFile, Sweep
+from .replay import Replay, currents_between
 from .spikes import Firing, Response, firing, response
 from .units import US_PER_MS
 from .wire import CLIPPED, LATE, LIVE, MALFORMED, NIL, REFUSED, REPEAT
@@ -151,8 +153,9 @@ class Measured:
     charge_pc, stimulus_pc : float
         Injected charge in all, as answered, and what the stimulus asked for.
     conductances_pc : dict or None
-        What each conductance would have injected by itself, before the limits; None
-        where it cannot be computed.
+        What each conductance injected by itself, ``-g (V - E)`` at each sample and before
+        the limits; None where it cannot be computed. With anticipation an answer is the
+        mean over the hold to come, so the sum differs a little from the model's share.
     complete : bool
         Whether the sweep was played to its end, with all of its ticks live and readable.
     """
@@ -264,40 +267,81 @@ def _of_cell(samples: np.ndarray, cell: int) -> np.ndarray:
     return rows
 
 
-def measure(journal: JournalFile, task: Task) -> tuple[Measured, Stretch]:
-    """Measure one task; the stretch is given back too, for figures."""
-    stretch = read_stretch(journal, task.start, task.stop, task.cell)
-    end_ms = float(stretch.t_ms[-1]) + stretch.interval_us / US_PER_MS if stretch.size else 0.0
-    window = task.window_ms or (0.0, end_ms)
-    finite = np.isfinite(stretch.v_mv)
-    t_ms, v_mv = stretch.t_ms[finite], stretch.v_mv[finite]
-    fired = firing(t_ms, v_mv, window, task.threshold_mv)
-    answer = None
-    if task.current_pa and not fired.spikes and not fired.outside:
-        answer = response(t_ms, v_mv, stretch.i_pa[finite], window, task.current_pa)
-    lags = stretch.rows["lag_us"][stretch.rows["lag_us"] != NIL]
-    idle = stretch.size - stretch.flagged(LIVE)
-    made = Measured(
-        task,
-        int(stretch.size),
-        end_ms / 1000.0,
-        window,
-        fired,
-        answer,
-        stretch.flagged(LATE),
-        float(lags.max()) if lags.size else None,
-        stretch.flagged(CLIPPED),
-        stretch.missed,
-        idle,
-        stretch.damaged,
-        stretch.charge_pc(stretch.i_pa),
-        stretch.charge_pc(stretch.stimulus_pa),
-        _of_conductances(journal, task, stretch),
-        task.complete and not (idle or stretch.damaged or stretch.restarted or not stretch.size),
+class Measurer:
+    """Measures the tasks of a journal, best in the order of their places.
+
+    Parameters
+    ----------
+    journal : JournalFile
+
+    Notes
+    -----
+    The charge of each conductance needs the gates, and so the samples from the journal's
+    first on are taken through the kernel again; tasks that follow on share that work.
+    """
+
+    def __init__(self, journal: JournalFile) -> None:
+        self._journal = journal
+        self._replay: Replay | None = None
+
+    def measure(self, task: Task) -> tuple[Measured, Stretch]:
+        """Measure one task; its samples are given back too, for figures."""
+        stretch = read_stretch(self._journal, task.start, task.stop, task.cell)
+        tick_ms = stretch.interval_us / US_PER_MS
+        end_ms = float(stretch.t_ms[-1]) + tick_ms if stretch.size else 0.0
+        window = task.window_ms or (0.0, end_ms)
+        finite = np.isfinite(stretch.v_mv)
+        t_ms, v_mv = stretch.t_ms[finite], stretch.v_mv[finite]
+        fired = firing(t_ms, v_mv, window, task.threshold_mv)
+        answer = None
+        if task.current_pa and not fired.spikes and not fired.outside:
+            answer = response(t_ms, v_mv, stretch.i_pa[finite], window, task.current_pa)
+        lags = stretch.rows["lag_us"][stretch.rows["lag_us"] != NIL]
+        idle = stretch.size - stretch.flagged(LIVE)
+        lacking = idle or stretch.damaged or stretch.restarted or not stretch.size
+        made = Measured(
+            task=task,
+            ticks=stretch.size,
+            seconds=end_ms / 1000.0,
+            window_ms=window,
+            firing=fired,
+            response=answer,
+            late=stretch.flagged(LATE),
+            lag_us=float(lags.max()) if lags.size else None,
+            clipped=stretch.flagged(CLIPPED),
+            missed=stretch.missed,
+            idle=idle,
+            damaged=stretch.damaged,
+            charge_pc=stretch.charge_pc(stretch.i_pa),
+            stimulus_pc=stretch.charge_pc(stretch.stimulus_pa),
+            conductances_pc=self._conductances(task, stretch),
+            complete=task.complete and not lacking,
+        )
+        return made, stretch
+
+    def _conductances(self, task: Task, stretch: Stretch) -> dict[str, float] | None:
+        """Charge of each conductance, where one model was in force and all can be read."""
+        journal = self._journal
+        if journal.in_force(task.start)[task.cell].model is None or _swapped(journal, task):
+            return None
+        try:
+            if self._replay is None or self._replay.position > task.start:
+                self._replay = Replay(journal)
+            found = currents_between(self._replay, task.start, task.stop, task.cell)
+        except JournalError:
+            return None
+        if self._replay.unlike is not None:
+            return None
+        return {
+            name: stretch.charge_pc(i_pa[stretch.at - task.start]) for name, i_pa in found.items()
+        }
+
+
+def _swapped(journal: JournalFile, task: Task) -> bool:
+    """Whether the cell's model changed within a task."""
+    return any(
+        event.kind in {"swap", "in_force"}
+        and task.start < event.position < task.stop
+        and event.fields.get("cell") in {task.cell, journal.cells[task.cell]}
+        for event in journal.events
     )
-    return made, stretch
-
-
-def _of_conductances(journal: JournalFile, task: Task, stretch: Stretch) -> dict[str, float] | None:
-    """Charge of each conductance."""
-    return None

@@ -44,7 +44,7 @@ def report(
         If there is nothing to measure, or a file cannot be read or written.
     """
     from ..journalfile import open_journal
-    from ..sweepmeasures import measure, tasks_of
+    from ..sweepmeasures import Measurer, tasks_of
 
     with open_journal(path) as journal:
         tasks = tasks_of(journal)
@@ -56,8 +56,9 @@ def report(
 
             drawing = Drawing(title_of(journal))
         measured = []
+        measurer = Measurer(journal)
         for task in tasks:
-            made, stretch = measure(journal, task)
+            made, stretch = measurer.measure(task)
             measured.append(made)
             if drawing is not None:
                 drawing.add(made, stretch)
