@@ -10,7 +10,7 @@ from typing import Any
 
 from ..errors import FileError
 from ..firmware import ROWS, DeviceTables, device_tables
-from ..firmware_c import digest, header, instructions, ram_bytes, selftest, source
+from ..firmware_c import code_bytes, digest, header, instructions, ram_bytes, selftest, source
 from ..firmware_errors import STEPS, USUAL_MV, RowsError, rows_error
 from ..library import LoadedModel, load_model
 from ..tables import build_tables
@@ -111,6 +111,7 @@ def _facts(tables: DeviceTables) -> dict[str, Any]:
         "rows": tables.rows,
         "interval_us": tables.interval_us,
         "table_bytes": tables.table_bytes,
+        "code_bytes": code_bytes(tables),
         "ram_bytes": ram_bytes(tables),
         "instructions": instructions(tables),
         "sha256": digest(tables),
@@ -146,7 +147,7 @@ def _as_text(loaded: LoadedModel, tables: DeviceTables, choices: list[RowsError]
     lines = [
         f"{loaded.name}: {loaded.spec.title}",
         f"tick           {tables.interval_us:g} µs, built in",
-        f"flash          {tables.table_bytes:,} bytes of tables, and the code",
+        f"flash          {tables.table_bytes:,} bytes of tables, about {code_bytes(tables)} of code",
         f"RAM            {ram_bytes(tables)} bytes of gates and parameters",
         f"step           about {instructions(tables)} instructions on a Cortex-M4F, estimated",
         "",
@@ -184,6 +185,7 @@ def readme(loaded: LoadedModel, tables: DeviceTables, choices: list[RowsError]) 
         high=f"{high:g}",
         steps=f"{STEPS:,}",
         table_bytes=f"{tables.table_bytes:,}",
+        code_bytes=code_bytes(tables),
         ram_bytes=ram_bytes(tables),
         instructions=instructions(tables),
         names=names,
