@@ -144,10 +144,11 @@ def parameters(tables: DeviceTables) -> Iterator[str]:
 
 
 def _as_text(loaded: LoadedModel, tables: DeviceTables, choices: list[RowsError], out: Path) -> str:
+    code = code_bytes(tables)
     lines = [
         f"{loaded.name}: {loaded.spec.title}",
         f"tick           {tables.interval_us:g} µs, built in",
-        f"flash          {tables.table_bytes:,} bytes of tables, about {code_bytes(tables)} of code",
+        f"flash          {tables.table_bytes:,} bytes of tables, about {code:,} of code",
         f"RAM            {ram_bytes(tables)} bytes of gates and parameters",
         f"step           about {instructions(tables)} instructions on a Cortex-M4F, estimated",
         "",

@@ -4,22 +4,19 @@ from __future__ import annotations
 
 import csv
 import json
-from collections.abc import Iterable, Sequence
+from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-import numpy as np
-
 from ..errors import FileError, GatestepError
+from .report_rates import Row, conditions_of, ladders_of
 
 if TYPE_CHECKING:
     from ..journalfile import JournalFile
     from ..sweepmeasures import Measured
 
-NARROWEST = 118
-"""Columns of a terminal that the tables need; narrower ones wrap the lines."""
-
-Row = dict[str, Any]
+NARROWEST = 130
+"""Columns that the tables need; a narrower terminal wraps their lines."""
 
 
 def report(
@@ -68,7 +65,7 @@ def report(
         _write_csv(table, rows)
         result["csv"] = str(table)
     if drawing is not None and figure is not None:
-        result["figures"] = [str(made) for made in drawing.save(figure, result["conditions"])]
+        result["figures"] = [str(made) for made in drawing.save(figure, result)]
     if json_output:
         print(json.dumps(result, ensure_ascii=False))
     else:
@@ -124,25 +121,6 @@ def row_of(made: Measured, cells: Sequence[str]) -> Row:
     }
 
 
-def conditions_of(measured: Iterable[Measured], cells: Sequence[str]) -> list[Row]:
-    """For each condition and cell, the rates at each step of current, in rising order."""
-    found: dict[tuple[str, str], dict[float, list[float]]] = {}
-    for made in measured:
-        rates = found.setdefault((made.task.condition, cells[made.task.cell]), {})
-        if made.task.current_pa is not None and made.complete:
-            rates.setdefault(made.task.current_pa, []).append(made.firing.rate_hz)
-    return [
-        {
-            "condition": condition,
-            "cell": cell,
-            "current_pa": sorted(rates),
-            "rates_hz": [rates[i] for i in sorted(rates)],
-            "mean_hz": [float(np.mean(rates[i])) for i in sorted(rates)],
-        }
-        for (condition, cell), rates in found.items()
-    ]
-
-
 def _result(journal: JournalFile, measured: list[Measured], rows: list[Row]) -> Row:
     spikes = [[s.time_ms for s in made.firing.spikes] for made in measured]
     sweeps = [{**row, "spikes_ms": times} for row, times in zip(rows, spikes, strict=True)]
@@ -156,6 +134,7 @@ def _result(journal: JournalFile, measured: list[Measured], rows: list[Row]) -> 
         "interval_us": journal.interval_us,
         "sweeps": sweeps,
         "conditions": conditions_of(measured, journal.cells),
+        "ladders": ladders_of(measured, journal.cells),
     }
 
 
@@ -201,9 +180,8 @@ def _print(result: Row) -> None:
     """Two tables: the cell's, then the loop's, with what is to be known of them."""
     from rich.console import Console
 
-    console = Console(highlight=False, markup=False)
-    if not console.is_terminal:
-        console = Console(highlight=False, markup=False, width=max(NARROWEST, console.width))
+    width = max(NARROWEST, Console().width)
+    console = Console(highlight=False, markup=False, width=width)
     rows = result["sweeps"]
     console.print(result["title"])
     if not result["planned"]:

@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..errors import FileError, MissingExtraError
+from .report_rates import in_order
 
 if TYPE_CHECKING:
     from ..sweepmeasures import Floats, Measured, Stretch
@@ -43,7 +44,7 @@ class Drawing:
     """Gathers sweeps, thinned, and draws them: a figure for each condition, and the rates."""
 
     title: str
-    lines: dict[tuple[str, int], list[Line]] = field(default_factory=dict)
+    lines: dict[tuple[str, str, int], list[Line]] = field(default_factory=dict)
 
     def add(self, made: Measured, stretch: Stretch) -> None:
         """Take in one sweep."""
@@ -52,10 +53,17 @@ class Drawing:
         line = Line(
             task.current_pa, bool(made.firing.spikes), *(thinned(stretch.t_ms, y) for y in columns)
         )
-        self.lines.setdefault((task.condition, task.cell), []).append(line)
+        self.lines.setdefault((task.name, task.condition, task.cell), []).append(line)
 
-    def save(self, folder: Path, conditions: list[dict[str, Any]]) -> list[Path]:
+    def save(self, folder: Path, result: dict[str, Any]) -> list[Path]:
         """Draw everything into a folder; the files.
+
+        Parameters
+        ----------
+        folder : Path
+            Made when missing.
+        result : dict
+            The report's ``cells``, ``conditions`` and ``ladders``.
 
         Raises
         ------
@@ -68,18 +76,58 @@ class Drawing:
             folder.mkdir(parents=True, exist_ok=True)
         except OSError as fault:
             raise FileError(f"--figure {folder}: {fault.strerror or fault}") from None
+        cells = result["cells"]
         made = []
-        for k, ((condition, cell), lines) in enumerate(self.lines.items(), 1):
-            name = f"sweeps-{k}-{slug(condition)}.png"
-            title = (
-                condition
-                if len({c for _, c in self.lines}) == 1
-                else f"{condition}, cell {cell + 1}"
-            )
-            made.append(_save(draw_sweeps(lines, title, self.title), folder / name))
-        if any(len(c["current_pa"]) > 1 for c in conditions):
-            made.append(_save(draw_rates(conditions, self.title), folder / "rates.png"))
+        order = in_order(condition for _, condition, _ in self.lines)
+        ordered = sorted(self.lines.items(), key=lambda item: order.index(item[0][1]))
+        for k, ((name, condition, cell), lines) in enumerate(ordered, 1):
+            label = f"{name}, {condition}" + f", {cells[cell]}" * (len(cells) > 1)
+            figure = draw_sweeps(lines, label, self.title)
+            made.append(_save(figure, folder / f"sweeps-{k}-{slug(label)}.png"))
+        return made + self._save_rates(folder, result)
+
+    def _save_rates(self, folder: Path, result: dict[str, Any]) -> list[Path]:
+        """Rates against current, and against each key that was stepped through."""
+        several = len(result["cells"]) > 1
+        named = [
+            Series(c["condition"] + f", {c['cell']}" * several, c["current_pa"], *_rates(c))
+            for c in result["conditions"]
+            if c["current_pa"]
+        ]
+        made = []
+        if any(len(one.values) > 1 for one in named):
+            figure = draw_rates(named, "step current (pA)", "Rate against current", self.title)
+            made.append(_save(figure, folder / "rates.png"))
+        for key in dict.fromkeys(ladder["key"] for ladder in result["ladders"]):
+            mine = [one for one in result["ladders"] if one["key"] == key]
+            steps = [Series(one["at"], one["values"], *_rates(one)) for one in mine]
+            figure = draw_rates(steps, _axis_of(key), f"Rate against {key}", self.title)
+            made.append(_save(figure, folder / f"rates-{slug(key)}.png"))
         return made
+
+
+@dataclass(frozen=True)
+class Series:
+    """One line of a figure of rates: values, the rates at each, and their means."""
+
+    label: str
+    values: list[float]
+    rates_hz: list[list[float]]
+    mean_hz: list[float]
+
+
+def _rates(row: dict[str, Any]) -> tuple[list[list[float]], list[float]]:
+    return row["rates_hz"], row["mean_hz"]
+
+
+def _axis_of(key: str) -> str:
+    """What stands at the axis of a key: the conductance's name, the quantity, the unit."""
+    name, _, quantity = key.rpartition(".")
+    if quantity == "gmax_ns":
+        return f"gmax of {name} (nS)"
+    if quantity == "reversal_mv":
+        return f"reversal potential of {name} (mV)"
+    return "factor on every gmax of the model"
 
 
 def slug(text: str) -> str:
@@ -183,30 +231,28 @@ def _key(figure: Any, axes: Sequence[Any], shade: dict[float, str]) -> None:
     bar.outline.set_visible(False)
 
 
-def draw_rates(conditions: list[dict[str, Any]], title: str) -> Any:
-    """Rate against the step's current: each sweep a faint mark, the means joined by lines."""
+def draw_rates(series: list[Series], axis: str, heading: str, title: str) -> Any:
+    """Rates against what was stepped through: each sweep a faint mark, the means joined."""
     figure = _figure(7.5, 5.0)
     axes = figure.subplots()
-    shown = [c for c in conditions if c["current_pa"]]
-    several = len({c["cell"] for c in shown}) > 1
-    for k, one in enumerate(shown):
+    for k, one in enumerate(series):
         colour, marker = COLOURS[k % len(COLOURS)], MARKERS[k % len(MARKERS)]
         style = ("-", "--", ":")[k // len(COLOURS) % 3]
-        label = f"{one['condition']}, {one['cell']}" if several else one["condition"]
-        for current, rates in zip(one["current_pa"], one["rates_hz"], strict=True):
+        for value, rates in zip(one.values, one.rates_hz, strict=True):
             if len(rates) > 1:
-                axes.plot([current] * len(rates), rates, marker, color=colour, alpha=0.35,
+                axes.plot([value] * len(rates), rates, marker, color=colour, alpha=0.35,
                           markersize=4, markeredgewidth=0)  # fmt: skip
-        axes.plot(one["current_pa"], one["mean_hz"], style, marker=marker, color=colour,
-                  markersize=6, linewidth=1.6, label=label)  # fmt: skip
-    axes.set_xlabel("step current (pA)")
+        axes.plot(one.values, one.mean_hz, style, marker=marker, color=colour,
+                  markersize=6, linewidth=1.6, label=one.label)  # fmt: skip
+    axes.set_xlabel(axis)
     axes.set_ylabel("spikes during the step / its length (Hz)")
-    axes.set_ylim(bottom=min(0.0, axes.get_ylim()[0]))
+    low, high = axes.get_ylim()
+    axes.set_ylim(min(0.0, low), max(high, 1.0))
     axes.grid(alpha=0.25, linewidth=0.6)
     key = figure.legend(
-        loc="outside upper left", ncols=min(2, len(shown)), frameon=False, alignment="left"
+        loc="outside upper left", ncols=min(2, len(series)), frameon=False, alignment="left"
     )
-    key.set_title("Rate against current", {"size": 11})
+    key.set_title(heading, {"size": 11})
     _sign(figure, title)
     return figure
 
