@@ -18,6 +18,7 @@ from journals import Log, new_journal
 
 from gatestep.commands.report import report
 from gatestep.commands.report_figures import COLOURS, RAMP, shades, slug, thinned
+from gatestep.commands.report_rates import in_order
 from gatestep.errors import GatestepError
 from gatestep.journalfile import open_journal
 from gatestep.loop import Entry
@@ -294,8 +295,8 @@ def test_figures_are_drawn_for_each_condition_and_the_rates(tmp_path, capsys):
     report(make_journal(tmp_path), figure=folder, json_output=True)
     names = [Path(f).name for f in json.loads(capsys.readouterr().out)["figures"]]
     assert names == [
-        "sweeps-1-without-the-conductance.png",
-        "sweeps-2-with-the-conductance.png",
+        "sweeps-1-step-without-the-conductance.png",
+        "sweeps-2-step-with-the-conductance.png",
         "rates.png",
     ]
     assert sorted(p.name for p in folder.iterdir()) == sorted(names)
@@ -364,6 +365,56 @@ def test_the_ramp_darkens_with_the_current(eye):
     assert np.all(np.diff(lightness) < -1.0)
     assert shades(len(RAMP)) == list(RAMP)
     assert len(shades(1)) == 1
+
+
+def test_labels_that_differ_in_numbers_rise_with_them():
+    """A shuffled ladder's conditions come in order; others stay as they first came."""
+    labels = ["without", "K, K.gmax_ns = 1080", "K, K.gmax_ns = 540.5", "K2 × 10", "K2 × -1"]
+    assert in_order([*labels, "without", "K1 × 3"]) == [
+        "without", "K, K.gmax_ns = 540.5", "K, K.gmax_ns = 1080", "K2 × -1", "K2 × 10", "K1 × 3",
+    ]  # fmt: skip
+
+
+LADDER = """
+title = "a ladder of the tests"
+[plan]
+order = "shuffled"
+repeats = 2
+[[sweep]]
+name = "rung"
+duration_ms = 100.0
+parameters.K.gmax_ns = [5.0, 10.0, 20.0]
+[[sweep.stimulus]]
+kind = "step"
+stop_ms = 100.0
+current_pa = [40.0, 80.0]
+"""
+
+
+def test_a_ladder_has_its_rates_against_what_was_stepped_through(tmp_path, capsys):
+    """For each current a line over gmax; made to fire gmax / 5 spikes in 100 ms."""
+    plan = parse_plan(LADDER.encode(), tmp_path / "plan.toml")
+    journal, log = new_journal(tmp_path), Log(1)
+    for sweep in plan.expand(interval_us=20.0):
+        entries = quiet(log, sweep.ticks)
+        for k in range(round(sweep.parameters["K.gmax_ns"] / 5.0)):
+            entries["v_mv"][1000 * k + 500 : 1000 * k + 550] = 20.0
+        journal.note("sweep_start", sweep=sweep.index, **sweep.as_json())
+        feed(journal, log, entries)
+        journal.note("sweep_end", sweep=sweep.index, complete=True)
+    path = Path(journal.close()["path"])
+    report(path, figure=tmp_path / "f", json_output=True)
+    result = json.loads(capsys.readouterr().out)
+    assert [ladder["at"] for ladder in result["ladders"]] == ["40 pA", "80 pA"]
+    for ladder in result["ladders"]:
+        assert ladder["key"] == "K.gmax_ns"
+        assert ladder["values"] == [5.0, 10.0, 20.0]
+        assert ladder["rates_hz"] == [[10.0] * 2, [20.0] * 2, [40.0] * 2]
+        assert ladder["mean_hz"] == [10.0, 20.0, 40.0]
+    assert [c["condition"] for c in result["conditions"]] == [
+        f"K.gmax_ns = {g}" for g in (5, 10, 20)
+    ]
+    assert Path(result["figures"][-1]).name == "rates-k-gmax-ns.png"
 
 
 def test_labels_make_names_of_files():
