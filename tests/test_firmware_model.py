@@ -45,7 +45,7 @@ wide = st.floats(-1e6, 1e6, width=32)
 
 @pytest.mark.parametrize("interval_us", [5.0, 20.0, 1000.0])
 def test_a_row_is_the_steady_state_and_the_share_covered_in_a_tick(interval_us):
-    """A row holds inf and 1 - exp(-interval/tau) at the row's voltage, from the formulas' own curves."""
+    """A row holds inf and 1 - exp(-interval/tau), from the formulas' own curves."""
     made = tables("squid-axon", 257, interval_us)
     v_mv = LOW_MV + np.arange(257) * (SPAN_MV / 256)
     for gate, column in zip(curves_of(made.spec, v_mv), made.column, strict=True):
