@@ -178,16 +178,30 @@ class Replay:
             until = min(end, self.position + CHUNK)
             if self._next < len(self._events):
                 until = min(until, self._events[self._next].position)
-            yield self._stretch(until, -1 if cell is None else cell)
+            yield self._stretch(self._read(until), -1 if cell is None else cell)
 
-    def _stretch(self, stop: int, cell: int) -> Stretch:
-        samples = self.journal.samples[self.position : stop]
+    def _read(self, stop: int) -> np.ndarray:
+        """The samples up to ``stop``, or to where they are damaged."""
+        try:
+            return self.journal.samples[self.position : stop]
+        except JournalError:
+            whole, at = [], self.position
+            for piece in self.journal.samples.pieces(self.position, stop):
+                if piece.position != at:
+                    break
+                whole.append(piece.samples)
+                at += len(piece.samples)
+            if not whole:
+                raise
+            return np.concatenate(whole)
+
+    def _stretch(self, samples: np.ndarray, cell: int) -> Stretch:
         given = _Given(*(np.ascontiguousarray(samples[name]) for name in _Given._fields))
         shape = samples["v_mv"].shape
         width = self._conductances(cell) if cell >= 0 else 0
         found = _Found(np.empty(shape), np.empty(shape[0], np.int64), np.zeros((shape[0], width)))
         _run(self._m, given, found, cell)
-        first, self.position = self.position, stop
+        first, self.position = self.position, self.position + len(samples)
         return Stretch(first, samples, *found)
 
     def _conductances(self, cell: int) -> int:

@@ -191,8 +191,8 @@ class Verbs:
         """Play a plan: its text, and the whole path of its file, for what it names beside it."""
         _check_force("run", force)
         self.player.refuse_if_busy("run")
-        if self._busy:
-            raise ControlError("run: a load or swap is under way; wait for its answer")
+        if self._busy or self._parameters != self._ordered_parameters:
+            raise ControlError("run: a load, swap or set is under way; wait for its answer")
         if not isinstance(text, str) or not isinstance(path, str) or not Path(path).is_absolute():
             raise ControlError("run: give the plan's text, and the whole path of its file")
         if seed is not None and (type(seed) is not int or not 0 <= seed < 2**63):
@@ -204,7 +204,7 @@ class Verbs:
         except BaseException:
             self._busy.clear()
             raise
-        return Built(future, lambda built: self._play(built, in_force, force))
+        return Built(future, lambda built: self._play(built, force))
 
     def halt(self) -> Answer:
         """End the plan under way, at 0 pA."""
@@ -261,10 +261,10 @@ class Verbs:
     ) -> Waiting:
         """Change gmax or reversal of a conductance in force."""
         k = self._cell("set", cell)
-        if self._busy.get(k) == "swap":
+        if self._busy.get(k) in {"swap", "run"}:
             raise ControlError(
-                f"set: cell {self._names[k]} has a swap under way; wait for its answer, since "
-                "the order would meet the other model"
+                f"set: cell {self._names[k]} has a {self._busy[k]} under way; wait for its "
+                "answer, since the order would meet another model"
             )
         index, parameter = self._parameter(k, key)
         order, limit = _PARAMETERS[parameter]
@@ -385,12 +385,10 @@ class Verbs:
         for k in range(len(self._names)):
             self._claim(verb, k)
 
-    def _play(self, built: Future[Prepared], in_force: list[Ready], force: bool) -> Answer:
+    def _play(self, built: Future[Prepared], force: bool) -> Answer:
         """Begin a plan that is prepared, unless a sweep of it would ring."""
         self._busy.clear()
         plan, sweeps = built.result()
-        if in_force != [self._as_set(k) for k in range(len(self._names))]:
-            raise ControlError("run: a model or parameter was changed meanwhile; run it again")
         choices = {id(one.setting): one.setting.choice for one in sweeps}
         against = advice(list(choices.values()))
         if against and not force:
