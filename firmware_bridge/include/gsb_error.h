@@ -27,7 +27,8 @@ enum gsb_error {
     /* The other end breaks ZMTP. Output: 0 pA; the link is of no use until opened anew. */
     GSB_ERROR_PROTOCOL = -5,
     /* The other end is no ROUTER without CURVE, speaks another major version of the
-     * framing, or has another number of cells. Output: 0 pA; as above. */
+     * framing, or has another number of cells. Output: 0 pA; with ZMTP as above, on a serial
+     * line the handshake begins again. */
     GSB_ERROR_PEER = -6,
     /* The port's send or receive reports that the link is gone. Output: 0 pA, idle. */
     GSB_ERROR_LINK = -7,

@@ -183,6 +183,13 @@ static int act(struct gsb_device *device, int found)
         return GSB_OK;
     case GSB_MESSAGE:
         return heard(device);
+    case GSB_ERROR_PEER:
+        if (device->link.broken)
+            return lose(device, found);
+        /* A serial line stays open for a host of the right kind. */
+        gsb_rig_fault(&device->rig, now(device), found);
+        gsb_rig_greet(&device->rig, now(device));
+        return found;
     default:
         return device->link.broken ? lose(device, found) : fail(device, found);
     }
@@ -203,6 +210,9 @@ static int receive(struct gsb_device *device)
         for (at = 0; at < (size_t)got && !device->link.broken; at += used) {
             found = gsb_link_feed(&device->link, bytes + at, (size_t)got - at, &used);
             found = act(device, found);
+            outcome = found ? found : outcome;
+            /* At once: an answer flows from its arrival, and a fault waits for nothing. */
+            found = write_out(device);
             outcome = found ? found : outcome;
         }
         if (got < CHUNK)
@@ -227,8 +237,8 @@ int gsb_device_poll(struct gsb_device *device)
 
     if (timely == GSB_ERROR_GREETING)
         lose(device, timely);
-    came = receive(device);
     written = write_out(device);
+    came = receive(device);
     greet_again(device);
     sent = send_out(device);
     return sent ? sent : written ? written : came ? came : timely;

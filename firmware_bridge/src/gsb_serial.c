@@ -52,13 +52,10 @@ static int welcome(struct gsb_link *link)
     major = gsb_read_whole(&in);
     gsb_read_whole(&in);
     cells = gsb_read_whole(&in);
-    link->opened = 0;
     if (items < 3 || in.bad)
         return GSB_ERROR_MESSAGE;
-    if (major != GSB_FRAMING_MAJOR || cells != link->cells)
-        return GSB_ERROR_PEER;
-    link->opened = 1;
-    return GSB_OPENED;
+    link->opened = major == GSB_FRAMING_MAJOR && cells == link->cells;
+    return link->opened ? GSB_OPENED : GSB_ERROR_PEER;
 }
 
 static int frame(struct gsb_link *link)
