@@ -12,7 +12,7 @@ import typer
 import zmq.auth
 from conftest import Attended, RawRig, make_rig, running, wait_until
 
-from gatestep import cli
+from gatestep import cli, cliapp
 from gatestep.control import Control
 
 
@@ -38,10 +38,10 @@ class Done:
 def call(monkeypatch, capsys):
     """Run a command line in this process; clients wait briefly."""
     monkeypatch.setenv("COLUMNS", "200")
-    monkeypatch.setattr(Control.__init__, "__defaults__", (cli.CONTROL, 20.0, None, None))
+    monkeypatch.setattr(Control.__init__, "__defaults__", (cliapp.CONTROL, 20.0, None, None))
 
     def run(*arguments, timeout_s=20.0) -> Done:
-        Control.__init__.__defaults__ = (cli.CONTROL, timeout_s, None, None)
+        Control.__init__.__defaults__ = (cliapp.CONTROL, timeout_s, None, None)
         monkeypatch.setattr(sys, "argv", ["gatestep", *map(str, arguments)])
         capsys.readouterr()
         with pytest.raises(SystemExit) as ended:

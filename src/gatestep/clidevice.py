@@ -1,0 +1,32 @@
+"""The part of the command line that is about devices on a serial line."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+Device = Annotated[str, typer.Argument(metavar="DEVICE", help="Such as /dev/ttyACM0.")]
+Baud = Annotated[int, typer.Option("--baud", min=1, help="A USB device ignores it.")]
+Json = Annotated[bool, typer.Option("--json", help="Print JSON for programs.")]
+BAUD = 115_200
+
+
+def bridge(
+    device: Device,
+    baud: Baud = BAUD,
+    server: Annotated[
+        str | None,
+        typer.Option("--server", metavar="ENDPOINT", help="The server's loop endpoint."),
+    ] = None,
+    rig: Annotated[
+        Path | None,
+        typer.Option("--rig", metavar="RIG.toml", help="Its rig file: endpoint, cells, tick."),
+    ] = None,
+    json_output: Json = False,
+) -> int:
+    """Put a device on a serial line into the loop with a server, until stopped."""
+    from .commands.bridge import bridge as body
+
+    return body(device, baud, server, rig, json_output)
