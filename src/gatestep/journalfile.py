@@ -97,9 +97,9 @@ class JournalFile:
         self._disk = Disk(self.path)
         try:
             self.header = read_header(self._disk, self.path)
-            self._index = build_index(self._disk, self.header)
-            self._check_header()
             dtype = dtype_from_json(self.header["sample_dtype"])
+            self._check_header(dtype)
+            self._index = build_index(self._disk, dtype.itemsize)
         except JournalError:
             self._disk.close()
             raise
@@ -164,7 +164,10 @@ class JournalFile:
     def time_of(self, nsec: int) -> datetime.datetime:
         """Wall time of a monotonic time in the journal, by the clocks at its start."""
         since = int(nsec) - int(self.header["start"]["monotonic_nsec"])
-        return self.start + datetime.timedelta(microseconds=since / 1000)
+        try:
+            return self.start + datetime.timedelta(microseconds=since / 1000)
+        except OverflowError:
+            raise JournalError(f"{self.path}: {nsec} ns is no time of this journal") from None
 
     @cached_property
     def events(self) -> tuple[Event, ...]:
@@ -173,7 +176,7 @@ class JournalFile:
         for place, payload in self._whole(Kind.EVENTS):
             try:
                 found += [_event(data) for data in unpack_json(payload)]
-            except (JournalError, LookupError, TypeError, ValueError) as fault:
+            except (JournalError, LookupError, TypeError, ValueError, OverflowError) as fault:
                 reason = f"not events: {fault}"
                 note_damage(self._index, Damaged(place.offset, place.position, 0, reason))
         return tuple(found)
@@ -238,8 +241,7 @@ class JournalFile:
             if event.kind in {"in_force", "swap", "set"} and _was_done(event):
                 k = self._cell(event.fields.get("cell"))
                 if k is not None:
-                    change = self._set if event.kind == "set" else self._swapped
-                    state[k] = change(state[k], event.fields)
+                    state[k] = self._changed(state[k], event)
         return tuple(state)
 
     def _search(self, start: int, stop: int, seq: int) -> int | None:
@@ -280,6 +282,17 @@ class JournalFile:
             return self.cells.index(cell)
         return cell if isinstance(cell, int) and 0 <= cell < len(self.cells) else None
 
+    def _changed(self, was: InForce, event: Event) -> InForce:
+        """What an event makes of a cell's model."""
+        change = self._set if event.kind == "set" else self._swapped
+        try:
+            return change(was, event.fields)
+        except (LookupError, TypeError, ValueError) as fault:
+            raise JournalError(
+                f"{self.path}: the event {event.kind} before sample {event.position} "
+                f"cannot be read: {fault}"
+            ) from None
+
     def _swapped(self, was: InForce, fields: dict[str, Any]) -> InForce:
         number = fields.get("model")
         model = self.models.get(number) if isinstance(number, int) else None
@@ -300,16 +313,23 @@ class JournalFile:
             return InForce(was.cell, was.model, was.name, {**was.gmax_ns, **new}, was.reversal_mv)
         return InForce(was.cell, was.model, was.name, was.gmax_ns, {**was.reversal_mv, **new})
 
-    def _check_header(self) -> None:
+    def _check_header(self, dtype: np.dtype[Any]) -> None:
         """Refuse a header that says what no writer would."""
+        header = self.header
         try:
-            whole = self.start.tzinfo is not None and self.interval_us > 0
-            self.time_of(0)
-            whole = whole and all(isinstance(name, str) for name in self.cells)
+            whole = self.start.tzinfo is not None and 0 < self.interval_us < np.inf
+            int(header["start"]["monotonic_nsec"])
+            whole = whole and isinstance(header["rig"], dict) and isinstance(header["cells"], list)
+            whole = whole and all(isinstance(name, str) for name in header["cells"])
+            shapes = {dtype[name].shape for name in ("v_mv", "i_pa", "stimulus_pa")}
+            whole = whole and shapes == {(len(header["cells"]),)}
         except (LookupError, TypeError, ValueError, OverflowError) as fault:
             raise JournalError(f"{self.path}: its header cannot be read: {fault}") from None
         if not whole:
-            raise JournalError(f"{self.path}: its header cannot be read: start, tick or cells")
+            raise JournalError(
+                f"{self.path}: its header cannot be read: start, tick, rig, cells or sample_dtype "
+                "is not as the format has it"
+            )
 
 
 def open_journal(path: str | Path) -> JournalFile:
@@ -323,7 +343,9 @@ def open_journal(path: str | Path) -> JournalFile:
     return JournalFile(path)
 
 
-def _event(data: dict[str, Any]) -> Event:
+def _event(data: Any) -> Event:
+    if not isinstance(data, dict):
+        raise TypeError("an event that is no object")
     fields = {key: value for key, value in data.items() if key not in _EVENT_KEYS}
     seq = data["seq"]
     number = None if seq is None else int(seq)

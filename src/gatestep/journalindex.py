@@ -19,7 +19,6 @@ from .journalbytes import (
     Block,
     Hole,
     Kind,
-    dtype_from_json,
     find_close,
     read_payload,
     unpack_header,
@@ -175,9 +174,8 @@ def read_header(disk: Disk, path: Path) -> dict[str, Any]:
     return dict(header)
 
 
-def build_index(disk: Disk, header: dict[str, Any]) -> Index:
+def build_index(disk: Disk, itemsize: int) -> Index:
     """Find the blocks, by the closing block's index or by walking through them."""
-    itemsize = dtype_from_json(header["sample_dtype"]).itemsize
     index = _from_close(disk) or _from_walk(disk, itemsize)
     end = 0
     for place in index.of(Kind.SAMPLES):
