@@ -9,9 +9,31 @@ import typer
 from typer.core import TyperGroup
 
 ORDER = (
-    "demo serve check simrig status arm disarm reset stop load swap set mark run halt "
-    "journal replay report export models curves bench bridge firmware"
-).split()
+    "demo",
+    "serve",
+    "check",
+    "simrig",
+    "status",
+    "arm",
+    "disarm",
+    "reset",
+    "stop",
+    "load",
+    "swap",
+    "set",
+    "mark",
+    "run",
+    "halt",
+    "journal",
+    "replay",
+    "report",
+    "export",
+    "models",
+    "curves",
+    "bench",
+    "bridge",
+    "firmware",
+)
 """Commands as the help lists them: what is needed first stands first."""
 
 
