@@ -8,7 +8,7 @@ from typing import Annotated
 
 import typer
 
-from . import clirecord, clisteer  # noqa: F401 - their commands
+from . import clidevice, clirecord, clisteer  # noqa: F401 - their commands
 from .cliapp import CurveClient, Json, RigFile, app, bench_app
 
 
@@ -76,6 +76,7 @@ def simrig(
     wait: Annotated[
         float, typer.Option("--wait", metavar="S", help="Wait so long for the server.")
     ] = 3.0,
+    curve_server: CurveServer = None,
     curve_client: CurveClient = None,
     json_output: Json = False,
 ) -> int:
@@ -90,6 +91,7 @@ def simrig(
         pace=pace,
         seed=seed,
         curve_secret=curve_client,
+        curve_server=curve_server,
         wait_s=wait,
     )
     return 0
@@ -101,6 +103,24 @@ def check(rig: RigFile, json_output: Json = False) -> int:
     from .commands.check import check as body
 
     return body(rig, json_output)
+
+
+@app.command()
+def export(
+    journal: Annotated[Path, typer.Argument(metavar="JOURNAL", help="The journal's file.")],
+    out: Annotated[Path, typer.Argument(metavar="OUT.nwb", help="The file to write.")],
+    overwrite: Annotated[
+        bool, typer.Option("--overwrite", help="Put it in the place of a file that is there.")
+    ] = False,
+    replay: Annotated[
+        bool, typer.Option("--replay", help="Replay first, and write the verdict into the file.")
+    ] = False,
+    json_output: Json = False,
+) -> int:
+    """Write a journal as NWB, the field's open format, for other programs and archives."""
+    from .commands.export import export as body
+
+    return body(journal, out, overwrite, replay, json_output)
 
 
 @bench_app.command("step")

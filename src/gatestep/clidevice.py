@@ -1,4 +1,4 @@
-"""The part of the command line that is about devices on a serial line."""
+"""Commands for devices on a serial line."""
 
 from __future__ import annotations
 
@@ -7,12 +7,14 @@ from typing import Annotated
 
 import typer
 
+from .cliapp import Json, app
+
 Device = Annotated[str, typer.Argument(metavar="DEVICE", help="Such as /dev/ttyACM0.")]
 Baud = Annotated[int, typer.Option("--baud", min=1, help="A USB device ignores it.")]
-Json = Annotated[bool, typer.Option("--json", help="Print JSON for programs.")]
 BAUD = 115_200
 
 
+@app.command()
 def bridge(
     device: Device,
     baud: Baud = BAUD,
