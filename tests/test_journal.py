@@ -284,10 +284,12 @@ def test_a_disk_that_fills_ends_the_record_and_nothing_else(tmp_path, room):
         assert [e.fields["reason"] for e in word] == ["No space left on device"] * len(word)
 
 
-def test_the_last_word_is_left_where_there_is_room(tmp_path):
-    """After a failed sync the file still takes an event that says that it ends there."""
+@pytest.mark.parametrize("sync_s", [0, 0.001])
+def test_the_last_word_is_left_where_there_is_room(tmp_path, sync_s):
+    """After a failed sync, waited for or not, the file still takes an event that it ends there."""
     disks, said, log = [], [], Log(1)
-    journal = new_journal(tmp_path, 1, said, flush_ms=1, sync_s=0, out=made_by(disks, Failing))
+    disk = made_by(disks, Failing)
+    journal = new_journal(tmp_path, 1, said, flush_ms=1, sync_s=sync_s, out=disk)
     journal.take(log.block(log.samples(10)))
     assert journal.flush()
     disks[0].breaks = True
@@ -445,6 +447,29 @@ def test_no_file_is_ever_written_over(tmp_path):
     assert disks
     assert name.read_bytes() == content
     assert "File exists" in said[0]
+
+
+def test_a_disk_that_takes_long_to_sync_holds_nothing_up(tmp_path):
+    """While a sync is under way, what comes is written, and would outlive the process."""
+    disks: list = []
+
+    class Long(Out):
+        calls, free = 0, threading.Event()
+
+        def sync(self):
+            self.calls += 1
+            if self.calls > 1:  # the first is that of the header
+                self.free.wait(20)
+
+    journal, log = new_journal(tmp_path, 1, sync_s=0.001, out=made_by(disks, Long)), Log(1)
+    for k in range(5):
+        journal.take(log.block(log.samples(5)))
+        assert journal.flush()
+        with open_journal(journal.status()["path"]) as found:
+            assert len(found.samples) == 5 * (k + 1)
+    assert disks[0].calls == 2
+    Long.free.set()
+    finished(journal).close()
 
 
 def test_how_often_the_disk_is_made_to_take_it(tmp_path):

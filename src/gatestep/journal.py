@@ -15,6 +15,7 @@ import threading
 import time
 from collections import deque
 from collections.abc import Callable, Mapping
+from concurrent.futures import Future, ThreadPoolExecutor
 from pathlib import Path
 from typing import Any, NamedTuple
 
@@ -115,6 +116,8 @@ class Journal:
         self._wake, self._closing = threading.Event(), threading.Event()
         self._thread: threading.Thread | None = None
         self._synced, self._synced_size = 0.0, 0
+        self._syncer = ThreadPoolExecutor(1, thread_name_prefix="journal sync")
+        self._syncing: Future[None] | None = None
         if spec.on:
             self._begin(folder, dict(header), cells, name, out)
 
@@ -263,6 +266,7 @@ class Journal:
         except Exception as fault:  # whatever it is, the loop goes on
             self._give_up(_reason_of(fault))
         finally:
+            self._syncer.shutdown()
             with contextlib.suppress(OSError):
                 self._out.close()
 
@@ -344,11 +348,24 @@ class Journal:
             self._size += len(block)
 
     def _sync(self) -> None:
-        """[writer] Have the disk take it all, where that is due."""
+        """[writer] Have the disk take it all, where that is due.
+
+        A disk may need seconds for that. Unless it is to be waited for, it is asked on a
+        thread of its own: what comes meanwhile is written all the same, and a killed process
+        then loses no more of it.
+        """
+        if self._syncing is not None and self._syncing.done():
+            self._syncing.result()
+            self._syncing = None
         now = time.monotonic()
-        if self._size > self._synced_size and now - self._synced >= self._spec.sync_s:
+        due = self._size > self._synced_size and now - self._synced >= self._spec.sync_s
+        if not due or self._syncing is not None:
+            return
+        self._synced, self._synced_size = now, self._size
+        if self._spec.sync_s == 0:
             self._out.sync()
-            self._synced, self._synced_size = now, self._size
+        else:
+            self._syncing = self._syncer.submit(self._out.sync)
 
     def _end(self) -> None:
         """[writer] The last block of an orderly end."""
@@ -366,6 +383,8 @@ class Journal:
             "index": {name: list(values) for name, values in self._index.items()},
         }
         self._append(Kind.CLOSE, pack_json(close))
+        if self._syncing is not None:
+            self._syncing.result()  # a fault is told to the first who asks, and to no one after
         self._out.sync()
         with self._lock:
             # A close that gave up on the disk has already said that it failed.
