@@ -48,3 +48,21 @@ def report(
     from .commands.report import report as body
 
     return body(journal, figure, table, json_output)
+
+
+@app.command()
+def export(
+    journal: Annotated[Path, typer.Argument(metavar="JOURNAL", help="The journal's file.")],
+    out: Annotated[Path, typer.Argument(metavar="OUT.nwb", help="The file to write.")],
+    overwrite: Annotated[
+        bool, typer.Option("--overwrite", help="Put it in the place of a file that is there.")
+    ] = False,
+    replay: Annotated[
+        bool, typer.Option("--replay", help="Replay first, and write the verdict into the file.")
+    ] = False,
+    json_output: Json = False,
+) -> int:
+    """Write a journal as NWB, the field's open format, for other programs and archives."""
+    from .commands.export import export as body
+
+    return body(journal, out, overwrite, replay, json_output)
