@@ -19,7 +19,7 @@ from journals import Log, new_journal
 from gatestep.commands.report import report
 from gatestep.commands.report_figures import COLOURS, RAMP, shades, slug, thinned
 from gatestep.commands.report_rates import in_order
-from gatestep.errors import GatestepError
+from gatestep.errors import FileError, GatestepError, MissingExtraError
 from gatestep.journalfile import open_journal
 from gatestep.loop import Entry
 from gatestep.orders import Order
@@ -302,6 +302,25 @@ def test_figures_are_drawn_for_each_condition_and_the_rates(tmp_path, capsys):
     assert sorted(p.name for p in folder.iterdir()) == sorted(names)
     for name in names:
         assert imread(folder / name)[..., :3].std() > 0.05
+
+
+def test_without_matplotlib_the_extra_is_named(tmp_path, monkeypatch):
+    """Figures are an extra; all else goes without it."""
+    monkeypatch.setitem(sys.modules, "matplotlib.figure", None)
+    path = armed_journal(tmp_path)
+    assert report(path) == 0
+    with pytest.raises(MissingExtraError, match=r"gatestep\[figure\]"):
+        report(path, figure=tmp_path / "f")
+
+
+@pytest.mark.parametrize("option", ["figure", "table"])
+def test_a_place_that_cannot_be_written_is_told(tmp_path, option):
+    """A file where a folder should be: one clear error that names the path."""
+    path = armed_journal(tmp_path)
+    (tmp_path / "file").write_text("mine")
+    with pytest.raises(FileError, match="file"):
+        report(path, **{option: tmp_path / "file" / "under"})
+    assert (tmp_path / "file").read_text() == "mine"
 
 
 def test_figures_without_a_plan_need_no_currents(tmp_path, capsys):

@@ -137,7 +137,11 @@ def spike_times(
     hysteresis_mv: float = HYSTERESIS_MV,
 ) -> Floats:
     """Times in ms at which spikes rise through the threshold; see :class:`Spike`."""
-    k = rises(v_mv, threshold_mv, hysteresis_mv)
+    return _times(t_ms, v_mv, rises(v_mv, threshold_mv, hysteresis_mv), threshold_mv)
+
+
+def _times(t_ms: Floats, v_mv: Floats, k: npt.NDArray[np.int64], threshold_mv: float) -> Floats:
+    """When the voltage passes the threshold on its way to each of some samples."""
     part = (threshold_mv - v_mv[k - 1]) / (v_mv[k] - v_mv[k - 1])
     return np.asarray(t_ms[k - 1] + part * (t_ms[k] - t_ms[k - 1]), dtype=np.float64)
 
@@ -172,31 +176,36 @@ def firing(
     """
     start_ms, stop_ms = window_ms
     rest_mv = rest_before(t_ms, v_mv, start_ms)
-    at = rises(v_mv, threshold_mv, hysteresis_mv)
-    times = spike_times(t_ms, v_mv, threshold_mv, hysteresis_mv)
-    inside = np.flatnonzero((times >= start_ms) & (times < stop_ms))
-    low = np.flatnonzero(v_mv < threshold_mv - hysteresis_mv)
     base_mv = float(np.median(v_mv)) if rest_mv is None and v_mv.size else rest_mv
+    at = rises(v_mv, threshold_mv, hysteresis_mv)
+    low = np.flatnonzero(v_mv < threshold_mv - hysteresis_mv)
     end = int(np.searchsorted(t_ms, stop_ms))
     spikes = []
-    for j in inside:
-        begin = int(at[j - 1]) if j else 0
-        after = int(at[j + 1]) if j + 1 < at.size else v_mv.size
-        spikes.append(
-            _spike(t_ms, v_mv, low, base_mv, float(times[j]), begin, int(at[j]), after, end)
-        )
-    count = len(spikes)
-    first = spikes[0] if spikes else None
+    for j, time_ms in enumerate(_times(t_ms, v_mv, at, threshold_mv).tolist()):
+        if start_ms <= time_ms < stop_ms:
+            begin = int(at[j - 1]) if j else 0
+            after = int(at[j + 1]) if j + 1 < at.size else v_mv.size
+            rise = int(at[j])
+            spikes.append(_spike(t_ms, v_mv, low, base_mv, time_ms, begin, rise, after, end))
+    return _summed(rest_mv, tuple(spikes), int(at.size) - len(spikes), window_ms)
+
+
+def _summed(
+    rest_mv: float | None, spikes: tuple[Spike, ...], outside: int, window_ms: tuple[float, float]
+) -> Firing:
+    """Rates, latency and afterhyperpolarisation of the spikes in a window."""
+    start_ms, stop_ms = window_ms
+    length_ms, count = stop_ms - start_ms, len(spikes)
     spread_ms = spikes[-1].time_ms - spikes[0].time_ms if count > 1 else 0.0
-    depth = first.trough_mv if first else None
+    trough_mv = spikes[0].trough_mv if spikes else None
     return Firing(
-        rest_mv,
-        tuple(spikes),
-        at.size - count,
-        1000.0 * count / (stop_ms - start_ms) if stop_ms > start_ms else 0.0,
-        1000.0 * (count - 1) / spread_ms if spread_ms > 0.0 else None,
-        first.time_ms - start_ms if first else None,
-        None if depth is None or rest_mv is None else depth - rest_mv,
+        rest_mv=rest_mv,
+        spikes=spikes,
+        outside=outside,
+        rate_hz=1000.0 * count / length_ms if length_ms > 0.0 else 0.0,
+        steady_hz=1000.0 * (count - 1) / spread_ms if spread_ms > 0.0 else None,
+        latency_ms=spikes[0].time_ms - start_ms if spikes else None,
+        ahp_mv=None if trough_mv is None or rest_mv is None else trough_mv - rest_mv,
     )
 
 

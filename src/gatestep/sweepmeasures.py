@@ -287,15 +287,9 @@ class Measurer:
     def measure(self, task: Task) -> tuple[Measured, Stretch]:
         """Measure one task; its samples are given back too, for figures."""
         stretch = read_stretch(self._journal, task.start, task.stop, task.cell)
-        tick_ms = stretch.interval_us / US_PER_MS
-        end_ms = float(stretch.t_ms[-1]) + tick_ms if stretch.size else 0.0
+        end_ms = float(stretch.t_ms[-1]) + stretch.interval_us / US_PER_MS if stretch.size else 0.0
         window = task.window_ms or (0.0, end_ms)
-        finite = np.isfinite(stretch.v_mv)
-        t_ms, v_mv = stretch.t_ms[finite], stretch.v_mv[finite]
-        fired = firing(t_ms, v_mv, window, task.threshold_mv)
-        answer = None
-        if task.current_pa and not fired.spikes and not fired.outside:
-            answer = response(t_ms, v_mv, stretch.i_pa[finite], window, task.current_pa)
+        fired, answer = _of_the_cell(task, stretch, window)
         lags = stretch.rows["lag_us"][stretch.rows["lag_us"] != NIL]
         idle = stretch.size - stretch.flagged(LIVE)
         lacking = idle or stretch.damaged or stretch.restarted or not stretch.size
@@ -335,6 +329,18 @@ class Measurer:
         return {
             name: stretch.charge_pc(i_pa[stretch.at - task.start]) for name, i_pa in found.items()
         }
+
+
+def _of_the_cell(
+    task: Task, stretch: Stretch, window_ms: tuple[float, float]
+) -> tuple[Firing, Response | None]:
+    """Spikes, and without any the answer to a step."""
+    finite = np.isfinite(stretch.v_mv)
+    t_ms, v_mv, i_pa = stretch.t_ms[finite], stretch.v_mv[finite], stretch.i_pa[finite]
+    fired = firing(t_ms, v_mv, window_ms, task.threshold_mv)
+    if not task.current_pa or fired.spikes or fired.outside:
+        return fired, None
+    return fired, response(t_ms, v_mv, i_pa, window_ms, task.current_pa)
 
 
 def _swapped(journal: JournalFile, task: Task) -> bool:

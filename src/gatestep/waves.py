@@ -47,31 +47,41 @@ def read_wave(path: Path, column: int = 1) -> Wave:
     """
     content = _content(path)
     values: list[float] = []
-    headings = 0
+    heading = False
     for number, line in enumerate(content.decode("utf-8", "replace").splitlines(), 1):
         text = line.strip()
         if not text or text.startswith("#"):
             continue
         cells = _BETWEEN.split(text)
-        try:
-            value = float(cells[column - 1])
-        except IndexError:
-            raise FileError(f"{path}: line {number} has no column {column}") from None
-        except ValueError:
-            if values or headings:
-                found = cells[column - 1].strip()[:40]
-                raise FileError(f"{path}: line {number}: {found!r} is not a number") from None
-            headings = 1
+        if len(cells) < column:
+            raise FileError(f"{path}: line {number} has no column {column}")
+        value = _number(cells[column - 1])
+        if value is None and not (values or heading):
+            heading = True
             continue
-        if not (isfinite(value) and abs(value) <= MAX_CURRENT_PA):
-            raise FileError(
-                f"{path}: line {number}: {value:g} is not a current in pA within "
-                f"-{MAX_CURRENT_PA:g} to {MAX_CURRENT_PA:g}"
-            )
-        values.append(value)
+        values.append(_current(value, f"{path}: line {number}", cells[column - 1].strip()))
     if not values:
         raise FileError(f"{path}: holds no numbers; give one current in pA a line")
     return Wave(np.array(values), hashlib.sha256(content).hexdigest())
+
+
+def _number(text: str) -> float | None:
+    try:
+        return float(text)
+    except ValueError:
+        return None
+
+
+def _current(value: float | None, where: str, found: str) -> float:
+    """The value, if it is a current that may be."""
+    if value is None:
+        raise FileError(f"{where}: {found[:40]!r} is not a number")
+    if not (isfinite(value) and abs(value) <= MAX_CURRENT_PA):
+        raise FileError(
+            f"{where}: {value:g} is not a current in pA within "
+            f"-{MAX_CURRENT_PA:g} to {MAX_CURRENT_PA:g}"
+        )
+    return value
 
 
 def _content(path: Path) -> bytes:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import csv
 import json
 from collections.abc import Sequence
+from contextlib import suppress
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -148,7 +149,8 @@ def _write_csv(path: Path, rows: list[Row]) -> None:
             writer.writerows(rows)
         part.replace(path)
     except OSError as fault:
-        part.unlink(missing_ok=True)
+        with suppress(OSError):
+            part.unlink(missing_ok=True)
         raise FileError(f"--csv {path}: cannot be written ({fault.strerror or fault})") from None
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Sequence
+from contextlib import suppress
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -297,6 +298,7 @@ def _save(figure: Any, path: Path) -> Path:
         figure.savefig(part, format="png", dpi=150)
         part.replace(path)
     except OSError as fault:
-        part.unlink(missing_ok=True)
+        with suppress(OSError):
+            part.unlink(missing_ok=True)
         raise FileError(f"{path}: cannot be written ({fault.strerror or fault})") from None
     return path
