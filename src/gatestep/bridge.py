@@ -103,8 +103,8 @@ BRIDGE = np.dtype(
         ("outgoing", "u1", (_OUTGOING,)),
         ("sample", "u1", (MAX_MESSAGE,)),
         ("answer", "u1", (MAX_MESSAGE,)),
-        ("to_server", "i8", (BINS,)),
-        ("to_device", "i8", (BINS,)),
+        ("sample_counts", "i8", (BINS,)),  # histograms of the latency added
+        ("answer_counts", "i8", (BINS,)),
     ],
     align=True,
 )
@@ -227,7 +227,7 @@ def _sent(m: Any) -> None:
     """[hot] The socket has taken all: note how long it took; the sample that waits is next."""
     bridge, peer = m.bridge[0], m.peer[0]
     if bridge.batch:
-        note(bridge.to_server, now_nsec(bridge) - bridge.batch_nsec, bridge.batch)
+        note(bridge.sample_counts, now_nsec(bridge) - bridge.batch_nsec, bridge.batch)
         bridge.samples += bridge.batch
         bridge.since_welcome += bridge.batch
     bridge.batch = peer.waiting = 0
@@ -347,7 +347,7 @@ def _write_line(m: Any) -> int:
     if bridge.line_start == bridge.line_end:
         bridge.line_start = bridge.line_end = 0
         if bridge.due_nsec:
-            note(bridge.to_device, now_nsec(bridge) - bridge.due_nsec, np.int64(1))
+            note(bridge.answer_counts, now_nsec(bridge) - bridge.due_nsec, np.int64(1))
             bridge.due_nsec = 0
     return _GO_ON
 

@@ -144,8 +144,8 @@ class Bridge:
             **{name: int(bridge[name]) for name in _COUNTERS},
             "damaged": int(self._memory.unframer[0].damaged),
             "added_nsec": {
-                "to_server": percentiles(np.array(bridge.to_server)),
-                "to_device": percentiles(np.array(bridge.to_device)),
+                "to_server": percentiles(np.array(bridge.sample_counts)),
+                "to_device": percentiles(np.array(bridge.answer_counts)),
             },
         }
 
