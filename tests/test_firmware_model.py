@@ -7,7 +7,11 @@ machine's compiler, as C99 and as C++ with warnings as errors.
 from __future__ import annotations
 
 import itertools
+import json
+import re
 import shutil
+import subprocess
+import sys
 
 import numpy as np
 import pytest
@@ -272,3 +276,66 @@ def test_another_tick_or_grid_is_another_model():
         text = (folder("leak", rows, interval_us) / "model.h").read_text("utf-8")
         shas.add(text.split('GSM_MODEL_SHA256 "')[1][:64])
     assert len(shas) == 3
+
+
+# ---- the command ----
+
+
+def asked(*arguments: object) -> tuple[int, str, str]:
+    """Status, stdout and stderr of ``gatestep firmware``."""
+    command = [sys.executable, "-m", "gatestep", "firmware", *map(str, arguments)]
+    done = subprocess.run(command, capture_output=True, text=True, check=False)
+    return done.returncode, done.stdout, done.stderr
+
+
+def test_it_prints_what_each_number_of_rows_misses(tmp_path):
+    """A table of all choices, the chosen one marked; the folder compiles as its README says."""
+    status, said, _ = asked("k-squid", "--out", tmp_path / "k", "--rows", 513)
+    assert status == 0
+    assert [int(line.split()[0]) for line in re.findall(r"^ +\d+ .*$", said, re.MULTILINE)] == [
+        *ROWS
+    ]
+    assert re.search(r"^ +513 .*<$", said, re.MULTILINE)
+    readme = (tmp_path / "k" / "README.md").read_text("utf-8")
+    build = re.search(r"^    cc (-std=c99 .*)$", readme, re.MULTILINE)[1]
+    run(["sh", "-c", f"cd {tmp_path / 'k'} && {' '.join(compiler())} {build}"])
+    assert "| 1 | `K.reversal_mv` |" in readme
+
+
+def test_json_has_the_same_facts(tmp_path):
+    """What a program reads is what the library computes."""
+    status, said, _ = asked("k-squid", "--out", tmp_path / "k", "--json", "--interval-us", 20)
+    told = json.loads(said)
+    made = tables("k-squid")
+    assert status == 0
+    assert (told["rows"], told["interval_us"]) == (2049, 20.0)
+    assert told["table_bytes"] == made.table_bytes == 2049 * 2 * 4
+    assert told["parameters"] == ["K.gmax_ns", "K.reversal_mv", "trace.every_ticks"]
+    assert [choice["rows"] for choice in told["choices"]] == [*ROWS]
+    assert all((tmp_path / "k" / name).is_file() for name in told["files"])
+    # A folder that the command made may be made anew.
+    assert asked("k-squid", "--out", tmp_path / "k", "--rows", 257)[0] == 0
+
+
+@pytest.mark.parametrize(
+    ("arguments", "said"),
+    [
+        (("nosuch", "--out", "new"), "no model is named 'nosuch'"),
+        (("leak", "--out", "new", "--rows", "1000"), "1000 rows: the table can have 257"),
+        (("leak", "--out", "new", "--interval-us", "nan"), "a tick of nan µs"),
+        (("leak", "--out", "full"), "holds other files; give a new folder"),
+        (("leak", "--out", "full/file"), "not a folder; give a new one"),
+        (("leak", "--out", "full/file/new"), "cannot be written"),
+    ],
+)
+def test_what_cannot_be_is_said_in_one_line(tmp_path, monkeypatch, arguments, said):
+    """No traceback, status 1, and nothing is written."""
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "full").mkdir()
+    (tmp_path / "full" / "file").write_text("mine")
+    status, out, err = asked(*arguments)
+    assert (status, out) == (1, "")
+    assert said in err
+    assert err.count("\n") == 1
+    assert not (tmp_path / "new").exists()
+    assert [p.name for p in (tmp_path / "full").iterdir()] == ["file"]
