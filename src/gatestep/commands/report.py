@@ -15,6 +15,7 @@ from .report_rates import Row, conditions_of, ladders_of
 if TYPE_CHECKING:
     from ..journalfile import JournalFile
     from ..sweepmeasures import Measured
+    from .report_figures import Drawing
 
 NARROWEST = 130
 """Columns that the tables need; a narrower terminal wraps their lines."""
@@ -42,26 +43,9 @@ def report(
         If there is nothing to measure, or a file cannot be read or written.
     """
     from ..journalfile import open_journal
-    from ..sweepmeasures import Measurer, tasks_of
 
     with open_journal(path) as journal:
-        tasks = tasks_of(journal)
-        if not tasks:
-            raise GatestepError(f"{path}: no sweep and no armed stretch in it, nothing to measure")
-        drawing = None
-        if figure is not None:
-            from .report_figures import Drawing
-
-            drawing = Drawing(title_of(journal))
-        measured = []
-        measurer = Measurer(journal)
-        for task in tasks:
-            made, stretch = measurer.measure(task)
-            measured.append(made)
-            if drawing is not None:
-                drawing.add(made, stretch)
-        rows = [row_of(made, journal.cells) for made in measured]
-        result = _result(journal, measured, rows)
+        result, rows, drawing = _measured(journal, drawn=figure is not None)
     if table is not None:
         _write_csv(table, rows)
         result["csv"] = str(table)
@@ -72,6 +56,28 @@ def report(
     else:
         _print(result)
     return 0
+
+
+def _measured(journal: JournalFile, drawn: bool) -> tuple[Row, list[Row], Drawing | None]:
+    """The result, its rows, and where they are wanted the sweeps for the figures."""
+    from ..sweepmeasures import Measurer, tasks_of
+    from .report_figures import Drawing
+
+    tasks = tasks_of(journal)
+    if not tasks:
+        raise GatestepError(
+            f"{journal.path}: no sweep and no armed stretch in it, nothing to measure"
+        )
+    drawing = Drawing(title_of(journal)) if drawn else None
+    measurer = Measurer(journal)
+    measured = []
+    for task in tasks:
+        made, stretch = measurer.measure(task)
+        measured.append(made)
+        if drawing is not None:
+            drawing.add(made, stretch)
+    rows = [row_of(made, journal.cells) for made in measured]
+    return _result(journal, measured, rows), rows, drawing
 
 
 def title_of(journal: JournalFile) -> str:
