@@ -392,19 +392,26 @@ class Journal:
 
     def _give_up(self, reason: str) -> None:
         """[writer] The record ends here; the file is left whole, saying so where it can."""
-        lost = self._entries.position - self._written
+        lost, blocks = self._entries.position - self._written, 0
         with self._lock:
+            untold = self._missing.samples
             for item, _ in self._queue:
                 if isinstance(item, bytes):
                     lost += only_events(item)[1]
-                    self._dropped_blocks += 1
+                    blocks += 1
+                elif isinstance(item, _Dropped):
+                    untold += item.samples  # counted already, but the file does not say so
             waiting = list(self._queue)
             self._queue.clear()
             self._queued = 0
             self._dropped_samples += lost
-            fields = {"samples": lost, "blocks": self._dropped_blocks, "reason": reason}
+            self._dropped_blocks += blocks
+            # Under the same lock: nothing may be queued any more that no one will count.
+            news = self._set_failed(reason)
+        fields = {"samples": lost + untold, "blocks": blocks, "reason": reason}
         self._entries.give()
-        self._declare_failed(reason)
+        if news:
+            self._say_failed()
         self._leave_word(fields)
         _tell(waiting)
 
@@ -421,15 +428,24 @@ class Journal:
                 except OSError:
                     self._out.cut(self._size)
 
+    def _set_failed(self, reason: str) -> bool:
+        """The record has ended; whether that is news. The lock is held."""
+        if self._state == "failed":
+            return False
+        self._state, self._reason = "failed", reason
+        return True
+
     def _declare_failed(self, reason: str) -> None:
-        """Say once that the record has ended."""
+        """The record has ended, which is said once."""
         with self._lock:
-            if self._state == "failed":
-                return
-            self._state, self._reason = "failed", reason
+            news = self._set_failed(reason)
+        if news:
+            self._say_failed()
+
+    def _say_failed(self) -> None:
         self._say(
-            f"RECORD FAILED: {self._path}: {reason}. Nothing more is recorded; the loop goes on. "
-            "Mend the disk or [record] folder and start the server again for a new record"
+            f"RECORD FAILED: {self._path}: {self._reason}. Nothing more is recorded; the loop goes "
+            "on. Mend the disk or [record] folder and start the server again for a new record"
         )
 
 
