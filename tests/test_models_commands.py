@@ -144,6 +144,13 @@ def test_a_figure_that_cannot_be_drawn_is_told(tmp_path):
     assert list(tmp_path.iterdir()) == []
 
 
+def test_a_figure_below_a_file_is_told(tmp_path):
+    """A file where a folder should be is a clear error, also when nothing is left to remove."""
+    (tmp_path / "file").write_text("mine")
+    with pytest.raises(FileError, match="cannot be written"):
+        show_curves("k-squid", None, tmp_path / "file" / "x.png", False)
+
+
 def test_without_matplotlib_the_extra_is_named(tmp_path, monkeypatch):
     """A missing optional package is an error that says what to install."""
     monkeypatch.setitem(sys.modules, "matplotlib.figure", None)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+from contextlib import suppress
 from dataclasses import dataclass, field, fields
 from pathlib import Path
 from typing import Any, Self
@@ -108,7 +109,8 @@ class Trace:
                 np.savez_compressed(out, about=SIMULATED, **arrays)
             temporary.replace(path)
         except OSError as error:
-            temporary.unlink(missing_ok=True)
+            with suppress(OSError):
+                temporary.unlink(missing_ok=True)
             raise FileError(
                 f"{path}: cannot be written ({error.strerror or error}); choose another --out"
             ) from error

@@ -8,7 +8,7 @@ import sys
 import time
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import Executor
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import asdict
 from pathlib import Path
 from typing import Any
@@ -205,5 +205,6 @@ def _write(path: Path, content: bytes) -> None:
         temporary.write_bytes(content)
         temporary.replace(path)
     except OSError as fault:
-        temporary.unlink(missing_ok=True)
+        with suppress(OSError):
+            temporary.unlink(missing_ok=True)
         raise FileError(f"--save {path}: cannot be written ({fault.strerror})") from fault

@@ -7,7 +7,7 @@ import os
 import signal
 import sys
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager, nullcontext
+from contextlib import contextmanager, nullcontext, suppress
 from pathlib import Path
 from types import FrameType
 from typing import TYPE_CHECKING, Any
@@ -202,7 +202,8 @@ def _write(path: Path, content: bytes) -> None:
         temporary.write_bytes(content)
         temporary.replace(path)
     except OSError as fault:
-        temporary.unlink(missing_ok=True)
+        with suppress(OSError):
+            temporary.unlink(missing_ok=True)
         raise FileError(f"--save {path}: cannot be written ({fault.strerror})") from fault
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import os
 import textwrap
+from contextlib import suppress
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -199,7 +200,8 @@ def draw(loaded: LoadedModel, path: Path, span_mv: tuple[float, float]) -> None:
     except OSError as error:
         raise FileError(f"{path}: cannot be written: {error.strerror or error}") from None
     finally:
-        part.unlink(missing_ok=True)
+        with suppress(OSError):
+            part.unlink(missing_ok=True)
 
 
 def _figure(loaded: LoadedModel, span_mv: tuple[float, float]) -> Any:
