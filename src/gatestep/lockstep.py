@@ -27,15 +27,15 @@ from .simcell import DROP_STREAM, SUBSTEP_US, carry, make_cells, uniform
 from .simloop import (
     Columns,
     SimLoop,
-    _let_flow,
-    _put_in_force,
-    _take_sample,
     enqueue,
+    let_flow,
     make_columns,
     make_loop,
+    measure,
     note,
+    put_in_force,
 )
-from .simpace import _virtual_arrival
+from .simpace import virtual_arrival
 from .simtrace import Floats, Trace, crossings
 from .specs import CellLimits, SimCellSpec
 from .stability import Settings
@@ -314,14 +314,14 @@ def _run(
     while rig.seq < ticks:
         if rig.seq >= armed_from:
             loop.state = _ARMED
-        _take_sample(rig_side, columns, rig.seq)
+        measure(rig_side, columns, rig.seq)
         take_sample(loop, server.cells, server.banks, server.table, server.past, sample, answer)
         settle_answer(loop, answer, server.past, 0)
         note(rig_side, columns, 0, 0)
         if rig.drop > 0.0 and uniform(rig.seed, DROP_STREAM, rig.seq) <= rig.drop:
             rig.dropped += 1
         else:
-            tick, offset_us, lag_us = _virtual_arrival(rig_side)
+            tick, offset_us, lag_us = virtual_arrival(rig_side)
             enqueue(rig_side, tick, offset_us, lag_us)
         _live(rig_side, columns, fine_mv, parts)
         rig.seq += 1
@@ -345,10 +345,10 @@ def _live(rig_side: Any, columns: Any, fine_mv: Any, parts: int) -> None:
             if switch_us > end_us:
                 break
             if switch_us > at_us:
-                _let_flow(rig_side, columns, row, switch_us - at_us)
+                let_flow(rig_side, columns, row, switch_us - at_us)
                 at_us = switch_us
-            _put_in_force(rig_side)
+            put_in_force(rig_side)
         if at_us < end_us:
-            _let_flow(rig_side, columns, row, end_us - at_us)
+            let_flow(rig_side, columns, row, end_us - at_us)
             at_us = end_us
     rig.played += 1

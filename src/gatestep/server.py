@@ -15,7 +15,7 @@ import threading
 import time
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -328,11 +328,16 @@ class Server:
         return self._verbs.handle(request)
 
     def _confirm(self, event: LoopEvent) -> None:
-        """Answer the caller whose order the loop has carried out."""
-        for waiting, caller in self._waiting:
-            if isinstance(waiting, Confirmed) and waiting.number == event.number:
-                self._finish(waiting, caller, event)
-                return
+        """Answer the caller whose order the loop has carried out.
+
+        The loop carries orders out in turn. One from before this has been carried out as
+        well, even where its entry was lost because the log had overflowed.
+        """
+        for waiting, caller in list(self._waiting):
+            if isinstance(waiting, Confirmed) and waiting.number <= event.number:
+                mine = waiting.number == event.number
+                known = event if mine else replace(event, outcome=0, seq=None)
+                self._finish(waiting, caller, known)
 
     def _answer_built(self) -> None:
         """Answer callers whose tables are built, and those who have waited too long."""

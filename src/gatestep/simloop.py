@@ -165,7 +165,7 @@ def make_loop(cells: SimCells, queue: int) -> SimLoop:
 
 
 @inner
-def _take_sample(loop: Any, columns: Any, row: int) -> None:
+def measure(loop: Any, columns: Any, row: int) -> None:
     """[hot] Read every cell's voltage and make the sample message's contents."""
     rig, sample = loop.rig[0], loop.sample[0]
     r = np.uint64(row)
@@ -195,7 +195,7 @@ def send_sample(loop: Any) -> bool:
 def take_and_send(loop: Any, columns: Any, row: int) -> bool:
     """[hot] Take the sample that is due and send it; False when it could not be sent."""
     rig = loop.rig[0]
-    _take_sample(loop, columns, row)
+    measure(loop, columns, row)
     sent = send_sample(loop)
     loop.sent_nsec[np.uint64(rig.seq % _SENT)] = rig.sent_nsec
     if sent:
@@ -260,7 +260,7 @@ def enqueue(loop: Any, tick: Any, offset_us: float, lag_us: float) -> None:
 
 
 @inner
-def _let_flow(loop: Any, columns: Any, row: int, span_us: float) -> None:
+def let_flow(loop: Any, columns: Any, row: int, span_us: float) -> None:
     """[hot] Carry every cell over a span in which the command does not change."""
     rig = loop.rig[0]
     r = np.uint64(row)
@@ -272,7 +272,7 @@ def _let_flow(loop: Any, columns: Any, row: int, span_us: float) -> None:
 
 
 @inner
-def _put_in_force(loop: Any) -> None:
+def put_in_force(loop: Any) -> None:
     """[hot] Let the answer at the head of the queue flow from now on."""
     rig = loop.rig[0]
     head = loop.pending[np.uint64(rig.head)]
@@ -310,9 +310,9 @@ def play(loop: Any, columns: Any, first: int) -> None:
         head = loop.pending[np.uint64(rig.head)]
         at_us = min(head.offset_us, rig.interval_us) if head.tick == rig.played else 0.0
         if at_us > start_us:
-            _let_flow(loop, columns, row, at_us - start_us)
+            let_flow(loop, columns, row, at_us - start_us)
             start_us = at_us
-        _put_in_force(loop)
+        put_in_force(loop)
     if start_us < rig.interval_us:
-        _let_flow(loop, columns, row, rig.interval_us - start_us)
+        let_flow(loop, columns, row, rig.interval_us - start_us)
     rig.played += 1

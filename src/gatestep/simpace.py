@@ -52,7 +52,7 @@ _sched_yield: Any = types.ExternalFunction("sched_yield", types.intc())
 
 
 @inner
-def _virtual_arrival(loop: Any) -> Any:
+def virtual_arrival(loop: Any) -> Any:
     """[hot] ``(tick, offset_us, lag_us)`` at which the answer reaches the output."""
     rig = loop.rig[0]
     delay_us = rig.delay_us
@@ -105,7 +105,7 @@ def run_lockstep(loop: Any, columns: Any, first: int, stop: int) -> int:
         if rig.drop > 0.0 and uniform(rig.seed, DROP_STREAM, rig.seq) <= rig.drop:
             rig.dropped += 1
         else:
-            tick, offset_us, lag_us = _virtual_arrival(loop)
+            tick, offset_us, lag_us = virtual_arrival(loop)
             enqueue(loop, tick, offset_us, lag_us)
         play(loop, columns, first)
         rig.waiting = 0

@@ -18,6 +18,7 @@ import numpy as np
 import zmq
 from pydantic import ValidationError
 
+from .control import use_curve
 from .errors import FileError, LinkError
 from .simcell import make_cells
 from .simloop import Columns, fall_silent, make_columns, make_loop, send_sample
@@ -60,6 +61,9 @@ class SimRig:
         Connect here and not to ``loop.endpoint``.
     curve_secret : Path, optional
         The rig's own secret CURVE certificate, for a server that asks for one.
+    curve_server : Path, optional
+        The server's public certificate; the rig file's ``network.curve_secret``, of which
+        only the public half is used, if not given.
     connect_s : float
         How long the server has to accept the connection and, in lockstep, to give its
         first answer; it may start meanwhile.
@@ -90,6 +94,7 @@ class SimRig:
         drop: float | None = None,
         endpoint: str | None = None,
         curve_secret: Path | None = None,
+        curve_server: Path | None = None,
         connect_s: float = CONNECT_S,
         timeout_ms: float = TIMEOUT_MS,
         resend_ms: int = RESEND_MS,
@@ -117,7 +122,8 @@ class SimRig:
         self._socket = self._context.socket(zmq.DEALER)
         self._socket.setsockopt(zmq.IPV6, int("[" in self.endpoint))
         try:
-            self._connect(curve_secret, connect_s, resend_ms)
+            self._use_keys(curve_secret, curve_server)
+            self._connect(connect_s, resend_ms)
         except BaseException:
             self.close()
             raise
@@ -131,12 +137,24 @@ class SimRig:
         rig.seed, rig.jitter_us, rig.drop = simulated.seed, simulated.jitter_us, simulated.drop
         rig.timeout_us = timeout_ms * 1000.0
 
-    def _connect(self, curve_secret: Path | None, connect_s: float, resend_ms: int) -> None:
+    def _use_keys(self, own: Path | None, server: Path | None) -> None:
+        """Give the socket its CURVE keys where the server asks for them."""
+        if self.spec.network.curve_secret is None and server is None:
+            return
+        server = server or self._folder / str(self.spec.network.curve_secret)
+        if own is None:
+            raise LinkError(
+                f"the server asks for CURVE keys ({server}): give the rig's own secret certificate"
+            )
+        try:
+            use_curve(self._socket, server, own)
+        except FileError as fault:
+            raise LinkError(str(fault)) from fault
+
+    def _connect(self, connect_s: float, resend_ms: int) -> None:
         socket = self._socket
         socket.linger = 0
         socket.rcvtimeo = resend_ms
-        if self.spec.network.curve_secret is not None:
-            _use_curve(socket, self._folder / self.spec.network.curve_secret, curve_secret)
         monitor = socket.get_monitor_socket(
             zmq.EVENT_HANDSHAKE_SUCCEEDED
             | zmq.EVENT_HANDSHAKE_FAILED_AUTH
@@ -392,21 +410,3 @@ def _event(monitor: zmq.Socket[bytes]) -> int:
     from zmq.utils.monitor import recv_monitor_message
 
     return int(recv_monitor_message(monitor)["event"])
-
-
-def _use_curve(socket: zmq.Socket[bytes], server: Path, own: Path | None) -> None:
-    """Set the keys of an encrypted connection on a socket."""
-    from zmq.auth import load_certificate
-
-    if own is None:
-        raise LinkError(
-            f"the server asks for CURVE keys ({server}): give the rig's own secret certificate"
-        )
-    try:
-        socket.curve_serverkey = load_certificate(server)[0]
-        public, secret = load_certificate(own)
-    except (OSError, ValueError) as error:
-        raise LinkError(f"CURVE certificate cannot be read: {error}") from error
-    if secret is None:
-        raise LinkError(f"{own}: holds no secret key; give the rig's own secret certificate")
-    socket.curve_publickey, socket.curve_secretkey = public, secret

@@ -132,6 +132,8 @@ class Watch:
             **self.counters(),
             # A clock that stands still shows a tick of 0, which is known to be wrong.
             "tick_us": float(loop["tick_us"]) if loop["tick_us"] or loop["tick_wrong"] else None,
+            # From a sample to its answer's current, as the loop takes it to be.
+            "delay_us": round(float(loop["delay_us"]), 3) if loop["held"] else None,
             "service_nsec": self.service.percentiles(),
             "uptime_s": round(time.monotonic() - self._started, 3),
         }

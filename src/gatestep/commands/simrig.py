@@ -29,6 +29,7 @@ def simulate(
     seed: int | None = None,
     threshold_mv: float = 0.0,
     curve_secret: Path | None = None,
+    curve_server: Path | None = None,
     wait_s: float = 3.0,
 ) -> dict[str, Any]:
     """Run the simulated rig against a running server and print what happened.
@@ -45,6 +46,8 @@ def simulate(
         Print the figures as JSON.
     threshold_mv : float
         A spike is a rise of the membrane through this voltage.
+    curve_server : Path, optional
+        The server's public CURVE certificate; the rig file's if not given.
     curve_secret : Path, optional
         The rig's own secret CURVE certificate.
     wait_s : float
@@ -76,6 +79,7 @@ def simulate(
         seconds=seconds,
         seed=seed,
         curve_secret=curve_secret,
+        curve_server=curve_server,
         connect_s=wait_s,
     ) as rig:
         summary = Summary(rig.cell_names, threshold_mv)
