@@ -13,19 +13,19 @@ import datetime
 import os
 import threading
 import time
-from collections import deque
 from collections.abc import Callable, Mapping
 from concurrent.futures import Future, ThreadPoolExecutor
 from pathlib import Path
-from typing import Any, NamedTuple
+from typing import Any
 
 import numpy as np
 
 from .errors import JournalError
 from .journalbytes import Kind, dtype_as_json, pack_block, pack_json, sample_dtype, unpack_json
-from .journalentries import Entries, Event, only_events
+from .journalentries import Entries, Event
 from .journalfacts import model_payload, start_now
 from .journalout import Out, sync_folder
+from .journalqueue import Batch, Dropped, Expected, Item, Model, Note, Waiting
 from .library import LoadedModel
 from .specs import RecordSpec
 from .tables import Tables
@@ -33,38 +33,8 @@ from .tables import Tables
 BLOCK_BYTES = 1 << 20
 """Most bytes of samples in one block."""
 
-_BATCH_BYTES = 4 << 20  # of the queue, made into blocks at once
 _WAKE_BYTES = 2 << 20  # waiting: then the writer need not be due to be woken
 _CLOSE_S = 30.0
-
-
-class _Dropped(NamedTuple):
-    """Samples that found no room in the queue, at one place in it."""
-
-    samples: int
-    blocks: int
-    newest: int | None
-
-
-class _Note(NamedTuple):
-    kind: str
-    nsec: int
-    fields: bytes
-
-
-class _Expected(NamedTuple):
-    number: int
-    kind: str
-    fields: bytes
-
-
-class _Model(NamedTuple):
-    id: int
-    model: LoadedModel
-    tables: Tables
-
-
-_Item = bytes | _Dropped | _Note | _Expected | _Model | threading.Event
 
 
 class Journal:
@@ -99,12 +69,8 @@ class Journal:
         out: Callable[[Path], Out] = Out,
     ) -> None:
         self._spec, self._say = spec, say
-        self._limit = int(spec.queue_mb * 1e6)
         self._lock = threading.Lock()
-        self._queue: deque[tuple[_Item, int]] = deque()
-        self._queued = self._high_water = 0
-        self._dropped_samples = self._dropped_blocks = 0
-        self._missing = _Dropped(0, 0, None)
+        self._waiting = Waiting(int(spec.queue_mb * 1e6))
         self._models: dict[tuple[str, str], int] = {}
         self._state, self._reason = ("on", "") if spec.on else ("off", "")
         self._path: Path | None = None
@@ -128,31 +94,32 @@ class Journal:
             if key not in self._models:
                 self._models[key] = len(self._models)
                 number = self._models[key]
-                self._put(_Model(number, model, tables), tables.table.nbytes)
+                self._put(Model(number, model, tables), tables.table.nbytes)
             return self._models[key]
 
     def expect(self, number: int, kind: str, **fields: Any) -> None:
         """Say what an order means, before the log that tells its outcome is handed over."""
         content = pack_json(fields)
         with self._lock:
-            self._put(_Expected(number, kind, content), len(content))
+            self._put(Expected(number, kind, content), len(content))
 
     def note(self, kind: str, **fields: Any) -> None:
         """Put in an event after all that was handed over so far."""
         content = pack_json(fields)
         with self._lock:
-            self._put(_Note(kind, time.monotonic_ns(), content), len(content))
+            self._put(Note(kind, time.monotonic_ns(), content), len(content))
 
     def take(self, block: bytes) -> None:
         """Hand over a block of the loop's log: its ``LOOP`` record and its entries."""
         with self._lock:
-            if self._state == "on" and self._queued + len(block) <= self._limit:
+            on = self._state == "on"
+            if on and self._waiting.has_room(len(block)):
                 self._put(block, len(block))
                 return
-            if self._state not in {"on", "failed"}:
+            if not on and self._state != "failed":
                 return
-            first = self._state == "on" and not self._dropped_samples
-            dropped = self._drop(block)
+            first = on and not self._waiting.dropped_samples
+            dropped = self._waiting.leave_out(block, keep_events=on)
         if first and dropped:
             self._say(
                 "RECORD INCOMPLETE: the disk is too slow, and samples are left out of "
@@ -167,8 +134,8 @@ class Journal:
                 "path": None if self._path is None else str(self._path),
                 "bytes": self._size,
                 "samples": self._written,
-                "queue_high_water_bytes": self._high_water,
-                "dropped_samples": self._dropped_samples,
+                "queue_high_water_bytes": self._waiting.high_water,
+                "dropped_samples": self._waiting.dropped_samples,
                 "reason": self._reason or None,
             }
 
@@ -196,35 +163,12 @@ class Journal:
         """Whether the writer's thread still has the file."""
         return self._thread is not None and self._thread.is_alive()
 
-    def _put(self, item: _Item, size: int) -> None:
-        """Queue an item, behind what is missing before it; the lock is held."""
-        if self._state != "on":
-            return
-        self._put_missing()
-        self._queue.append((item, size))
-        self._queued += size
-        self._high_water = max(self._high_water, self._queued)
-        if self._queued >= _WAKE_BYTES:
-            self._wake.set()
-
-    def _put_missing(self) -> None:
-        if self._missing.blocks:
-            self._queue.append((self._missing, 0))
-            self._missing = _Dropped(0, 0, None)
-
-    def _drop(self, block: bytes) -> int:
-        """Leave out a block's samples, but not what else it tells; the lock is held."""
-        rest, samples, newest = only_events(block)
-        self._dropped_samples += samples
-        self._dropped_blocks += 1
+    def _put(self, item: Item, size: int) -> None:
+        """Queue an item while there is a record; the lock is held."""
         if self._state == "on":
-            was = self._missing
-            newest = was.newest if newest is None else newest
-            self._missing = _Dropped(was.samples + samples, was.blocks + 1, newest)
-            # Events are few; if they alone fill the queue again, they are left out too.
-            if rest is not None and self._queued < 2 * self._limit:
-                self._put(rest, len(rest))
-        return samples
+            self._waiting.put(item, size)
+            if self._waiting.queued >= _WAKE_BYTES:
+                self._wake.set()
 
     def _begin(
         self,
@@ -274,28 +218,20 @@ class Journal:
         """[writer] Write all that waits."""
         more = True
         while more:
-            batch = self._next_batch()
+            with self._lock:
+                if self._closing.is_set():
+                    self._waiting.put_missing()
+                batch = self._waiting.batch()
             self._write(batch)
             with self._lock:
-                self._queued -= sum(size for _, size in batch)
-                more = bool(self._queue)
+                self._waiting.written(batch)
+                more = bool(self._waiting)
             _tell(batch)
             if not self._out.is_in_place():
                 raise JournalError("the file has been moved or removed")
             self._sync()
 
-    def _next_batch(self) -> list[tuple[_Item, int]]:
-        """[writer] Some of what waits; it still counts as waiting."""
-        batch, size = [], 0
-        with self._lock:
-            if self._closing.is_set():
-                self._put_missing()
-            while self._queue and size < _BATCH_BYTES:
-                batch.append(self._queue.popleft())
-                size += batch[-1][1]
-        return batch
-
-    def _write(self, batch: list[tuple[_Item, int]]) -> None:
+    def _write(self, batch: Batch) -> None:
         """[writer] A batch as blocks: what samples need to be understood stands before them."""
         logs: list[bytes] = []
         for item, _ in batch:
@@ -312,17 +248,17 @@ class Journal:
         if samples:
             self._append_samples(np.concatenate(samples) if len(samples) > 1 else samples[0])
 
-    def _write_item(self, item: _Item) -> None:
+    def _write_item(self, item: Item) -> None:
         """[writer] One item that is not a block of the log."""
         entries = self._entries
-        if isinstance(item, _Model):
+        if isinstance(item, Model):
             payload = model_payload(item.id, item.model, item.tables, self._spec.tables)
             self._append(Kind.MODEL, payload)
-        elif isinstance(item, _Expected):
+        elif isinstance(item, Expected):
             entries.expect(item.number, item.kind, unpack_json(item.fields))
-        elif isinstance(item, _Note):
+        elif isinstance(item, Note):
             entries.note(item.kind, item.nsec, unpack_json(item.fields))
-        elif isinstance(item, _Dropped):
+        elif isinstance(item, Dropped):
             entries.skip(item.samples, item.newest)
             fields = {"samples": item.samples, "blocks": item.blocks}
             entries.note("dropped", time.monotonic_ns(), fields)
@@ -371,9 +307,9 @@ class Journal:
         """[writer] The last block of an orderly end."""
         with self._lock:
             known = {
-                "queue_high_water_bytes": self._high_water,
-                "dropped_samples": self._dropped_samples,
-                "dropped_blocks": self._dropped_blocks,
+                "queue_high_water_bytes": self._waiting.high_water,
+                "dropped_samples": self._waiting.dropped_samples,
+                "dropped_blocks": self._waiting.dropped_blocks,
             }
         close = {
             "nsec": time.monotonic_ns(),
@@ -392,23 +328,12 @@ class Journal:
 
     def _give_up(self, reason: str) -> None:
         """[writer] The record ends here; the file is left whole, saying so where it can."""
-        lost, blocks = self._entries.position - self._written, 0
+        unwritten = self._entries.position - self._written
         with self._lock:
-            untold = self._missing.samples
-            for item, _ in self._queue:
-                if isinstance(item, bytes):
-                    lost += only_events(item)[1]
-                    blocks += 1
-                elif isinstance(item, _Dropped):
-                    untold += item.samples  # counted already, but the file does not say so
-            waiting = list(self._queue)
-            self._queue.clear()
-            self._queued = 0
-            self._dropped_samples += lost
-            self._dropped_blocks += blocks
+            waiting, samples, blocks = self._waiting.give_up(unwritten)
             # Under the same lock: nothing may be queued any more that no one will count.
             news = self._set_failed(reason)
-        fields = {"samples": lost + untold, "blocks": blocks, "reason": reason}
+        fields = {"samples": samples, "blocks": blocks, "reason": reason}
         self._entries.give()
         if news:
             self._say_failed()
@@ -449,7 +374,7 @@ class Journal:
         )
 
 
-def _tell(batch: list[tuple[_Item, int]]) -> None:
+def _tell(batch: Batch) -> None:
     """[writer] Let those go on who wait for what was before them in the queue."""
     for item, _ in batch:
         if isinstance(item, threading.Event):
