@@ -44,6 +44,7 @@ struct software_rig {
     double v_mv, decay, injected_pa, command_pa;
     double t_ms;
     uint64_t tick, start_us;
+    double opened_us; /* virtual: the handshake took a tick, so that time has passed by then */
     uint8_t in[512], out[2048];
     struct gsb_taken taken[TAKEN];
 };
@@ -84,7 +85,8 @@ static uint32_t now_us(void *context)
 
     if (rig->settings.real > 0)
         return (uint32_t)posix_now_us();
-    return (uint32_t)(uint64_t)((double)rig->tick * rig->settings.interval_us + 0.5);
+    return (uint32_t)(uint64_t)(rig->opened_us + (double)rig->tick * rig->settings.interval_us +
+                                0.5);
 }
 
 /* ---- the cell ---- */
@@ -255,6 +257,7 @@ static int run(struct software_rig *rig)
     int held = 0;
 
     rig->start_us = posix_now_us();
+    rig->opened_us = s->interval_us;
     while (rig->tick < ticks) {
         hold(rig, &held);
         if (s->real > 0)
