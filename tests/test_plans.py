@@ -8,11 +8,13 @@ from itertools import islice
 from pathlib import Path
 
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from gatestep.errors import FileError
+from gatestep.files import parse
 from gatestep.plans import _draws, condition_of, load_plan, parse_plan, shuffled
+from gatestep.planspecs import OrderSpec, PlanSpec, StimulusSpec, SweepSpec
 
 PLACE = Path(__file__).parent / "plan.toml"
 
@@ -277,3 +279,42 @@ def test_missing_models_and_waves_are_told_together():
     with pytest.raises(FileError) as fault:
         plan_of(ladder(sweep='model = ["nothing", "./nothing.toml"]', stimulus=more))
     assert len(str(fault.value).splitlines()) == 3
+
+
+WORDS = st.text("aZ_9.-µ \\'\"", max_size=8)
+ANYTHING = st.recursive(
+    st.none() | st.booleans() | st.integers() | st.floats() | WORDS,
+    lambda inner: st.lists(inner, max_size=3) | st.dictionaries(WORDS, inner, max_size=3),
+    max_leaves=5,
+)
+
+
+def some_keys(spec):
+    """A table with some of a spec's keys, each with a likely value or anything."""
+    likely = st.sampled_from([1.0, 10.0, "step", "a", [1.0, 2.0], 3])
+    return st.dictionaries(st.sampled_from(list(spec.model_fields)), likely | ANYTHING, max_size=5)
+
+
+@st.composite
+def tables(draw):
+    """A plan file's content, of which much is wrong."""
+    data = draw(some_keys(PlanSpec)) | {"title": "x", "plan": draw(some_keys(OrderSpec))}
+    sweeps = draw(st.lists(some_keys(SweepSpec), max_size=3))
+    for sweep in sweeps:
+        sweep["stimulus"] = draw(st.lists(some_keys(StimulusSpec), max_size=2))
+        sweep["parameters"] = draw(
+            st.dictionaries(st.sampled_from(["K.gmax_ns", "K", "x.y"]), ANYTHING)
+        )
+    return data | draw(st.sampled_from([{}, {"sweep": sweeps}]))
+
+
+@settings(max_examples=40)
+@given(data=tables())
+def test_whatever_a_file_holds_it_is_a_plan_or_a_fault_with_words(data):
+    """No content of a plan file ends in anything but a plan or a FileError that names the file."""
+    try:
+        said = ""
+        assert isinstance(parse(PlanSpec, data, PLACE), PlanSpec)
+    except FileError as fault:
+        said = str(fault)
+    assert all(line.startswith(f"{PLACE}: ") for line in said.splitlines())
