@@ -15,7 +15,7 @@ import numpy.typing as npt
 from .compiling import compiled
 
 BINS = 640
-"""The last begins at 31 * 2**38 ns, some two hours; what is longer counts there."""
+"""The last ends at 2**43 ns, some two hours; what is longer counts there."""
 PERCENTILES = (50.0, 90.0, 99.0, 99.9)
 
 _SPLIT = 16
