@@ -1,8 +1,9 @@
-"""``gatestep demo``: a server and a simulated rig as two processes, and one scenario.
+"""``gatestep demo``: a server, a simulated rig, a plan of three sweeps, and its record.
 
 The scenario is our own invention: a passive cell answers a current step; given Na
-and K conductances it fires; given an M-type K conductance as well, by a swap while
-the loop runs, it fires and adapts. Cell and data are simulated.
+and K conductances it fires; given an M-type K conductance as well, it fires and adapts.
+The server plays it as a plan while the loop runs, and its journal is replayed, reported
+and, with the extra for it, exported. Cell and data are simulated.
 """
 
 from __future__ import annotations
@@ -12,17 +13,20 @@ import time
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
+from itertools import pairwise
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from ..errors import FileError, LinkError, MissingExtraError
-from .demo_rigs import STATEMENT, check_alive, finish, processes, write_rig
+from .demo_rigs import STATEMENT, check_alive, living, served, write_file, write_rig
 
 if TYPE_CHECKING:
     from ..control import Control
-    from ..simtrace import Trace
+    from ..journalfile import JournalFile
 
 INTERVAL_US = 25.0
+_LOOK_S = 0.02
+_PATIENCE_S = 120.0
 STEP_PA = 250.0
 SHORTEST_S, LONGEST_S = 0.3, 60.0
 PARTS = ("cell alone", "with Na and K", "with Na, K and M-type K")
@@ -34,19 +38,37 @@ name = "cell"
 model = "regular-spiking"
 capacitance_pf = 118.4
 [cell.limits]
-current_pa = 40000
+current_pa = 80000
 window_mv = [-120, 80]
 
 [simulated]
 pace = "lockstep"
-seconds = {seconds}
 [[simulated.cell]]
 capacitance_pf = 118.4
 leak_ns = 4.0
 leak_mv = -70.0
 noise_mv = 0.02
-{steps}
 """
+_PLAN = """\
+# Written by gatestep demo. {statement}
+title = "A conductance given through the loop"
+
+[plan]
+pause_ms = 0
+"""
+_SWEEP = """
+[[sweep]]
+name = "part-{number}"
+condition = "{name}"
+duration_ms = {length_ms}
+{setting}
+[[sweep.stimulus]]
+kind = "step"
+start_ms = {start_ms}
+stop_ms = {stop_ms}
+current_pa = {step_pa}
+"""
+_SETTINGS = ("scale = 0.0", "", 'model = "regular-spiking-m"')
 
 PROOF_US = 100.0
 PROOF_PARTS = ("plain loop", "anticipating")
@@ -60,6 +82,7 @@ current_pa = 40000
 window_mv = [-200, 200]
 
 """
+_PROOF_S = 0.26
 _PROOF_SIMULATED = """\
 [[simulated.cell]]
 capacitance_pf = 118.4
@@ -83,14 +106,6 @@ class Part:
     end_ms: float
 
 
-@dataclass(frozen=True)
-class Order:
-    """An order to give once the rig has come to a time, and what it is called."""
-
-    at_ms: float
-    verb: str
-
-
 def demo(seconds: float, out: Path, json_output: bool) -> int:
     """Play the scenario and say what came of it; returns the exit status.
 
@@ -110,18 +125,16 @@ def demo(seconds: float, out: Path, json_output: bool) -> int:
     """
     if not SHORTEST_S <= seconds <= LONGEST_S:
         raise FileError(f"--seconds {seconds:g}: give {SHORTEST_S:g} to {LONGEST_S:g} seconds")
-    parts = scenario(seconds)
-    rig_file = _write_scenario(out, seconds, parts)
+    rig_file = write_rig(out / "rig.toml", INTERVAL_US, _CELLS)
+    plan_file = write_file(out / "plan.toml", _plan(scenario(seconds)))
     with _bar(not json_output) as progress:
         progress("starting; the first start on a machine compiles", None)
-        with processes(rig_file, out / "demo.npz") as (server, rig, control):
-            confirmed = _play(rig, server, control, parts, progress)
-            figures = finish(rig)
-            status = control.status()
-            control.stop()
-            server.wait(10)
+        played = _play(rig_file, plan_file, progress)
         proof = _prove(out, progress)
-    summary = _summary(out, parts, confirmed, figures, status, proof)
+        progress("replaying and reporting", None)
+        kept = _keep(out, out / "records" / Path(played.pop("journal")).name)
+    kept["files"] = {"rig": str(rig_file), "plan": str(plan_file), **kept["files"]}
+    summary = {"about": STATEMENT, **kept, **played, "anticipation": proof}
     print(json.dumps(summary) if json_output else _text(summary))
     return 0
 
@@ -135,13 +148,21 @@ def scenario(seconds: float) -> list[Part]:
     ]
 
 
-def _write_scenario(out: Path, seconds: float, parts: list[Part]) -> Path:
-    steps = "\n".join(
-        f"[[simulated.cell.step]]\nstart_ms = {p.step_ms}\nstop_ms = {p.stop_ms}\n"
-        f"current_pa = {STEP_PA}"
-        for p in parts
-    )
-    return write_rig(out / "rig.toml", INTERVAL_US, _CELLS.format(seconds=seconds, steps=steps))
+def _plan(parts: list[Part]) -> str:
+    """The scenario as a plan: a sweep for each part."""
+    sweeps = [
+        _SWEEP.format(
+            number=number,
+            name=part.name,
+            length_ms=round(part.end_ms - part.start_ms, 6),
+            setting=setting,
+            start_ms=round(part.step_ms - part.start_ms, 6),
+            stop_ms=round(part.stop_ms - part.start_ms, 6),
+            step_pa=STEP_PA,
+        )
+        for number, (part, setting) in enumerate(zip(parts, _SETTINGS, strict=True), 1)
+    ]
+    return _PLAN.format(statement=STATEMENT) + "".join(sweeps)
 
 
 def _write_proof(out: Path) -> Path:
@@ -151,117 +172,127 @@ def _write_proof(out: Path) -> Path:
         _PROOF_CELL.format(name=name.replace(" ", "-"), capacitance=text)
         for name, text in zip(PROOF_PARTS, stated, strict=True)
     )
-    simulated = '[simulated]\npace = "lockstep"\nseconds = 0.26\n'
+    simulated = '[record]\non = false\n\n[simulated]\npace = "lockstep"\n'
     simulated += 2 * _PROOF_SIMULATED.format(step_pa=STEP_PA)
     return write_rig(out / "anticipation.toml", PROOF_US, cells + simulated)
 
 
+def _play(rig_file: Path, plan_file: Path, progress: Any) -> dict[str, Any]:
+    """Run the plan on a server of our own; the loop's figures, and where its journal is."""
+    with served(rig_file) as (server, control), living(rig_file) as rig:
+        while not _is_sampled(control):
+            check_alive(server, "server")
+            rig.check()
+            time.sleep(_LOOK_S)
+        control.run(plan_file.read_text(encoding="utf-8"), plan_file, timeout_s=_PATIENCE_S)
+        while (plan := control.ask("sweeps")["plan"])["running"]:
+            check_alive(server, "server")
+            rig.check()
+            now = plan["now"]
+            share = plan["ended"] + (now["ticks_done"] / now["ticks"] if now else 0.0)
+            progress("running", share / plan["sweeps"])
+            time.sleep(_LOOK_S)
+        status = control.status()
+        trips = rig.end()
+        control.stop()
+        server.wait(_PATIENCE_S)
+    if plan["why"] != "complete":
+        raise LinkError(f"the plan ended early: {plan['why']}")
+    counts = ("answered", "clipped", "late", "missed", "trips")
+    return {
+        **{name: status[name] for name in counts},
+        "service_nsec": status["service_nsec"],
+        "round_trip_us": trips,
+        "journal": status["recording"]["path"],
+    }
+
+
+def _is_sampled(control: Control) -> bool:
+    try:
+        return control.ask("status", timeout_s=0.5)["seq"] is not None
+    except LinkError:
+        return False
+
+
 def _prove(out: Path, progress: Any) -> dict[str, Any]:
     """Run the same model plain and anticipating, where plain fails; what came of it."""
-    from ..simtrace import Trace
+    from ..config import load_rig
+    from ..simrig import SimRig
 
     progress("the same at a slow tick, plain and anticipating", None)
-    path = out / "anticipation.npz"
-    with processes(_write_proof(out), path, "--arm", "--force") as (server, rig, control):
-        finish(rig)
+    rig_file = _write_proof(out)
+    rig = load_rig(rig_file)
+    with (
+        served(rig_file, "--arm", "--force") as (server, control),
+        SimRig(rig.spec, rig.folder, connect_s=_PATIENCE_S) as there,
+    ):
+        trace = there.run(_PROOF_S)
         control.stop()
-        server.wait(10)
-    trace = Trace.load(path)
+        server.wait(_PATIENCE_S)
     figures = {}
     for c, name in enumerate(PROOF_PARTS):
         low, high = float(trace.v_mv[:, c].min()), float(trace.v_mv[:, c].max())
         figures[name] = {"spikes": len(trace.spikes(c)), "trough_mv": low, "peak_mv": high}
+    path = out / "anticipation.npz"
+    trace.save(path)
     return {"interval_us": PROOF_US, "trace": str(path), "parts": figures}
 
 
-def _play(
-    rig: Any, server: Any, control: Control, parts: list[Part], progress: Any
-) -> dict[str, int | None]:
-    """Give the scenario's orders as the rig comes to their times; where each took force."""
-    _, with_na_k, with_m = parts
-    lead_ms = 0.5 * (with_na_k.step_ms - with_na_k.start_ms)
-    orders = [
-        Order(with_na_k.start_ms, "arm"),
-        Order(with_na_k.step_ms + lead_ms, "load"),
-        Order(with_m.start_ms, "swap"),
-        Order(0.5 * (with_m.stop_ms + with_m.end_ms), "disarm"),
-    ]
-    confirmed: dict[str, int | None] = {}
-    while rig.poll() is None:
-        check_alive(server, "server")
-        now_ms = _now_ms(control)
-        progress("running", None if now_ms is None else now_ms / parts[-1].end_ms)
-        while orders and now_ms is not None and now_ms >= orders[0].at_ms:
-            verb = orders.pop(0).verb
-            argument = {"model": "regular-spiking-m"} if verb == "load" else {}
-            answer = control.ask(verb, timeout_s=30, **argument)
-            confirmed[verb] = answer.get("seq")
-        time.sleep(0.002)
-    if orders and rig.returncode == 0:
-        raise LinkError(f"the rig was through before {orders[0].verb!r} could be ordered")
-    return confirmed
+def _keep(out: Path, path: Path) -> dict[str, Any]:
+    """What the journal gives: the parts' figures, the replay's verdict, and files."""
+    from ..comparison import compare
+    from ..journalfile import open_journal
+    from .report import measure_journal
 
-
-def _now_ms(control: Control) -> float | None:
-    """The rig's time by the newest sample, None before the first."""
-    try:
-        seq = control.ask("status", timeout_s=0.5)["seq"]
-    except LinkError:
-        return None
-    return None if seq is None else float(seq) * INTERVAL_US / 1000.0
-
-
-def _summary(
-    out: Path,
-    parts: list[Part],
-    confirmed: dict[str, int | None],
-    figures: dict[str, Any],
-    status: dict[str, Any],
-    proof: dict[str, Any],
-) -> dict[str, Any]:
-    from ..simtrace import Trace
-    from .demo_figures import draw_proof, draw_scenario
-
-    trace = Trace.load(out / "demo.npz")
-    files = {"rig": str(out / "rig.toml"), "trace": str(out / "demo.npz")}
-    note = None
-    try:
-        marks = [confirmed.get(verb) for verb in ("arm", "swap", "disarm")]
-        marks_s = [seq * INTERVAL_US / 1e6 for seq in marks if seq is not None]
-        files["figure"] = str(draw_scenario(trace, parts, marks_s, out / "demo.png"))
-        second = draw_proof(Trace.load(Path(proof["trace"])), PROOF_US, out / "anticipation.png")
-        files["anticipation"] = str(second)
-    except MissingExtraError as missing:
-        note = str(missing)
+    with open_journal(path) as journal:
+        verdict = compare(journal)
+        rows = measure_journal(journal, drawn=False)[0]["sweeps"]
+        files, notes = _draw(out, journal)
     return {
-        "about": STATEMENT,
-        "parts": [_part_figures(trace, part) for part in parts],
-        "orders_after_sample": confirmed,
-        "answered": status["answered"],
-        "clipped": status["clipped"],
-        "late": status["late"],
-        "missed": status["missed"],
-        "trips": status["trips"],
-        "service_nsec": status["service_nsec"],
-        "round_trip_us": figures["round_trip_us"],
-        "anticipation": proof,
-        "files": files,
-        "note": note,
+        "parts": [_part_figures(row) for row in rows],
+        "replay": "identical" if verdict.identical and verdict.complete else "NOT identical",
+        "files": {"journal": str(path), **files, **_export(path, out / "demo.nwb", notes)},
+        "notes": notes,
     }
 
 
-def _part_figures(trace: Trace, part: Part) -> dict[str, Any]:
-    during = (trace.t_ms >= part.start_ms) & (trace.t_ms < part.end_ms)
-    times = trace.spikes()
-    times = times[(times >= part.step_ms) & (times < part.end_ms)]
-    intervals = times[1:] - times[:-1]
+def _draw(out: Path, journal: JournalFile) -> tuple[dict[str, str], list[str]]:
+    """The figures, where they can be drawn, and why not where they cannot."""
+    from ..simtrace import Trace
+    from .demo_figures import draw_proof, draw_scenario
+    from .report import report_files
+
+    try:
+        files = {"figure": str(draw_scenario(journal, out / "demo.png"))}
+        proof = Trace.load(out / "anticipation.npz")
+        files["anticipation"] = str(draw_proof(proof, PROOF_US, out / "anticipation.png"))
+        files["report"] = str(report_files(journal, out / "report"))
+    except MissingExtraError as missing:
+        return {}, [f"no figures: {missing}"]
+    return files, []
+
+
+def _export(path: Path, out: Path, notes: list[str]) -> dict[str, str]:
+    """The NWB file, where the extra for it is there."""
+    from ..nwb import export
+
+    try:
+        return {"export": str(export(path, out, overwrite=True).path)}
+    except MissingExtraError as missing:
+        notes.append(f"no NWB file: {missing}")
+        return {}
+
+
+def _part_figures(row: dict[str, Any]) -> dict[str, Any]:
+    times = row["spikes_ms"]
+    intervals = [after - before for before, after in pairwise(times)]
     return {
-        "name": part.name,
+        "name": row["condition"],
         "spikes": len(times),
-        "first_spike_latency_ms": float(times[0] - part.step_ms) if len(times) else None,
-        "first_interval_ms": float(intervals[0]) if len(intervals) else None,
-        "last_interval_ms": float(intervals[-1]) if len(intervals) else None,
-        "peak_mv": float(trace.v_mv[during, 0].max()),
+        "first_spike_latency_ms": row["latency_ms"],
+        "first_interval_ms": intervals[0] if intervals else None,
+        "last_interval_ms": intervals[-1] if intervals else None,
+        "peak_mv": row["peak_mv"],
     }
 
 
@@ -274,7 +305,7 @@ def _text(summary: dict[str, Any]) -> str:
         intervals = "-" if first is None else f"{first:.1f} to {last:.1f} ms"
         latency = part["first_spike_latency_ms"]
         after = "-" if latency is None else f"{latency:.1f} ms"
-        peak = f"{part['peak_mv']:.1f} mV"
+        peak = "-" if part["peak_mv"] is None else f"{part['peak_mv']:.1f} mV"
         lines.append(f"{part['name']:26}{part['spikes']:>7}{after:>13}{intervals:>20}{peak:>10}")
     service = {k: v / 1000 for k, v in summary["service_nsec"].items()}
     trips = summary["round_trip_us"]
@@ -292,10 +323,10 @@ def _text(summary: dict[str, Any]) -> str:
             for name, found in summary["anticipation"]["parts"].items()
         ),
         "",
+        f"replay        {summary['replay']}",
         *(f"{k:13} {v}" for k, v in summary["files"].items()),
+        *summary["notes"],
     ]
-    if summary["note"]:
-        lines.append(f"no figure: {summary['note']}")
     return "\n".join(lines)
 
 

@@ -5,12 +5,14 @@ from __future__ import annotations
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
+
 from ..errors import MissingExtraError
 from .demo_rigs import STATEMENT
 
 if TYPE_CHECKING:
+    from ..journalfile import JournalFile
     from ..simtrace import Trace
-    from .demo import Part
 
 INK, CURRENT, STIMULUS, MARK = "#1b3a4b", "#9a3324", "#444444", "#8a8a8a"
 
@@ -32,8 +34,8 @@ def _save(figure: Any, path: Path) -> Path:
     return path
 
 
-def draw_scenario(trace: Trace, parts: list[Part], marks_s: list[float], path: Path) -> Path:
-    """Voltage and injected current over time, the parts named and orders marked.
+def draw_scenario(journal: JournalFile, path: Path) -> Path:
+    """Voltage, the model's current and the stimulus over the plan's sweeps, each named.
 
     Raises
     ------
@@ -41,22 +43,26 @@ def draw_scenario(trace: Trace, parts: list[Part], marks_s: list[float], path: P
         Without matplotlib.
     """
     figure = _figure(6.0)
-    top, middle, bottom = figure.subplots(3, 1, sharex=True, height_ratios=[3, 2, 1])
-    t_s = trace.t_ms / 1000.0
-    top.plot(t_s, trace.v_mv[:, 0], color=INK, linewidth=0.8)
+    top, middle, bottom = panels = figure.subplots(3, 1, sharex=True, height_ratios=[3, 2, 1])
+    first = journal.sweeps[0].start
+    tick_s = journal.interval_us * 1e-6
+    samples = journal.samples[first : journal.sweeps[-1].stop]
+    t_s = np.arange(len(samples)) * tick_s
+    stimulus_pa = samples["stimulus_pa"][:, 0]
+    top.plot(t_s, samples["v_mv"][:, 0], color=INK, linewidth=0.8)
     top.set_ylabel("membrane (mV)")
-    answered = trace.i_pa[:, 0] - trace.stimulus_pa[:, 0]
-    middle.plot(t_s, answered / 1000.0, color=CURRENT, linewidth=0.6)
+    middle.plot(t_s, (samples["i_pa"][:, 0] - stimulus_pa) / 1000.0, color=CURRENT, linewidth=0.6)
     middle.set_ylabel("model's current (nA)")
-    bottom.plot(t_s, trace.stimulus_pa[:, 0], color=STIMULUS, linewidth=1.0)
+    bottom.plot(t_s, stimulus_pa, color=STIMULUS, linewidth=1.0)
     bottom.set_ylabel("step (pA)")
     bottom.set_xlabel("time in the simulated rig (s)")
-    for part in parts:
-        centre = 0.5 * (part.start_ms + part.end_ms) / 1000.0
-        top.annotate(part.name, (centre, 1.02), xycoords=("data", "axes fraction"), ha="center")
-    for mark in marks_s:
-        for axes in (top, middle, bottom):
-            axes.axvline(mark, color=MARK, linewidth=0.8, linestyle=":")
+    for sweep in journal.sweeps:
+        start_s, stop_s = (sweep.start - first) * tick_s, (sweep.stop - first) * tick_s
+        where = (0.5 * (start_s + stop_s), 1.02)
+        name = sweep.fields["condition"]
+        top.annotate(name, where, xycoords=("data", "axes fraction"), ha="center")
+        for axes in panels:
+            axes.axvline(start_s, color=MARK, linewidth=0.8, linestyle=":")
     figure.suptitle(f"A conductance given through the loop. {STATEMENT}", fontsize=10)
     return _save(figure, path)
 

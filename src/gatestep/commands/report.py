@@ -45,7 +45,7 @@ def report(
     from ..journalfile import open_journal
 
     with open_journal(path) as journal:
-        result, rows, drawing = _measured(journal, drawn=figure is not None)
+        result, rows, drawing = measure_journal(journal, drawn=figure is not None)
     if table is not None:
         _write_csv(table, rows)
         result["csv"] = str(table)
@@ -58,7 +58,7 @@ def report(
     return 0
 
 
-def _measured(journal: JournalFile, drawn: bool) -> tuple[Row, list[Row], Drawing | None]:
+def measure_journal(journal: JournalFile, drawn: bool) -> tuple[Row, list[Row], Drawing | None]:
     """The result, its rows, and where they are wanted the sweeps for the figures."""
     from ..sweepmeasures import Measurer, tasks_of
     from .report_figures import Drawing
@@ -78,6 +78,21 @@ def _measured(journal: JournalFile, drawn: bool) -> tuple[Row, list[Row], Drawin
             drawing.add(made, stretch)
     rows = [row_of(made, journal.cells) for made in measured]
     return _result(journal, measured, rows), rows, drawing
+
+
+def report_files(journal: JournalFile, folder: Path) -> Path:
+    """The figures of a journal and ``sweeps.csv``, in a folder; the folder.
+
+    Raises
+    ------
+    GatestepError
+        As :func:`report`.
+    """
+    result, rows, drawing = measure_journal(journal, drawn=True)
+    if drawing is not None:
+        drawing.save(folder, result)
+    _write_csv(folder / "sweeps.csv", rows)
+    return folder
 
 
 def title_of(journal: JournalFile) -> str:
