@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
+import io
 import os
-import re
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
@@ -179,17 +179,87 @@ def _beside(out: Path) -> Iterator[Path]:
     part = out.with_name(f".{out.name}.{os.getpid()}.part.nwb")
     try:
         yield part
-    except (OSError, RuntimeError) as fault:
-        # h5py tells of a full disk by either, in a long text with the cause within.
-        raise FileError(f"{out}: cannot be written: {_cause(fault)}") from None
+    except OSError as fault:
+        raise FileError(f"{out}: cannot be written: {fault.strerror or fault}") from None
     finally:
         part.unlink(missing_ok=True)
 
 
-def _cause(fault: Exception) -> str:
-    if found := re.search(r"error message = '([^']+)'", str(fault)):
-        return found[1]
-    return str(getattr(fault, "strerror", None) or fault)
+class _Sink(io.RawIOBase):
+    """A file for HDF5 that keeps a fault to itself.
+
+    Told of a full disk, the HDF5 library fails again whenever it is closed, and can end the
+    whole process. So it is told nothing, what it writes from then on is left out, and the
+    fault is raised here.
+    """
+
+    def __init__(self, path: Path) -> None:
+        self._file = path.open("x+b", buffering=0)
+        self.fault: OSError | None = None
+
+    def check(self) -> None:
+        """Raise the fault, if there was one.
+
+        Raises
+        ------
+        OSError
+        """
+        if self.fault is not None:
+            raise self.fault
+
+    def write(self, data: Any) -> int:
+        """Write all of some bytes."""
+        left = memoryview(data).cast("B")
+        size = len(left)
+        try:
+            while len(left) and self.fault is None:
+                left = left[self._file.write(left) :]
+        except OSError as fault:
+            self.fault = fault
+        return size
+
+    def readinto(self, room: Any) -> int:
+        """Read what was written; zeros where that was left out."""
+        view = memoryview(room).cast("B")
+        count = self._file.readinto(view) or 0
+        view[count:] = bytes(len(view) - count)
+        return len(view)
+
+    def seek(self, place: int, whence: int = os.SEEK_SET) -> int:
+        """Go to a place."""
+        return self._file.seek(place, whence)
+
+    def tell(self) -> int:
+        """Where the next byte goes."""
+        return self._file.tell()
+
+    def truncate(self, size: int | None = None) -> int:
+        """Set the size."""
+        try:
+            return self._file.truncate(size)
+        except OSError as fault:
+            self.fault = self.fault or fault
+        return size or 0
+
+    def close(self) -> None:
+        """Give the file back."""
+        self._file.close()
+        super().close()
+
+
+@contextmanager
+def _hdf5(part: Path) -> Iterator[tuple[Any, Callable[[], None]]]:
+    """An NWB file open for writing, and what raises a fault of the disk."""
+    import h5py
+    from pynwb import NWBHDF5IO
+
+    sink = _Sink(part)
+    try:
+        with h5py.File(sink, "w") as file, NWBHDF5IO(file=file, mode="w") as nwb:
+            yield nwb, sink.check
+        sink.check()
+    finally:
+        sink.close()
 
 
 def _put(part: Path, out: Path, overwrite: bool) -> None:
@@ -221,7 +291,7 @@ def _write(
     progress: Progress,
 ) -> dict[str, Any]:
     """Describe the file, write it, fill its series; what is told of it."""
-    from pynwb import NWBHDF5IO, NWBFile
+    from pynwb import NWBFile
     from pynwb.file import Subject
 
     from .nwbseries import Series, name_of
@@ -251,9 +321,15 @@ def _write(
     add_gaps(file, named, journal.interval_us * 1e-6)
     for name, (text, what) in provenance(journal, sha256, verdict).items():
         file.add_scratch(text, name=name, description=plain(what))
-    with NWBHDF5IO(str(part), "w") as io:
-        io.write(file)
-        series.fill(recordings, lambda done, of: progress("writing", done, of))
+    with _hdf5(part) as (nwb, check):
+        nwb.write(file)
+        check()
+
+        def tell(done: int, of: int) -> None:
+            check()
+            progress("writing", done, of)
+
+        series.fill(recordings, tell)
     return {
         **_counts(journal, found, recordings),
         "models": len(stretches),

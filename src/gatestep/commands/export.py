@@ -117,7 +117,9 @@ class Bar:
             from rich.console import Console
             from rich.progress import Progress
 
-            self._bar = Progress(console=Console(stderr=True), transient=True)
+            console = Console(stderr=True)
+            # Where no one looks on, even a bar that vanishes would leave an empty line.
+            self._bar = Progress(console=console, transient=True, disable=not console.is_terminal)
             self._bar.start()
         if what not in self._tasks:
             self._tasks[what] = self._bar.add_task(what, total=max(of, 1))
