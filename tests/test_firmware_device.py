@@ -8,10 +8,13 @@ from __future__ import annotations
 
 import ctypes
 import math
+import re
+from pathlib import Path
 
 import numpy as np
 import pytest
-from firmware_model_build import library, tables
+from firmware_build import SANITIZED, STRICT, compiler, run
+from firmware_model_build import folder, library, sources, tables
 from framed_host import (
     ALIVE,
     ARM,
@@ -33,6 +36,7 @@ from hypothesis import strategies as st
 
 from gatestep.firmware_twin import steps_compiled
 
+FUZZ = Path(__file__).with_name("firmware_model_fuzz.c")
 MODEL = "squid-na-k"
 TICK_US = 20
 LIMIT_PA, SLEW_PA_PER_MS = 800.0, 20_000.0
@@ -257,6 +261,68 @@ def test_an_order_sent_again_is_not_carried_out_again():
     made.poll(again)
     made.tick(-65.0)
     assert made.state == ARMED  # another token than the last is another order
+
+
+@pytest.mark.parametrize("again", [(encode(BYE), encode(WELCOME, [1, 0, 1])), ()])
+def test_another_host_may_begin_with_the_same_token(again):
+    """After bye or welcome a token is new, whatever it was before."""
+    made = armed()
+    for data in again or (encode(WELCOME, [1, 0, 1]),):
+        made.poll(data)
+    made.tick(-65.0)
+    made.token -= 1
+    assert made.order(ARM) == OK
+    assert made.state == ARMED
+
+
+def test_before_welcome_no_order_is_taken():
+    """A device that is not welcome passes orders over."""
+    made = Device()
+    made.tick(-65.0)
+    made.poll(encode(ARM, [1]) + encode(PARAMETER, [2, 0, 1.0]) + encode(ASK, [3, 0]))
+    made.tick(-65.0)
+    made.poll()
+    assert (made.frames, made.state) == ([], DISARMED)
+
+
+@pytest.mark.parametrize(
+    "wrong",
+    [
+        {"interval_us": 50.0},
+        {"interval_us": math.nan},
+        {"current_pa": 0.0},
+        {"current_pa": math.inf},
+        {"slew": -1.0},
+        {"low_mv": -157.0},
+        {"high_mv": 101.0},
+        {"low_mv": 50.0, "high_mv": 40.0},
+        {"high_mv": math.nan},
+        {"silence_us": 2**31},
+        {"gap_ticks": 0},
+    ],
+)
+def test_a_configuration_that_cannot_be_starts_nothing(wrong):
+    """Another tick than the tables', no limit, or a window off the grid: refused, 0 pA."""
+    usual = {"interval_us": 20.0, "current_pa": 800.0, "slew": 2e4, "low_mv": -150.0}
+    usual |= {"high_mv": 100.0, "silence_us": 5000, "gap_ticks": 20, **wrong}
+    c = library(MODEL)
+    assert c.shim_start(*usual.values()) == -ARGUMENT
+    assert c.shim_tick(-65.0, 0, 0, 20) == -ARGUMENT
+    assert (c.shim_current_pa(), c.shim_state()) == (0.0, DISARMED)
+
+
+def test_a_million_damaged_streams_under_the_sanitizers(tmp_path):
+    """Frames in any order, bits flipped, streams cut: no memory fault, no current out of bounds."""
+    made = folder(MODEL)
+    target = tmp_path / "fuzz"
+    include = ["-I", made, "-I", made / "library", "-I", FUZZ.parent]
+    flags = [*STRICT, *SANITIZED, "-ffp-contract=off"]
+    run([*compiler(), *flags, *include, "-o", target, FUZZ, *sources(made)])
+    said = run([target, 1_000_000, 1]).stdout
+    streams, armed_at, current_at, faults = map(int, re.findall(r"\d+", said))
+    assert streams == 1_000_000
+    assert armed_at > current_at > 100_000
+    assert faults > 1000
 
 
 def test_thinned_samples_carry_what_was(device):
