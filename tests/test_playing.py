@@ -248,6 +248,22 @@ def test_a_halted_plan_ends_at_0_pa_with_everything_kept(tmp_path):
     assert compare(journal).identical
 
 
+def test_a_plan_halted_before_its_first_sweep_never_arms(tmp_path):
+    """What waited for its sample is dropped, the arming too, and the replay knows."""
+    with lab(tmp_path) as here:
+        keep_path(here)
+        here.run(LONG)
+        here.control.halt()
+        assert here.ended()["why"] == "halted"
+        at = here.seq
+        wait_until(lambda: here.seq > at + 10_000, "samples")
+        assert here.control.status()["state"] == "idle"
+    samples, journal = recorded(here)
+    assert not (samples["flags"] & LIVE).any()
+    verdict = compare(journal)
+    assert (verdict.identical, verdict.unlike) == (True, None)
+
+
 def test_what_a_plan_does_by_itself_is_refused_meanwhile(tmp_path):
     """Loading, swapping, setting, arming and a second plan wait; a mark and a disarm do not."""
     with lab(tmp_path) as here:

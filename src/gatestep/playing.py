@@ -23,6 +23,7 @@ from .orderline import Record, model_meaning
 from .orders import Order, Outcome
 from .plans import Plan
 from .shelf import Ready, Shelf
+from .spikes import HYSTERESIS_MV
 from .states import State
 from .stimulus import waveform
 from .sweepsettings import PreparedSweep
@@ -31,8 +32,6 @@ from .wire import CLIPPED, LATE, NIL, REPEAT
 
 LEAD_S = 0.1
 """Time from the request until the first sweep begins."""
-HYSTERESIS_MV = 5.0
-"""A spike is counted again only after the voltage has been so far below the threshold."""
 MOST_TOLD = 200
 """Sweeps told in one answer."""
 

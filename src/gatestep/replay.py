@@ -43,6 +43,8 @@ _KINDS = {
 }
 _FROM_OUTSIDE = {int(Fault.SILENCE), int(Fault.DISCONNECTED)}
 """Faults that no sample shows."""
+_NOT_CARRIED_OUT = {"dropped", "no_room"}
+"""Outcomes of what was planned and never came to its sample."""
 _CHANGES = {*_KINDS, "set", "in_force", "hold", "release", "trip"}
 
 
@@ -239,7 +241,7 @@ class Replay:
 
     def _order(self, event: Event) -> None:
         outcome = event.fields.get("outcome", "done")
-        if outcome != "done" and event.kind != "arm":
+        if outcome in _NOT_CARRIED_OUT:
             return
         order = records(ORDER)[0]
         order.kind, order.at = self._kind(event), NIL
