@@ -13,6 +13,7 @@ import pytest
 from conftest import PATIENCE_S, RawRig, running, wait_until
 
 from gatestep.comparison import compare
+from gatestep.control import Control
 from gatestep.errors import ControlError
 from gatestep.journalfile import open_journal
 from gatestep.wire import CLIPPED, GAP, LIVE
@@ -262,6 +263,34 @@ def test_a_plan_halted_before_its_first_sweep_never_arms(tmp_path):
     assert not (samples["flags"] & LIVE).any()
     verdict = compare(journal)
     assert (verdict.identical, verdict.unlike) == (True, None)
+
+
+def test_a_plan_halted_while_it_is_prepared_never_begins(tmp_path):
+    """The halt comes before the plan's tables are built: the run is refused, nothing plays."""
+    with lab(tmp_path) as here:
+        other = Control(here.server.server.endpoints()["control"], timeout_s=PATIENCE_S)
+        refused = []
+
+        def run():
+            with pytest.raises(ControlError) as found:
+                here.run(LONG.replace('name = "long"', 'name = "long"\nmodel = "squid-axon"'))
+            refused.append(str(found.value))
+
+        thread = threading.Thread(target=run)
+        thread.start()
+        with other:
+            wait_until(lambda: halted(other), "a plan to halt")
+            thread.join(PATIENCE_S)
+            state = other.status()["state"]
+        assert "halted while it was prepared" in refused[0]
+        assert state == "idle"
+
+
+def halted(control) -> bool:
+    try:
+        return control.halt()["plan"] is None
+    except ControlError:
+        return False
 
 
 def test_what_a_plan_does_by_itself_is_refused_meanwhile(tmp_path):

@@ -66,7 +66,7 @@ def read_bytes(path: Path) -> bytes:
         reason = getattr(error, "strerror", None) or error
         raise FileError(f"{path}: cannot be read: {reason}") from None
     if len(content) > MAX_BYTES:
-        raise FileError(f"{path}: over {MAX_BYTES:,} bytes, too large for a rig, model or plan file")
+        raise FileError(f"{path}: over {MAX_BYTES:,} bytes, too large for such a file")
     return content
 
 

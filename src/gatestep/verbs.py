@@ -99,6 +99,7 @@ class Verbs:
             rig, shelf, slots, watch, send_order, builder, self._record, self._take_parameters
         )
         self._busy: dict[int, str] = {}
+        self._given_up = False  # the plan that is being prepared
         self._changed: set[int] = set()
         self._judging: dict[int, tuple[dict[str, float], Future[Choice]]] = {}
         # As the loop has confirmed them, and as it will have them once all orders are done.
@@ -199,6 +200,7 @@ class Verbs:
             raise ControlError(f"run: seed is {show(seed)}; it is a whole number from 0")
         in_force = [self._as_set(k) for k in range(len(self._names))]
         self._claim_all("run")
+        self._given_up = False
         try:
             future = self._builder.submit(prepare_plan, text, Path(path), seed, self._rig, in_force)
         except BaseException:
@@ -208,6 +210,9 @@ class Verbs:
 
     def halt(self) -> Answer:
         """End the plan under way, at 0 pA."""
+        if "run" in self._busy.values():
+            self._given_up = True
+            return {"ok": True, "plan": None}
         if not self.player.busy:
             raise ControlError("halt: no plan is running")
         self.player.halt("halted")
@@ -389,6 +394,8 @@ class Verbs:
         """Begin a plan that is prepared, unless a sweep of it would ring."""
         self._busy.clear()
         plan, sweeps = built.result()
+        if self._given_up:
+            raise ControlError("run: halted while it was prepared; nothing was played")
         choices = {id(one.setting): one.setting.choice for one in sweeps}
         against = advice(list(choices.values()))
         if against and not force:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import contextlib
 import json
 import sys
 import time
@@ -38,15 +37,21 @@ def run(
         When the plan cannot be read, or the server refuses it.
     """
     plan = load_plan(plan_file)
-    with Control(endpoint, curve_server=curve[0], curve_client=curve[1]) as control:
+
+    def connect() -> Control:
+        return Control(endpoint, curve_server=curve[0], curve_client=curve[1])
+
+    with connect() as control:
         recording = control.status()["recording"]
         if not json_output:
             _introduce(plan, recording)
-        answer = control.run(plan.text, plan.path, seed, force, timeout_s=_PREPARE_S)
         try:
+            answer = control.run(plan.text, plan.path, seed, force, timeout_s=_PREPARE_S)
             told = _watch(control, answer, json_output)
         except KeyboardInterrupt:
-            told = _halt(control)
+            # A connection of its own: the old one may yet bring the answer to the run.
+            with connect() as other:
+                told = _halt(other)
             _report(told, recording, json_output)
             return _INTERRUPTED
     _report(told, recording, json_output)
@@ -118,8 +123,13 @@ def _line(sweep: dict[str, Any], count: int) -> str:
 
 def _halt(control: Control) -> dict[str, Any]:
     """End the plan, and wait until what was in force before it is back."""
-    with contextlib.suppress(ControlError):  # it may just have ended by itself
-        control.halt()
+    nothing = {"title": None, "sweeps": 0, "done": [], "why": "halted before the first sweep"}
+    try:
+        if control.halt()["plan"] is None:
+            return nothing
+    except ControlError:  # it may just have ended by itself, or never begun
+        if control.ask("sweeps")["plan"] is None:
+            return nothing
     done: list[dict[str, Any]] = []
     while True:
         told = _ask_on(control, len(done))

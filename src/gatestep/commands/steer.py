@@ -129,5 +129,6 @@ def _sentence(verb: str, answer: dict[str, Any]) -> str:
     if verb == "stop":
         return "stopping at 0 pA"
     if verb == "halt":
-        return f"the plan is ended at 0 pA after {answer['plan']['ended']} sweeps"
+        ended = (answer["plan"] or {"ended": 0})["ended"]
+        return f"the plan is ended at 0 pA after {ended} sweeps"
     return f"{answer['state']}{after}"
