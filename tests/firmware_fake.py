@@ -238,6 +238,7 @@ class Board:
             config.cell[k] = Limits(
                 setting.limit_pa[k], setting.slew_pa_per_ms[k], *setting.window_mv
             )
+        self.config = config
         self._memory = [
             ctypes.create_string_buffer(size)
             for size in (c.shim_size(0), setting.room, setting.room, setting.ring * c.shim_size(3))

@@ -6,13 +6,16 @@ current it writes is compared with ``firmware_naive``, and bounds are watched be
 
 from __future__ import annotations
 
+import ctypes
 import random
 from collections import Counter
+from itertools import pairwise
 
+import msgpack
 import numpy as np
 import pytest
 from firmware_fake import WRAP, Board, Rates
-from firmware_naive import Naive, Setting
+from firmware_naive import Naive, Setting, frame
 from hypothesis import Phase, given, settings
 from hypothesis import strategies as st
 
@@ -123,7 +126,7 @@ _RATES = st.builds(
 
 
 # Not shrunk: a seed's life has no simpler one near it, and looking takes minutes.
-@settings(max_examples=150, phases=[Phase.explicit, Phase.generate])
+@settings(max_examples=100, phases=[Phase.explicit, Phase.generate])
 @given(_settings(), _RATES, st.integers(0, 2**32))
 def test_whatever_goes_wrong_the_device_does_as_described(setting, rates, seed):
     """Every byte and every current are those of the plain model; the bounds always hold."""
@@ -230,3 +233,71 @@ def test_stop_is_zero_at_once():
     board.now += 50
     board.tick()
     assert (board.state, len(board.host.samples)) == ("idle", heard)
+
+
+def test_a_lost_welcome_is_asked_for_again():
+    """On a serial line hello is repeated every 100 ms until the welcome comes."""
+    setting = _changed(ONE, serial=True)
+    rng = random.Random(1)
+    board = Board(setting, rng, Rates(drop=1.0), 0)
+    board.connect()
+    hellos = []
+    for _ in range(100):
+        board.now += 5_000
+        hellos += [board.age for entry in board.poll() if entry[0] == "sent" and entry[1]]
+    assert board.state == "greeting"
+    assert [b - a for a, b in pairwise(hellos)] == [100_000] * 4
+    board.line.rates = PLAIN
+    for _ in range(30):
+        board.now += 5_000
+        board.poll()
+    assert board.state == "silent"  # welcome, and not ticking
+
+
+def test_a_welcome_for_another_number_of_cells_is_refused():
+    """The loop stays closed and hello goes on, on the same line."""
+    board = Board(_changed(ONE, serial=True), random.Random(1), PLAIN, 0)
+    board.connect()
+    board.line.clear()
+    for cells, state in ((2, "greeting"), (1, "running")):
+        board.line.plain(board.now, frame(0x02, msgpack.packb([1, 0, cells])))
+        board.now += 50
+        board.poll()
+        assert board.state == state
+    board.line.plain(board.now, frame(0x02, msgpack.packb([2, 0, 1])))
+    board.poll()
+    assert (board.state, board.broken) == ("greeting", False)
+
+
+def test_a_sick_line_does_not_stop_the_next_frame():
+    """Half a frame at the start and noise between frames cost faults, not the loop."""
+    board, _ = _play(_changed(ONE, serial=True), PLAIN, seed=5, ticks=20)
+    faults = board.counter(6)
+    for noise in (b"\x09\x10\x11", b"\x00", bytes(range(1, 200)), b"\x00" * 50):
+        board.line.plain(board.now, noise)
+        board.poll()
+    assert board.counter(6) == faults + 2
+    assert board.state == "running"
+    for _ in range(3):
+        board.now += 50
+        board.tick()
+        board.now += 49
+        board.poll()
+    assert any(board.written[-1][1])
+
+
+def test_a_device_that_is_refused_never_runs():
+    """No memory for samples, for one: an error, and told to connect all the same it is idle."""
+    board = Board(ONE, random.Random(1), PLAIN, 0)
+    c, (_, into, out, taken) = board._c, board._memory
+    room, config = ctypes.c_size_t(ONE.room), ctypes.byref(board.config)
+    port = ctypes.byref(board._port)
+    assert c.shim_make(board.device, config, port, 0, into, out, room, taken, 3) == -1
+    board.connect()
+    for _ in range(3):
+        board.now += 50
+        board.tick()
+        board.poll()
+    assert board.state == "idle"
+    assert not any(any(i_pa) for _, i_pa in board.written)
+    assert board.host.samples == []

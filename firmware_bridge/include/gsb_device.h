@@ -54,7 +54,8 @@ struct gsb_device {
 #define GSB_HELLO_US 100000u
 
 /* Make a device, idle, and write 0 pA. The link must have been initialised (gsb_link_init);
- * it is copied. GSB_OK, or GSB_ERROR_ARGUMENT or GSB_ERROR_OUTPUT. */
+ * it is copied. GSB_OK; GSB_ERROR_ARGUMENT, and then it stays idle for ever; or
+ * GSB_ERROR_OUTPUT when that write failed, which is tried again at every call. */
 int gsb_device_init(struct gsb_device *device, const struct gsb_rig_config *config,
                     const struct gsb_port *port, const struct gsb_link *link,
                     struct gsb_taken *taken, uint32_t count);

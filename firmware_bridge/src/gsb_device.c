@@ -86,8 +86,10 @@ int gsb_device_init(struct gsb_device *device, const struct gsb_rig_config *conf
     device->link.features = 1;
     device->clock_us = port->now_us(port->context);
     outcome = gsb_rig_init(&device->rig, config, taken, count);
-    if (outcome == GSB_OK && (!link->type || link->cells != config->cells))
+    if (outcome == GSB_OK && (!link->type || link->cells != config->cells)) {
+        device->rig.taken = 0; /* without which a rig stays idle */
         outcome = GSB_ERROR_ARGUMENT;
+    }
     if (write_out(device) && outcome == GSB_OK)
         outcome = GSB_ERROR_OUTPUT;
     return outcome;

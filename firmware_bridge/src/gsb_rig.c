@@ -48,7 +48,8 @@ int gsb_rig_init(struct gsb_rig *rig, const struct gsb_rig_config *config,
     rig->write_due = 1;
     rig->newest = rig->in_force = rig->lag_us = rig->applied = GSB_NIL;
     if (!sound(config, taken, count)) {
-        rig->config.cells = GSB_CELLS_MAX;
+        /* As many zeros as the port was told of, so that it can write them. */
+        rig->config.cells = config->cells <= GSB_CELLS_MAX ? config->cells : 1;
         rig->last_error = GSB_ERROR_ARGUMENT;
         return GSB_ERROR_ARGUMENT;
     }
