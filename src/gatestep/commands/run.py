@@ -123,7 +123,12 @@ def _line(sweep: dict[str, Any], count: int) -> str:
 
 def _halt(control: Control) -> dict[str, Any]:
     """End the plan, and wait until what was in force before it is back."""
-    nothing = {"title": None, "sweeps": 0, "done": [], "why": "halted before the first sweep"}
+    nothing: dict[str, Any] = {
+        "title": None,
+        "sweeps": 0,
+        "done": [],
+        "why": "halted before the first sweep",
+    }
     try:
         if control.halt()["plan"] is None:
             return nothing
