@@ -55,7 +55,9 @@ static int welcome(struct gsb_link *link)
     if (items < 3 || in.bad)
         return GSB_ERROR_MESSAGE;
     link->opened = major == GSB_FRAMING_MAJOR && cells == link->cells;
-    return link->opened ? GSB_OPENED : GSB_ERROR_PEER;
+    if (!link->opened)
+        return GSB_ERROR_PEER;
+    return GSB_OPENED;
 }
 
 static int frame(struct gsb_link *link)
