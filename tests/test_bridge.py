@@ -16,13 +16,14 @@ import numpy as np
 import pytest
 import zmtp_reference as rfc
 from conftest import RawRig, make_rig, running, wait_until
-from framed_host import ANSWER, BYE, SAMPLE, WELCOME, encode
+from framed_host import ANSWER, BYE, HELLO, SAMPLE, WELCOME, encode
 from hypothesis import given
 from hypothesis import strategies as st
 from numba import typeof
 from serial_device import CDevice, bench, pack
 from test_hot import FORBIDDEN, NATIVE, calls_through_pointers, code_of, outside
 
+from gatestep import bridgehost
 from gatestep.bridge import carry, make_memory
 from gatestep.bridgefigures import BINS, note, percentiles, upper_nsec
 from gatestep.bridgehost import Expected, read_hello
@@ -233,13 +234,15 @@ def test_devices_that_cannot_be_served_are_told_why(tmp_path, hello, reason, wor
         assert made.bridge.figures()["connections"] == 0
 
 
-def test_a_second_hello_keeps_the_connection_and_a_new_start_takes_another(tmp_path):
-    """A hello said while we connected does no harm; after samples the device has started anew."""
+def test_a_second_hello_keeps_the_connection_and_a_new_start_takes_another(tmp_path, monkeypatch):
+    """A hello that crosses the welcome has none of its own; after samples it is a new start."""
+    monkeypatch.setattr(bridgehost, "_SAID_BEFORE_S", 60.0)
     with armed(tmp_path / "a") as server, bench(tmp_path, loop_of(server)) as made:
-        made.device.hello()
-        made.device.hello(interval_us=30.0)
+        made.device.write(2 * encode(HELLO, [1, 0, 1, 20.0, 1]))
         made.device.wait(WELCOME)
-        made.device.wait(WELCOME)
+        assert made.device.hear(0.05) is None
+        monkeypatch.setattr(bridgehost, "_SAID_BEFORE_S", 0.0)
+        made.device.join()  # as if the welcome had been lost
         assert made.device.ask(7, -65.0)[0] == 7
         assert made.bridge.figures()["connections"] == 1
         made.device.join()

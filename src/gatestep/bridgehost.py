@@ -31,6 +31,8 @@ from .serialframes import MAJOR, MINOR, Kind, Reason, encode_frame
 
 _CONNECT_S = 1.0
 _BETWEEN_ATTEMPTS_S = 0.25
+_SAID_BEFORE_S = 0.08
+"""A hello so soon after the welcome crossed it; devices repeat theirs every 0.1 s."""
 _LOOK_FOR_DEVICE_S = 0.1
 _MAX_CELLS = 8
 _FOR_A_SERVER = 1
@@ -98,7 +100,8 @@ class Bridge:
         self._memory = make_memory()
         self._line: Line | None = Line(device, baud)
         self._server: socket.socket | None = None
-        self._attempt_s, self._told = -1e9, ""
+        self._attempt_s = self._welcomed_s = -1e9
+        self._told = ""
         self._state, self.openings, self.connections = "greeting", 0, 0
         self._fault: BaseException | None = None
         self._memory.bridge[0].halt = 1
@@ -273,14 +276,18 @@ class Bridge:
     def _welcome(self, hello: Hello) -> None:
         """Connect to the server and welcome the device.
 
-        A hello before any sample was said while we connected, or the welcome was lost: the
-        connection is fresh and stays. After samples it is a device that has started anew.
+        After samples, a hello is of a device that has started anew. Before any, it was said
+        before the welcome came, and a second welcome would only void what the device has
+        begun; or, if some time has passed, the welcome was lost.
         """
         if self._server is None or self._memory.bridge[0].since_welcome:
             if self._server is not None:
                 self._say("the device has started anew")
             if not self._connect(hello):
                 return
+        elif time.monotonic() - self._welcomed_s < _SAID_BEFORE_S:
+            return
+        self._welcomed_s = time.monotonic()
         self._put(encode_frame(Kind.WELCOME, msgpack.packb([MAJOR, MINOR, hello.cells])))
         self._memory.bridge[0].welcomed = 1
         self._state = "carrying"
