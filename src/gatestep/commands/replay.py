@@ -6,7 +6,8 @@ import json
 from pathlib import Path
 
 from ..comparison import Difference, Verdict, compare
-from ..journalfile import JournalFile, open_journal
+from ..journalfile import open_journal
+from .bar import bar
 
 _IDENTICAL, _DIFFERENT, _INCOMPLETE = 0, 1, 3
 
@@ -22,8 +23,8 @@ def replay(path: Path, json_output: bool) -> int:
     JournalError
         When the file is no journal, or cannot be replayed at all.
     """
-    with open_journal(path) as journal:
-        verdict = _with_progress(journal)
+    with open_journal(path) as journal, bar("replaying") as progress:
+        verdict = compare(journal, progress)
     if json_output:
         print(json.dumps({"journal": str(path), **verdict.plain_data()}))
     else:
@@ -31,15 +32,6 @@ def replay(path: Path, json_output: bool) -> int:
     if not verdict.identical:
         return _DIFFERENT
     return _IDENTICAL if verdict.complete else _INCOMPLETE
-
-
-def _with_progress(journal: JournalFile) -> Verdict:
-    from rich.console import Console
-    from rich.progress import Progress
-
-    with Progress(console=Console(stderr=True), transient=True) as bar:
-        task = bar.add_task("replaying", total=max(len(journal.samples), 1))
-        return compare(journal, lambda done, _of: bar.update(task, completed=done))
 
 
 def _print(verdict: Verdict) -> None:

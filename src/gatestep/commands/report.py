@@ -10,6 +10,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from ..errors import FileError, GatestepError
+from .bar import Progress, bar
 from .report_rates import Row, conditions_of, ladders_of
 
 if TYPE_CHECKING:
@@ -44,8 +45,8 @@ def report(
     """
     from ..journalfile import open_journal
 
-    with open_journal(path) as journal:
-        result, rows, drawing = measure_journal(journal, drawn=figure is not None)
+    with open_journal(path) as journal, bar("measuring") as progress:
+        result, rows, drawing = measure_journal(journal, figure is not None, progress)
     if table is not None:
         _write_csv(table, rows)
         result["csv"] = str(table)
@@ -58,7 +59,9 @@ def report(
     return 0
 
 
-def measure_journal(journal: JournalFile, drawn: bool) -> tuple[Row, list[Row], Drawing | None]:
+def measure_journal(
+    journal: JournalFile, drawn: bool, progress: Progress = lambda _done, _of: None
+) -> tuple[Row, list[Row], Drawing | None]:
     """The result, its rows, and where they are wanted the sweeps for the figures."""
     from ..sweepmeasures import Measurer, tasks_of
     from .report_figures import Drawing
@@ -71,7 +74,8 @@ def measure_journal(journal: JournalFile, drawn: bool) -> tuple[Row, list[Row], 
     drawing = Drawing(title_of(journal)) if drawn else None
     measurer = Measurer(journal)
     measured = []
-    for task in tasks:
+    for done, task in enumerate(tasks):
+        progress(done, len(tasks))
         made, stretch = measurer.measure(task)
         measured.append(made)
         if drawing is not None:

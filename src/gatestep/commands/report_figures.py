@@ -278,8 +278,12 @@ def _largest(lines: list[Line]) -> float:
                default=0.0)  # fmt: skip
 
 
+_LONGEST_TITLE = 110  # characters that fit below a figure
+
+
 def _sign(figure: Any, title: str) -> None:
-    figure.supxlabel(title, fontsize=8, color="#555555", x=0.99, ha="right")
+    short = title if len(title) <= _LONGEST_TITLE else f"… {title[-_LONGEST_TITLE:]}"
+    figure.supxlabel(short, fontsize=8, color="#555555", x=0.99, ha="right")
 
 
 def _figure(width: float, height: float) -> Any:

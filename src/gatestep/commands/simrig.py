@@ -3,12 +3,11 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Iterator
-from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from ..errors import FileError
+from .bar import bar
 
 if TYPE_CHECKING:
     from ..simrig import Progress, SimRig
@@ -83,7 +82,7 @@ def simulate(
         connect_s=wait_s,
     ) as rig:
         summary = Summary(rig.cell_names, threshold_mv)
-        with _bar(f"simulated rig, {rig.pace}", not json_output) as progress:
+        with bar(f"simulated rig, {rig.pace}") as progress:
             trace = _run(rig, summary, out is not None, progress)
         figures = {
             "rig": str(loaded.path),
@@ -121,26 +120,6 @@ def _run(rig: SimRig, summary: Summary, keep: bool, progress: Progress) -> Trace
         done += ticks
         if done >= total:
             return trace
-
-
-@contextmanager
-def _bar(title: str, shown: bool) -> Iterator[Progress]:
-    """A progress bar on stderr, where there is someone to see it."""
-    from rich.console import Console
-    from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
-
-    console = Console(stderr=True)
-    columns = (TextColumn(title), BarColumn(), TextColumn("{task.percentage:3.0f} %"))
-    bar = Progress(
-        *columns,
-        TimeRemainingColumn(),
-        console=console,
-        transient=True,
-        disable=not (shown and console.is_terminal),
-    )
-    with bar:
-        task = bar.add_task(title, total=None)
-        yield lambda done, total: bar.update(task, completed=done, total=total)
 
 
 def _text(figures: dict[str, Any]) -> str:
