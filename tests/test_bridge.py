@@ -236,12 +236,12 @@ def test_devices_that_cannot_be_served_are_told_why(tmp_path, hello, reason, wor
 
 def test_a_second_hello_keeps_the_connection_and_a_new_start_takes_another(tmp_path, monkeypatch):
     """A hello that crosses the welcome has none of its own; after samples it is a new start."""
-    monkeypatch.setattr(bridgehost, "_SAID_BEFORE_S", 60.0)
+    monkeypatch.setattr(bridgehost, "SAID_BEFORE_S", 60.0)
     with armed(tmp_path / "a") as server, bench(tmp_path, loop_of(server)) as made:
         made.device.write(2 * encode(HELLO, [1, 0, 1, 20.0, 1]))
         made.device.wait(WELCOME)
         assert made.device.hear(0.05) is None
-        monkeypatch.setattr(bridgehost, "_SAID_BEFORE_S", 0.0)
+        monkeypatch.setattr(bridgehost, "SAID_BEFORE_S", 0.0)
         made.device.join()  # as if the welcome had been lost
         assert made.device.ask(7, -65.0)[0] == 7
         assert made.bridge.figures()["connections"] == 1

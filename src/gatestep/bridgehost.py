@@ -31,7 +31,7 @@ from .serialframes import MAJOR, MINOR, Kind, Reason, encode_frame
 
 _CONNECT_S = 1.0
 _BETWEEN_ATTEMPTS_S = 0.25
-_SAID_BEFORE_S = 0.08
+SAID_BEFORE_S = 0.08
 """A hello so soon after the welcome crossed it; devices repeat theirs every 0.1 s."""
 _LOOK_FOR_DEVICE_S = 0.1
 _MAX_CELLS = 8
@@ -285,7 +285,7 @@ class Bridge:
                 self._say("the device has started anew")
             if not self._connect(hello):
                 return
-        elif time.monotonic() - self._welcomed_s < _SAID_BEFORE_S:
+        elif time.monotonic() - self._welcomed_s < SAID_BEFORE_S:
             return
         self._welcomed_s = time.monotonic()
         self._put(encode_frame(Kind.WELCOME, msgpack.packb([MAJOR, MINOR, hello.cells])))

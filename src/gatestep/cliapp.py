@@ -32,6 +32,7 @@ ORDER = (
     "curves",
     "bench",
     "bridge",
+    "supervise",
     "firmware",
 )
 """Commands as the help lists them: what is needed first stands first."""

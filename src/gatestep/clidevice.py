@@ -32,3 +32,31 @@ def bridge(
     from .commands.bridge import bridge as body
 
     return body(device, baud, server, rig, json_output)
+
+
+@app.command()
+def supervise(
+    device: Device,
+    baud: Baud = BAUD,
+    assignments: Annotated[
+        list[str] | None,
+        typer.Option("--set", metavar="NAME=VALUE", help="As K.gmax_ns=120; may be repeated."),
+    ] = None,
+    every: Annotated[
+        int | None,
+        typer.Option("--every", metavar="TICKS", min=0, help="One sample in so many; 0: none."),
+    ] = None,
+    arm: Annotated[bool, typer.Option("--arm", help="Arm at once.")] = False,
+    trace: Annotated[
+        Path | None, typer.Option("--trace", metavar="FILE", help="Write its samples as CSV.")
+    ] = None,
+    seconds: Annotated[float | None, typer.Option("--seconds", help="End after so long.")] = None,
+    json_output: Json = False,
+) -> int:
+    """Watch over a model that runs on the device: set, arm, disarm, log; disarmed at the end.
+
+    Lines on stdin are orders: arm, disarm, set NAME=VALUE, show, stop.
+    """
+    from .commands.supervise import supervise as body
+
+    return body(device, baud, assignments or [], every, arm, trace, seconds, json_output)
