@@ -6,10 +6,13 @@ import re
 import signal
 import subprocess
 import sys
+import time
 from contextlib import contextmanager
 
+import msgpack
 import numpy as np
 import pytest
+import zmq
 from conftest import Running, make_rig, wait_until
 from firmware_build import BRIDGE, software_rig
 
@@ -300,6 +303,46 @@ def test_a_server_that_goes_takes_the_rig_to_zero(serving, tmp_path):
     assert rig.end["error"] == -7
     with c_rig(f"ipc://{tmp_path}/none", seconds=0.1) as rig:
         assert rig.finish() == 2
+
+
+def test_libzmq_itself_takes_the_c_rig_for_a_peer(tmp_path):
+    """A ROUTER of libzmq with heartbeats, for longer than it waits for a PONG: none is missed."""
+    context = zmq.Context()
+    router = context.socket(zmq.ROUTER)
+    router.setsockopt(zmq.LINGER, 0)
+    router.setsockopt(zmq.RCVTIMEO, 1000 * PATIENCE_S)
+    router.setsockopt(zmq.HEARTBEAT_IVL, 20)
+    router.setsockopt(zmq.HEARTBEAT_TIMEOUT, 200)
+    endpoint = f"ipc://{tmp_path}/router"
+    router.bind(endpoint)
+    samples = []
+    try:
+        with c_rig(endpoint, seconds=0.006, interval_us=20) as rig:
+            for _ in range(300):
+                peer, message = router.recv_multipart()
+                samples.append(msgpack.unpackb(message))
+                time.sleep(0.002)
+                router.send_multipart([peer, msgpack.packb([samples[-1][0], 1, 5, 12.5])])
+            assert rig.finish() == 0
+    finally:
+        context.destroy(linger=0)
+    assert [s[0] for s in samples] == list(range(300))
+    assert [s[2] for s in samples] == [None, None, *range(298)]
+    assert (rig.end["answers"], rig.end["faults"]) == (300, 0)
+
+
+def test_the_libzmq_lane_serves_it_as_well(serving):
+    """The server's other lane gives the C rig the same spikes, to the last digit printed."""
+    spikes = []
+    for lane in ("direct", "libzmq"):
+        server = _squid(serving, lane=lane)
+        server.control.arm()
+        endpoint = server.server.endpoints()["loop"]
+        keys = {"interval_us": 10, "seconds": 0.05, "limit_pa": 200_000, "steps": [(0, 99, 300)]}
+        with c_rig(endpoint, **keys) as rig:
+            assert rig.finish() == 0
+        spikes.append(rig.spikes)
+    assert spikes[0] == spikes[1] != []
 
 
 def test_headers_document_every_error():
