@@ -205,7 +205,7 @@ def fail_round(pick: random.Random) -> dict[str, Any]:
             if loud != 1:
                 faults.append(f"said {loud} times")
             if later["state"] != "armed":
-                faults.append(f"the loop is {later['state']}")
+                faults.append(f"the loop is {later['state']}: {later['fault']}")
             if found["samples"] != later["recording"]["samples"]:
                 faults.append("the file has not what the server says")
             words = [e for e in journal.events if e.kind == "dropped"]
