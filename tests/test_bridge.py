@@ -20,7 +20,7 @@ from framed_host import ANSWER, BYE, HELLO, SAMPLE, WELCOME, encode
 from hypothesis import given
 from hypothesis import strategies as st
 from numba import typeof
-from serial_device import CDevice, bench, pack
+from serial_device import CDevice, FakeDevice, Pty, bench, pack
 from test_hot import FORBIDDEN, NATIVE, calls_through_pointers, code_of, outside
 
 from gatestep import bridgehost
@@ -429,8 +429,6 @@ def test_its_loop_never_meets_the_interpreter():
 
 def test_from_the_command_line(tmp_path):
     """``gatestep bridge``: a second told on stderr, the report as JSON, ended by a signal."""
-    from serial_device import FakeDevice, Pty
-
     pty = Pty(tmp_path)
     device = FakeDevice(pty)
     with armed(tmp_path / "a") as server:
@@ -468,6 +466,7 @@ def test_from_the_command_line(tmp_path):
         (["."], "is no serial device"),
         (["/dev/null"], "is it a serial device?"),
         (["/dev/null", "--rig", "nowhere.toml"], "nowhere.toml"),
+        (["/dev/null", "--server", "localhost"], "is not tcp://ADDRESS:PORT"),
     ],
 )
 def test_wrong_arguments_are_errors_in_words(arguments, words, monkeypatch, capsys):

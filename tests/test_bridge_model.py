@@ -8,6 +8,7 @@ import os
 import signal
 import subprocess
 import sys
+import termios
 import threading
 import time
 from contextlib import contextmanager
@@ -35,7 +36,7 @@ from serial_device import FakeDevice, Pty, pack
 
 from gatestep.bridgeline import Line
 from gatestep.bridgemodel import Supervisor, Trace, read_trace
-from gatestep.errors import ControlError, LinkError
+from gatestep.errors import ControlError, LinkError, MissingExtraError
 
 NAMES = ["K.gmax_ns", "K.reversal_mv", "trace.every_ticks"]
 
@@ -49,7 +50,11 @@ class ModelDevice(threading.Thread):
         self.values = [12.5, -77.0, 0.0]
         self.armed, self.open, self.over = False, False, threading.Event()
         self.done, self.last, self.seq, self.heard = [], None, 0, []
-        self.frames = 0
+        self.orders = 0
+
+    def loses(self, place):
+        """Of three orders one is not heard, and of one the answer is lost."""
+        return self.lossy and self.orders % 3 == place
 
     def run(self):
         greeted = 0.0
@@ -60,8 +65,8 @@ class ModelDevice(threading.Thread):
             frame = self.line.hear(0.01)
             if frame is not None:
                 self.heard.append(frame.kind)
-                self.frames += 1
-                if not (self.lossy and self.frames % 3 == 0):
+                self.orders += frame.kind in (ASK, PARAMETER, ARM, DISARM)
+                if frame.kind in (WELCOME, BYE, ALIVE) or not self.loses(0):
                     self.act(*frame)
             if self.open and self.values[2]:
                 self.trace()
@@ -75,14 +80,15 @@ class ModelDevice(threading.Thread):
             self.line.send(HELLO, self.hello)
         elif kind == ASK:
             token, index = items
-            self.line.send(IS, [token, index, len(NAMES), NAMES[index], self.values[index]])
+            if not self.loses(1):
+                self.line.send(IS, [token, index, len(NAMES), NAMES[index], self.values[index]])
         elif kind in (PARAMETER, ARM, DISARM):
             self.order(kind, *items)
 
     def order(self, kind, token, *arguments):
         if self.last is None or self.last[0] != token:
             self.last = token, self.carry_out(kind, *arguments)
-        if not (self.lossy and self.frames % 4 == 0):
+        if not self.loses(1):
             self.line.send(DONE, list(self.last))
 
     def carry_out(self, kind, *arguments):
@@ -125,7 +131,7 @@ def supervised(folder, **options):
 
 @pytest.mark.parametrize("lossy", [False, True])
 def test_parameters_arming_and_samples(tmp_path, lossy):
-    """Each order is carried out exactly once, though a third of what the device hears is lost."""
+    """Each order is carried out exactly once, though orders and answers are lost."""
     with supervised(tmp_path, lossy=lossy) as (there, supervisor, traces):
         assert {p.name: p.value for p in supervisor.parameters.values()} == dict(
             zip(NAMES, [12.5, -77.0, 0.0], strict=True)
@@ -193,6 +199,26 @@ def test_a_device_that_is_unplugged_ends_the_supervision(tmp_path):
         there.line.pty.unplug()
         with pytest.raises(LinkError, match="is gone"):
             supervisor.attend(PATIENCE_S)
+
+
+def test_without_pyserial_the_extra_is_named(tmp_path, monkeypatch):
+    """An error in words that says what to install."""
+    monkeypatch.setitem(sys.modules, "serial", None)
+    with pytest.raises(MissingExtraError, match=r"pip install 'gatestep\[serial\]'"):
+        Line(str(tmp_path / "device"), 9600)
+
+
+def test_a_line_is_set_as_the_bridge_needs_it(tmp_path):
+    """Reading blocks until one byte is there, writing never does, and nobody else may open it."""
+    pty = Pty(tmp_path)
+    with Line(str(pty.path), 115_200) as line:
+        settings = termios.tcgetattr(line.reading)
+        assert (settings[6][termios.VMIN], settings[6][termios.VTIME]) == (1, 0)
+        assert os.get_blocking(line.reading)
+        assert not os.get_blocking(line.writing)
+        with pytest.raises(LinkError, match="in use by another program"):
+            Line(str(pty.path), 115_200)
+    pty.close()
 
 
 @given(st.binary(max_size=60), st.lists(st.floats(width=32, allow_nan=False), max_size=4))

@@ -12,6 +12,7 @@ Source: ``firmware_bridge/SPEC.md``, "How a line opens".
 
 from __future__ import annotations
 
+import re
 import socket
 import threading
 import time
@@ -29,6 +30,7 @@ from .dealer import connect
 from .errors import LinkError
 from .serialframes import MAJOR, MINOR, Kind, Reason, encode_frame
 
+_ENDPOINT = re.compile(r"tcp://[^/]+:\d{1,5}|ipc://.+")
 _CONNECT_S = 1.0
 _BETWEEN_ATTEMPTS_S = 0.25
 SAID_BEFORE_S = 0.08
@@ -84,7 +86,8 @@ class Bridge:
     Raises
     ------
     MissingExtraError, LinkError
-        As :class:`gatestep.bridgeline.Line` does: the device must be there to begin with.
+        As :class:`gatestep.bridgeline.Line` does: the device must be there to begin with; and
+        for an endpoint that is none.
     """
 
     def __init__(
@@ -95,6 +98,8 @@ class Bridge:
         say: Callable[[str], None],
         expected: Expected | None = None,
     ) -> None:
+        if not _ENDPOINT.fullmatch(endpoint):
+            raise LinkError(f"endpoint {endpoint!r} is not tcp://ADDRESS:PORT or ipc://PATH")
         self.device, self.baud, self.endpoint, self._say = device, baud, endpoint, say
         self._expected = expected or Expected()
         self._memory = make_memory()
@@ -298,7 +303,7 @@ class Bridge:
             return False
         try:
             self._server = connect(self.endpoint, _CONNECT_S)
-        except LinkError as fault:
+        except (LinkError, ValueError, OverflowError) as fault:  # the last two: of its address
             self._state = "no server"
             self._say_once(f"{fault}; tried again at each hello of the device")
             self._put(_goodbye(Reason.SERVER_GONE))

@@ -71,8 +71,8 @@ def _shake_hands(link: socket.socket, endpoint: str) -> None:
     mechanism = theirs[12:32].rstrip(b"\0").decode("ascii", "replace")
     if mechanism != "NULL":
         raise LinkError(
-            f"loop endpoint {endpoint}: the server asks for {mechanism}; the measuring client "
-            "speaks NULL only. Measure the rig file's private server instead: stop this one"
+            f"loop endpoint {endpoint}: the server asks for {mechanism}; this client speaks NULL "
+            "only, as a server without CURVE keys does: on loopback, ipc or by a list of peers"
         )
     link.sendall(GREETING_BYTES[_UP_TO_VERSION:] + bytes([4, len(_READY)]) + _READY)
     flags, size = _read(link, 2)
