@@ -214,7 +214,7 @@ def test_the_clients_methods(serving):
         ("K.gmax_ns", [5.0]),
         ("K.gmax_ns", {"v": 5.0}),
         ("K.gmax_ns", {1, 2}),
-        ("K.gmax_ns", object()),
+        pytest.param("K.gmax_ns", object(), id="object"),
         ("K.gmax_ns", "\ud800"),
         ("\ud800.gmax_ns", 1.0),
         ("Q.gmax_ns", 1.0),

@@ -184,7 +184,10 @@ def test_without_a_rest_one_sweep_follows_the_other(tmp_path):
 
 
 def test_a_conductance_comes_gradually_where_the_plan_says_so(tmp_path):
-    """Over ramp_ms before a sweep gmax goes evenly from the old to the new value."""
+    """Over ramp_ms before a sweep gmax goes evenly to its new value, at first from nothing.
+
+    The plan arms the loop: nothing flowed before, whatever model was in force.
+    """
     text = """
 title = "ladder"
 [plan]
@@ -203,11 +206,81 @@ scale = [3.0, 1.0]
     up, down = journal.sweeps
     way = np.arange(1, 101) / 100
     before = samples["i_pa"][up.start - 100 : up.start, 0]
-    np.testing.assert_allclose(before, -10.0 * (10.0 + 20.0 * way), rtol=1e-12)
+    np.testing.assert_allclose(before, -10.0 * (30.0 * way), rtol=1e-12, atol=1e-9)
     before = samples["i_pa"][down.start - 100 : down.start, 0]
     np.testing.assert_allclose(before, -10.0 * (30.0 - 20.0 * way), rtol=1e-12)
     assert (samples["i_pa"][down.start : down.stop, 0] == -100.0).all()
+    assert not samples["i_pa"][: up.start - 100].any()
     assert compare(journal).identical
+
+
+WITHOUT = """
+title = "without"
+[plan]
+ramp_ms = {ramp}
+[[sweep]]
+name = "without"
+duration_ms = 10
+scale = 0.0
+[[sweep.stimulus]]
+kind = "noise"
+start_ms = 0
+stop_ms = 10
+sd_pa = 1
+seed = 3
+"""
+
+
+@pytest.mark.parametrize("ramp", [0, 5])
+def test_a_first_sweep_without_the_conductance_injects_none(tmp_path, ramp):
+    """From the first live answer on there is the stimulus alone, with a ramp and without."""
+    with lab(tmp_path) as here:
+        keep_path(here)
+        here.run(WITHOUT.format(ramp=ramp))
+        assert here.ended()["why"] == "complete"
+    samples, journal = recorded(here)
+    live = samples[samples["flags"] & LIVE != 0]
+    assert len(live) == 500 + 50 * ramp
+    np.testing.assert_array_equal(live["i_pa"], live["stimulus_pa"])
+    assert compare(journal).identical
+
+
+@pytest.mark.parametrize("verb", ["disarm", "reset", "halt"])
+def test_what_is_ordered_before_the_first_sweep_is_not_overruled(tmp_path, verb):
+    """Between the request and the first sweep a disarm, a reset or a halt ends the plan."""
+    with lab(tmp_path) as here:
+        keep_path(here)
+        here.run(LONG)
+        here.control.ask(verb)
+        assert here.ended()["ended"] == 0
+        at = here.seq
+        wait_until(lambda: here.seq > at + 10_000, "samples")
+        assert here.control.status()["state"] == "idle"
+    samples, _ = recorded(here)
+    assert not (samples["flags"] & LIVE).any()
+
+
+def test_a_plan_judges_every_cell_that_it_arms(tmp_path):
+    """A cell whose model the loop cannot carry bars a plan for the other one, unless forced."""
+    cells = [
+        {"name": "a", "model": leak(tmp_path, 10.0, -70.0), "limits": {"current_pa": 1e5}},
+        {
+            "name": "b",
+            "model": "squid-axon",
+            "capacitance_pf": 3.0,
+            "limits": {"current_pa": 1e5},
+        },
+    ]
+    loop = {"interval_us": 50.0, "anticipate": False}
+    with running(tmp_path, cell=cells, loop=loop) as server:
+        here = Lab(tmp_path, server)
+        with RawRig(server.server.endpoints()["loop"]) as rig:
+            for k in range(300):
+                rig.ask(k, V_MV, V_MV, t_us=50 * k)
+            wait_until(lambda: here.control.status()["seq"], "samples")
+            with pytest.raises(ControlError, match="run: cell b"):
+                here.run(LONG.replace('name = "long"', 'name = "long"\ncell = "a"'))
+            assert here.control.status()["state"] == "idle"
 
 
 LONG = """
@@ -300,6 +373,7 @@ def test_what_a_plan_does_by_itself_is_refused_meanwhile(tmp_path):
         here.playing()
         for refused in (
             lambda: here.control.load("leak"),
+            lambda: here.control.swap(),
             lambda: here.control.set("leak.gmax_ns", 1.0),
             lambda: here.control.arm(),
             lambda: here.run(LONG),
@@ -309,7 +383,14 @@ def test_what_a_plan_does_by_itself_is_refused_meanwhile(tmp_path):
         here.control.mark("still here")
         here.control.disarm()
         assert here.ended()["why"] == "the loop was disarmed"
+        # None of what was refused has left a trace: all of it can be done now.
+        with pytest.raises(ControlError, match="no model is prepared"):
+            here.control.swap()
+        assert here.control.status()["cells"][0]["parameters"]["leak.gmax_ns"] == 10.0
         here.control.load("leak")
+        here.control.swap()
+        here.run(LONG)
+        here.playing()
 
 
 def test_a_trip_ends_the_plan(tmp_path):

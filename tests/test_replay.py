@@ -138,6 +138,20 @@ def test_damage_stops_the_replay_and_is_told(quiet, tmp_path, capsys):
     assert "not compared" in said
 
 
+def test_a_damaged_event_is_no_wrong_computation(quiet, tmp_path, capsys):
+    """Where an order cannot be read, what follows is not compared, and the journal is blamed."""
+    data = bytearray(quiet.read_bytes())
+    with open_journal(quiet) as journal:
+        place = next(iter(journal._index.of(Kind.EVENTS)))
+    data[place.offset + 40] ^= 1
+    damaged = tmp_path / "damaged.journal"
+    damaged.write_bytes(data)
+    assert replay(damaged, json_output=False) == 3
+    said = capsys.readouterr().out
+    assert said.startswith("nothing compared")
+    assert "damaged: the block at byte" in said
+
+
 def test_the_command_tells_programs_and_people(quiet, tmp_path, capsys):
     """Exit status 0 and 'identical'; JSON with the figures; what is no journal is an error."""
     assert replay(quiet, json_output=False) == 0

@@ -98,9 +98,9 @@ def compare(
     JournalError
         When the journal's rig or its first models cannot be read.
     """
+    limit = _first_gap(journal)
     verdict = Verdict(len(journal.samples), notes=_notes(journal))
     replay = Replay(journal)
-    limit = _first_gap(journal)
     try:
         for stretch in replay.run(limit):
             _compare(verdict, stretch, journal)
@@ -108,10 +108,10 @@ def compare(
     except JournalError as fault:
         verdict.stopped = str(fault)
     verdict.unlike = replay.unlike
-    if limit is not None and verdict.stopped is None and limit < len(journal.samples):
+    if limit is not None and verdict.stopped is None:
         verdict.stopped = (
-            f"the record has a gap before sample {limit}: samples or orders are missing there, "
-            "so what followed cannot be computed"
+            f"the record has a gap before sample {limit}: samples, orders or models are missing "
+            "or damaged there, so what followed cannot be computed"
         )
     return verdict
 
@@ -119,6 +119,8 @@ def compare(
 def _first_gap(journal: JournalFile) -> int | None:
     """Where the journal first lacks something that the loop did."""
     places = [e.position for e in journal.events if e.kind in _GONE]
+    _ = journal.models  # reading them finds what is damaged
+    places += [found.position for found in journal.damaged]
     return min(places) if places else None
 
 
@@ -166,6 +168,12 @@ def _notes(journal: JournalFile) -> list[str]:
     version = journal.header["program"]["version"]
     if version != __version__:
         notes.append(f"recorded by version {version}, replayed by {__version__}")
+    for event in journal.events:
+        if event.kind in _GONE:
+            lost = event.fields.get("samples", event.fields.get("entries"))
+            notes.append(f"{event.kind} before sample {event.position}: {lost} entries")
+    for found in journal.damaged:
+        notes.append(f"damaged: the block at byte {found.offset}: {found.reason}")
     if journal.tail is not None:
         tail = journal.tail
         notes.append(

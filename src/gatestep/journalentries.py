@@ -220,8 +220,6 @@ def _of_order_kind(entry: Any, code: int) -> Event:
         return {"cell": cell, "which": which, "index": index, "value": value}
     if code == Order.PLAY:
         return {"cell": cell, "slot": index, "ticks": int(value)}
-    if code == Order.RAMP:
-        return {"cell": cell, "ticks": int(value)}
     return {"cell": cell} if code in {Order.FORESEE, Order.REST} else {}
 
 

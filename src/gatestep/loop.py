@@ -4,7 +4,8 @@
 ordered to stop. What it shares with the rest of the server are messages: orders
 come in over an inproc socket, and blocks of log entries, each led by a copy of the
 loop's own record, go out over another. Orders are taken between two samples, and
-the order of work is always reply first, log after.
+the order of work is reply first, log after, save for what was ordered for a sample: that is
+done, and logged, before the sample's step.
 
 Arrays that the loop reads and others prepare: the banks and their tables. A control
 thread writes only banks that are not in force and hands them over with a ``SWAP``; the
@@ -109,7 +110,7 @@ _LOOP_SIZE = LOOP.itemsize
 _ENTRY_SIZE = ENTRY.itemsize
 _ORDER_SIZE = ORDER.itemsize
 _NO_ROOM, _DROPPED = int(Outcome.NO_ROOM), int(Outcome.DROPPED)
-_CANCEL, _REST = int(Order.CANCEL), int(Order.REST)
+_CANCEL, _REST, _PLAY = int(Order.CANCEL), int(Order.REST), int(Order.PLAY)
 # Typed, so that compiled callers share one body: a plain literal makes a type of its own.
 _SAMPLE, _ORDER, _TRIP = (np.int64(e) for e in (Entry.SAMPLE, Entry.ORDER, Entry.TRIP))
 _HOLD, _RELEASE, _CLOCK_JUMP = (np.int64(e) for e in (Entry.HOLD, Entry.RELEASE, Entry.CLOCK_JUMP))
@@ -206,9 +207,12 @@ def _flush(m: Any, now: int) -> None:
     """[hot] Hand the waiting entries to the log; if it is full they are counted lost."""
     desk = m.desk[0]
     size = _LOOP_SIZE + desk.entries * _ENTRY_SIZE
-    m.loop[0].undelivered = m.lane[0].undelivered
+    loop = m.loop[0]
+    loop.undelivered = m.lane[0].undelivered
+    for k in range(np.uint64(loop.cells)):
+        loop.bank[k] = m.cells[k].bank
     if not send(desk.log, desk.block_at, size):
-        m.loop[0].records_lost += desk.entries
+        loop.records_lost += desk.entries
     desk.entries = 0
     desk.untold = 0
     desk.urgent = 0
@@ -317,8 +321,9 @@ def _log_order(m: Any, order: Any, outcome: int, seq: int, now: int) -> None:
 def _plan(m: Any, order: Any, now: int) -> None:
     """[hot] Put an order on the agenda; the planner gives them in the order of their samples."""
     desk = m.desk[0]
-    if desk.planned == _AGENDA:
-        _log_order(m, order, _NO_ROOM, NIL, now)
+    if desk.planned == _AGENDA or not m.loop[0].held:
+        outcome = _NO_ROOM if m.loop[0].held else _DROPPED
+        _log_order(m, order, outcome, NIL, now)
         return
     m.agenda[np.uint64((desk.next + desk.planned) % _AGENDA)] = order
     desk.planned += 1
@@ -351,13 +356,19 @@ def _rest(m: Any, seq: int, now: int) -> None:
 
 
 @inner
+def _waits_for_ramp(m: Any, order: Any) -> bool:
+    """[hot] Whether it would begin a stimulus before its cell's conductance has come."""
+    return order.kind == _PLAY and m.cells[np.uint64(order.cell)].ramp_left > 0
+
+
+@inner
 def _keep_agenda(m: Any, seq: int, now: int) -> None:
     """[hot] Carry out what was to be done before the step of this sample."""
     desk = m.desk[0]
     _rest(m, seq, now)
     while desk.planned > 0:
         order = m.agenda[np.uint64(desk.next)]
-        if order.at > seq:
+        if order.at > seq or _waits_for_ramp(m, order):
             return
         _log_order(m, order, obey(m, order, seq, now), seq, now)
         desk.next = (desk.next + 1) % _AGENDA
@@ -404,10 +415,11 @@ def _answer_holder(m: Any, size: int, received: int) -> None:
     """[hot] Answer the rig that holds the loop, or now takes hold of it; then log."""
     lane, loop, sample, answer = m.lane[0], m.loop[0], m.sample[0], m.answer[0]
     trips, jumps, held = loop.trips, loop.clock_jumps, loop.held
-    if not held:
-        begin_session(loop, m.cells, m.past)
     found = np.int64(WAS_MALFORMED)
     if decode(loop, lane.message, size, sample):
+        if not held:
+            _clear_agenda(m, received)
+            begin_session(loop, m.cells, m.past)
         if not loop.running or sample.seq > loop.seq:
             _keep_agenda(m, sample.seq, received)
             play(loop, m.cells, m.stimulus, sample.seq)

@@ -86,6 +86,7 @@ class OrderLine:
         value: float = 0.0,
         choice: Choice | None = None,
         at: int = int(NIL),
+        ramp: tuple[int, bool] = (0, False),
         **meaning: Any,
     ) -> int:
         """Send an order; returns its number.
@@ -98,8 +99,10 @@ class OrderLine:
             How the cell anticipates from then on.
         at : int
             The sample before whose step it acts; at once when left out.
+        ramp : (int, bool)
+            Of a ``SWAP``: over how many ticks gmax changes, and whether from 0 nS.
         **meaning
-            What the record is to say of it beyond that; ``kind`` in it renames the event.
+            What the record is to say of it beyond that; ``event`` in it renames the event.
 
         Raises
         ------
@@ -110,6 +113,9 @@ class OrderLine:
         order = records(ORDER)
         order[0].number, order[0].kind, order[0].at = self._sent, kind, at
         order[0].cell, order[0].index, order[0].value = cell, index, value
+        if kind == Order.SWAP:
+            order[0].ramp_ticks, order[0].from_zero = ramp
+            meaning["ramp_ticks"], meaning["from_zero"] = ramp
         if choice is not None:
             order[0].on, order[0].substeps = choice.on, choice.substeps
             order[0].alpha, order[0].beta = choice.alpha, choice.beta

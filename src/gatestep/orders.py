@@ -34,8 +34,7 @@ class Order(IntEnum):
     FORESEE = 8
     PLAY = 9
     REST = 10  # never sent: the loop's own, when a stimulus has come to its end
-    RAMP = 11
-    CANCEL = 12
+    CANCEL = 11
 
 
 class Outcome(IntEnum):
@@ -56,7 +55,9 @@ ORDER = np.dtype(
         ("at", "i8"),  # the sample before whose step it acts; NIL for at once
         ("cell", "i8"),
         ("index", "i8"),  # bank for SWAP, conductance for SET_*, slot for PLAY
-        ("value", "f8"),  # ticks for PLAY and RAMP; 1 for a SWAP whose gates go on
+        ("value", "f8"),  # ticks for PLAY; 1 for a SWAP whose gates go on
+        ("ramp_ticks", "i8"),  # of a SWAP: how long the change of gmax takes
+        ("from_zero", "i8"),  # whether that starts from 0 nS, since nothing flowed before
         ("on", "i8"),  # how the cell anticipates, for SWAP and FORESEE
         ("substeps", "i8"),
         ("alpha", "f8"),
@@ -73,7 +74,7 @@ _ORDER_EVENTS = np.array([Event.ARM, Event.DISARM, Event.RESET], dtype=np.int64)
 _ARM, _RESET, _STOP = int(Order.ARM), int(Order.RESET), int(Order.STOP)
 _SWAP, _FORESEE = int(Order.SWAP), int(Order.FORESEE)
 _SET_GMAX, _SET_REVERSAL = int(Order.SET_GMAX), int(Order.SET_REVERSAL)
-_PLAY, _RAMP = int(Order.PLAY), int(Order.RAMP)
+_PLAY = int(Order.PLAY)
 _CANCEL = int(Order.CANCEL)
 _DONE, _WAS_TRIPPED = int(Outcome.DONE), int(Outcome.TRIPPED)
 _WAS_WRONG_TICK, _WAS_STOPPING = int(Outcome.WRONG_TICK), int(Outcome.STOPPING)
@@ -116,29 +117,16 @@ def _foresee(shadow: Any, order: Any) -> None:
 
 
 @inner
-def _begin_ramp(cell: Any, bank: Any, ticks: int) -> None:
-    """[hot] Let what changes gmax between now and the next step do so over ``ticks``."""
+def _begin_ramp(cell: Any, old: Any, new: Any, ticks: int, from_old: bool) -> None:
+    """[hot] Let gmax go to the new bank's over ``ticks``; the old bank gets its own again."""
     for c in range(_MOST):
-        if cell.ramp_left == 0:
-            cell.ramp_to_ns[c] = bank.gmax_ns[c]
-        cell.ramp_from_ns[c] = bank.gmax_ns[c]
+        present = old.gmax_ns[c]
+        if cell.ramp_left > 0:
+            old.gmax_ns[c] = cell.ramp_to_ns[c]
+        cell.ramp_from_ns[c] = present if from_old else 0.0
+        cell.ramp_to_ns[c] = new.gmax_ns[c]
     cell.ramp_ticks = ticks
     cell.ramp_left = ticks
-
-
-@inner
-def _hand_ramp_over(cell: Any, old: Any, new: Any, goes_on: bool) -> None:
-    """[hot] A ramp that has just begun leads to the new bank's gmax; any other ends."""
-    if cell.ramp_left == 0:
-        return
-    begun = cell.ramp_left == cell.ramp_ticks
-    for c in range(_MOST):
-        old.gmax_ns[c] = cell.ramp_to_ns[c]
-        cell.ramp_to_ns[c] = new.gmax_ns[c]
-        if not goes_on:
-            cell.ramp_from_ns[c] = 0.0
-    if not begun:
-        cell.ramp_left = 0
 
 
 @inner
@@ -149,7 +137,7 @@ def _swap(cell: Any, banks: Any, table: Any, order: Any) -> None:
     """
     goes_on = order.value != 0.0
     old, new = banks[np.uint64(cell.bank)], banks[np.uint64(order.index)]
-    _hand_ramp_over(cell, old, new, goes_on)
+    _begin_ramp(cell, old, new, order.ramp_ticks, goes_on and order.from_zero == 0)
     cell.bank = order.index
     if cell.settled and not goes_on:
         settle(new, table, cell.x, cell.v_mv)
@@ -190,8 +178,6 @@ def _obey_cell(m: Any, order: Any) -> None:
         _set_gmax(cell, bank, order)
     elif order.kind == _SET_REVERSAL:
         bank.reversal_mv[np.uint64(order.index)] = order.value
-    elif order.kind == _RAMP:
-        _begin_ramp(cell, bank, np.int64(order.value))
 
 
 @inner

@@ -41,7 +41,7 @@ class PlannedSweep:
     cell, model : str or None
         None: the only cell, the model in force. A model is a shipped name or a whole path.
     scale : float
-        Factor on every gmax of the model's file.
+        Factor on every gmax: of the model's file, or of the model in force as it is set.
     parameters : dict
         Values in place of the file's, such as ``K.gmax_ns``; the factor is not on them.
     duration_ms, ramp_ms, pause_ms : float

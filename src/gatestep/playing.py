@@ -26,9 +26,9 @@ from .shelf import Ready, Shelf
 from .spikes import HYSTERESIS_MV
 from .states import State
 from .stimulus import waveform
-from .sweepsettings import PreparedSweep
+from .sweepsettings import PreparedSweep, Setting
 from .watch import LoopEvent, Watch
-from .wire import CLIPPED, LATE, NIL, REPEAT
+from .wire import CLIPPED, LATE, LIVE, NIL, REPEAT
 
 LEAD_S = 0.1
 """Time from the request until the first sweep begins."""
@@ -46,6 +46,7 @@ class _Played:
     spikes: int = 0
     late: int = 0
     clipped: int = 0
+    dead: int = 0  # answers that were not live
     samples: int = 0
     below: bool = False
 
@@ -65,11 +66,13 @@ class _Run:
     following: int = 0  # the sweep being prepared, or ordered
     ordered: bool = False
     swaps: dict[int, Ready] = field(default_factory=dict)  # by the number of their order
+    lost: int = 0  # entries that the loop's log had lost when the plan began
     armed: bool = False
     arming: int = 0
     session: int = 0  # of the rig that holds the loop
     why: str | None = None  # it has ended
-    restored: bool = False  # what was in force before is ordered back
+    restoring: bool = False  # what was in force before is ordered back
+    restored: bool = False  # and it is in force
 
 
 class Player:
@@ -113,23 +116,28 @@ class Player:
         """Whether a plan is under way, or what was in force before it is being put back."""
         return self._run is not None
 
-    def begin(self, plan: Plan, sweeps: list[PreparedSweep], forced: bool) -> dict[str, Any]:
+    def begin(
+        self, plan: Plan, sweeps: list[PreparedSweep], forced: bool, session: int
+    ) -> dict[str, Any]:
         """Order the first sweep of a plan.
+
+        ``session`` is that of the rig for which the plan was asked for.
 
         Raises
         ------
         ControlError
-            When a plan runs already, or no rig is there to play it to.
+            When a plan runs already, or that rig is not there to play it to.
         """
         self.refuse_if_busy("run")
-        summary = self._watch.summary()
-        if summary["rig"] != "connected" or summary["seq"] is None:
+        seq = self._watch.seq
+        if not self._watch.held or seq is None:
             raise ControlError("run: no rig holds the loop; start the rig, then run the plan")
+        if self._watch.session != session:
+            raise ControlError("run: another rig has come meanwhile; run the plan again")
         before = [ready for ready in self._shelf.in_force if ready is not None]
-        run = _Run(plan, sweeps, before, forced, session=self._watch.session)
+        run = _Run(plan, sweeps, before, forced, session=session, lost=self._watch.records_lost)
         self._run, self._last = run, run
-        lead = max(1, round(LEAD_S * 1e6 / self._rig.spec.loop.interval_us))
-        run.begins = int(summary["seq"]) + lead
+        run.begins = seq + max(1, round(LEAD_S * 1e6 / self._rig.spec.loop.interval_us))
         planned = plan.as_json([one.sweep for one in sweeps])
         self._record.note("plan", plan=planned, forced=forced)
         self._fill(run)
@@ -158,14 +166,14 @@ class Player:
         run = self._run
         if run is None or run.why is not None:
             return
-        self._send(Order.CANCEL)
-        self._send(Order.DISARM)
+        self._end(run, why)
         for place, played in sorted(run.playing.items()):
             if played.start is not None and not played.over:
                 self._record.note("sweep_end", sweep=place, complete=False)
                 run.done.append(self._told(run, place, played, complete=False))
         run.playing.clear()
-        self._end(run, why)
+        self._send(Order.CANCEL)
+        self._send(Order.DISARM)
 
     def follow(self) -> None:
         """See to the plan under way; called every so often by the attending thread."""
@@ -173,20 +181,29 @@ class Player:
         if run is None:
             return
         try:
-            self._follow(run)
+            if run.why is None:
+                self._follow(run)
+            else:
+                self._restore(run)
         except GatestepError as fault:
-            self.halt(str(fault))
+            if run.why is None:
+                self.halt(str(fault))
+            else:
+                self._give_up(run, str(fault))
 
     def _follow(self, run: _Run) -> None:
-        if run.why is not None:
-            self._restore(run)
-        elif self._watch.session != run.session or not self._watch.held:
+        if self._watch.session != run.session or not self._watch.held:
             self.halt("the rig let go of the loop")
+        elif self._watch.records_lost > run.lost:
+            self.halt("the loop's log overflowed")
         elif run.armed and self._watch.state != State.ARMED and not self._is_over(run):
-            fault = self._watch.summary()["fault"]
-            self.halt(f"the loop has tripped: {fault}" if fault else "the loop was disarmed")
+            self.halt(self._why_not_armed())
         elif run.filling is not None and run.filling.done() and not run.ordered:
             self._order(run)
+
+    def _why_not_armed(self) -> str:
+        fault = self._watch.summary()["fault"]
+        return f"the loop has tripped: {fault}" if fault else "the loop was disarmed"
 
     def confirm(self, event: LoopEvent) -> None:
         """Take in what the loop says of an order."""
@@ -195,9 +212,7 @@ class Player:
             return
         if event.number in run.swaps:
             ready = run.swaps.pop(event.number)
-            if event.outcome == Outcome.DONE:
-                self._shelf.put_in_force(ready.bank // 2)
-                self._in_force(ready.bank // 2, ready)
+            self._settle(ready, event.outcome == Outcome.DONE)
         elif run.why is not None:
             return
         elif event.number == run.arming and not run.armed:
@@ -206,6 +221,15 @@ class Player:
                 self.halt(f"the loop would not arm: {Outcome(event.outcome).name.lower()}")
         else:
             self._confirm_sweep(run, event)
+
+    def _settle(self, ready: Ready, done: bool) -> None:
+        """A swap has been carried out, or dropped: then nothing stands prepared."""
+        cell = ready.bank // 2
+        if done:
+            self._shelf.put_in_force(cell)
+            self._in_force(cell, ready)
+        else:
+            self._shelf.prepared[cell] = None
 
     def observe(self, samples: npt.NDArray[Any]) -> None:
         """Count spikes, late and clipped answers of the sweep under way."""
@@ -221,10 +245,11 @@ class Player:
             mine = fresh[(seq >= played.start) & (seq < played.start + one.ticks)]
             _count(played, mine, one)
             if played.over:
-                run.done.append(self._told(run, place, played, complete=True))
+                run.done.append(self._told(run, place, played, complete=played.dead == 0))
                 del run.playing[place]
         if len(run.done) == len(run.sweeps):
-            self._end(run, "complete")
+            whole = all(told["complete"] for told in run.done)
+            self._end(run, "complete" if whole else "a sweep was not live throughout")
 
     def status(self, since: int = 0) -> dict[str, Any] | None:
         """The plan under way, or the last one; with the sweeps ended since one of them."""
@@ -238,6 +263,7 @@ class Player:
             "sweeps": len(run.sweeps),
             "ended": len(run.done),
             "why": run.why,
+            "restored": run.restored,
             "done": run.done[since : since + MOST_TOLD],
             "now": None,
         }
@@ -268,11 +294,12 @@ class Player:
         if run.swaps:
             return  # the spare bank is free once the loop has told of the last change
         run.ordered = True
-        if place == 0 and self._watch.state != State.ARMED:
+        arming = place == 0 and self._watch.state != State.ARMED
+        self._change(run, one, arming)
+        if arming:
             run.arming = self._send(Order.ARM, at=run.begins, forced=run.forced)
         elif place == 0:
             run.armed = True
-        self._change(run, one)
         number = self._send(
             Order.PLAY,
             one.cell,
@@ -285,18 +312,28 @@ class Player:
         )
         run.playing[place] = _Played(number)
 
-    def _change(self, run: _Run, one: PreparedSweep) -> None:
-        """Order the model and parameters of a sweep, where they are not in force."""
+    def _change(self, run: _Run, one: PreparedSweep, arming: bool) -> None:
+        """Order the model and parameters of a sweep, where they are not in force.
+
+        Where the loop is armed with it, a conductance that comes gradually starts from none.
+        """
         ready = self._shelf.in_force[one.cell]
         assert ready is not None, "every cell has a model in force"
         setting = one.setting
-        if setting.is_in_force(ready):
-            return
-        if one.ramp_ticks:
-            self._send(Order.RAMP, one.cell, 0, float(one.ramp_ticks), at=run.begins)
-        self._swap(run, one.cell, setting, setting.goes_on(ready), run.begins)
+        from_zero = arming and one.ramp_ticks > 0
+        if from_zero or not setting.is_in_force(ready):
+            ramp = one.ramp_ticks, from_zero
+            self._swap(run, one.cell, setting, setting.goes_on(ready), run.begins, ramp)
 
-    def _swap(self, run: _Run, cell: int, setting: Any, goes_on: bool, at: int) -> None:
+    def _swap(
+        self,
+        run: _Run,
+        cell: int,
+        setting: Setting | Ready,
+        goes_on: bool,
+        at: int,
+        ramp: tuple[int, bool] = (0, False),
+    ) -> None:
         """Prepare a model in the spare bank, and order it in force."""
         ready = self._shelf.prepare(cell, setting.model, setting.tables, setting.choice)
         number = self._send(
@@ -306,6 +343,7 @@ class Player:
             float(goes_on),
             setting.choice,
             at,
+            ramp,
             goes_on=goes_on,
             **model_meaning(ready, self._record),
         )
@@ -346,17 +384,29 @@ class Player:
 
     def _restore(self, run: _Run) -> None:
         """Put back what was in force before the plan, once the loop has told of every swap."""
+        if run.swaps and self._watch.records_lost > run.lost:
+            # What the log lost, the loop's own record still tells.
+            for swapped in run.swaps.values():
+                self._settle(swapped, self._watch.bank(swapped.bank // 2) == swapped.bank)
+            run.swaps.clear()
         if run.swaps:
             return
-        if run.restored:
+        if run.restoring:
+            run.restored = True
             self._run = None
             return
-        run.restored = True
+        run.restoring = True
         for cell, before in enumerate(run.before):
             ready = self._shelf.in_force[cell]
             assert ready is not None, "every cell has a model in force"
             if ready.bank != before.bank or ready.tables is not before.tables:
                 self._swap(run, cell, before, False, int(NIL))
+
+    def _give_up(self, run: _Run, reason: str) -> None:
+        """The model before cannot be put back: that is told, and the plan's stays."""
+        run.why = f"{run.why}; the model before could not be put back: {reason}"
+        self._record.note("advice", text=run.why)
+        self._run = None
 
     def _told(
         self, run: _Run, place: int, played: _Played, complete: bool | None
@@ -383,6 +433,7 @@ def _count(played: _Played, samples: npt.NDArray[Any], one: PreparedSweep) -> No
     flags = samples["flags"]
     played.late += int(np.count_nonzero(flags & LATE))
     played.clipped += int(np.count_nonzero(flags & CLIPPED))
+    played.dead += int(np.count_nonzero(flags & LIVE == 0))
     played.samples = int(samples["seq"][-1]) - (played.start or 0) + 1
     v_mv, threshold = samples["v_mv"][:, one.cell], one.sweep.threshold_mv
     up, down = v_mv >= threshold, v_mv < threshold - HYSTERESIS_MV

@@ -38,7 +38,6 @@ _KINDS = {
     "stop": Order.STOP,
     "swap": Order.SWAP,
     "foresee": Order.FORESEE,
-    "ramp": Order.RAMP,
     "cancel": Order.CANCEL,
 }
 _FROM_OUTSIDE = {int(Fault.SILENCE), int(Fault.DISCONNECTED)}
@@ -173,10 +172,8 @@ class Replay:
             When samples are damaged or missing: what follows them cannot be computed.
         """
         end = len(self.journal.samples) if stop is None else min(stop, len(self.journal.samples))
-        while True:
+        while self.position < end:
             self._change()
-            if self.position >= end:
-                return
             until = min(end, self.position + CHUNK)
             if self._next < len(self._events):
                 until = min(until, self._events[self._next].position)
@@ -245,15 +242,15 @@ class Replay:
             return
         order = records(ORDER)[0]
         order.kind, order.at = self._kind(event), NIL
-        if event.kind in {"swap", "set", "foresee", "ramp"}:
+        if event.kind in {"swap", "set", "foresee"}:
             order.cell = self._cell(event)
         if event.kind == "swap":
             order.index = self._fill(event)
             order.value = float(bool(event.fields.get("goes_on")))
+            order.ramp_ticks = event.fields.get("ramp_ticks", 0)
+            order.from_zero = bool(event.fields.get("from_zero"))
         elif event.kind == "set":
             order.index, order.value = event.fields["index"], event.fields["value"]
-        elif event.kind == "ramp":
-            order.value = event.fields["ticks"]
         anticipation = event.fields.get("anticipation")
         if anticipation:
             for name in ("on", "substeps", "alpha", "beta"):

@@ -16,6 +16,7 @@ import time
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -27,7 +28,7 @@ from numba import typeof
 from . import __version__
 from .answers import Answer, Built, Confirmed, Waiting, refusal, safely
 from .config import LoadedRig, load_rig_models
-from .errors import LinkError
+from .errors import ControlError, LinkError
 from .hosttune import HostTuning
 from .journal import Journal
 from .journalfacts import header_of
@@ -35,7 +36,7 @@ from .loop import make_memory, run_loop
 from .loopport import LoopPort, bound_endpoint, bound_socket, choose_lane
 from .network import Gatekeeper
 from .orderline import NoRecord, OrderLine, Record
-from .orders import Order
+from .orders import Order, Outcome
 from .shelf import Shelf, make_room, make_slots
 from .states import State
 from .tables import build_tables
@@ -54,7 +55,7 @@ _ATTENDING_NICE = 5
 _BLOCKS_A_TURN = 200
 _REQUESTS_A_TURN = 100
 _MOST_WAITING = 64
-_NEVER_PUT_OFF = ("status", "disarm", "stop")
+_NEVER_PUT_OFF = ("status", "disarm", "halt", "stop")
 
 
 @dataclass
@@ -107,8 +108,6 @@ class Server:
         self._port = LoopPort(self.rig, self._context, self._gatekeeper)
         self._orders_out, self._orders_in = self._pipe("orders")
         self._log_out, self._log_in = self._pipe("log")
-        self._record = self._open_record()
-        self._line = OrderLine(self._orders_out, self._record)
         table, slots = make_room(), make_slots()
         self._memory = make_memory(
             self.rig.spec,
@@ -120,6 +119,8 @@ class Server:
         )
         self._compile()
         self._bind()
+        self._record = self._open_record()
+        self._line = OrderLine(self._orders_out, self._record)
         self._verbs = Verbs(
             self.rig,
             Shelf(self._memory.banks, table),
@@ -155,14 +156,28 @@ class Server:
             if self._control in ready:
                 self._take_requests()
             self._answer_built()
-            self._verbs.player.follow()
-            self._warn(self._verbs.catch_up())
+            self._quietly(self._verbs.player.follow)
+            self._quietly(lambda: self._warn(self._verbs.catch_up()))
             self._publish_status()
             self._host.follow(self.watch.state == State.ARMED)
+        self._drain()
+        return self._result[0] if self._result else 1
+
+    def _quietly(self, work: Callable[[], None]) -> None:
+        """Work that may fail, and then ends a plan; the thread that carries disarm goes on."""
+        try:
+            work()
+        except Exception as fault:
+            self._say(f"a fault in the server, {type(fault).__name__}: {fault}; a plan ends")
+            with contextlib.suppress(Exception):
+                self._verbs.player.halt(f"a fault in the server: {fault}")
+
+    def _drain(self) -> None:
+        """Take in what is left of the log, once the loop has ended; the record ends with it."""
         while self._log_in.poll(0):
             self._read_log()
+        self._quietly(lambda: self._verbs.player.halt("the server was stopped"))
         self._record.close()
-        return self._result[0] if self._result else 1
 
     def arm(self, force: bool = False) -> None:
         """Order the loop to arm, as ``gatestep arm`` does.
@@ -172,7 +187,7 @@ class Server:
         ControlError
             When the loop would carry less than the model opens, unless forced.
         """
-        self._verbs.refuse_to_ring(force)
+        self._verbs.refuse_to_ring("arm", force)
         self._line.send(Order.ARM, forced=force)
 
     def order_stop(self) -> None:
@@ -183,10 +198,12 @@ class Server:
     def close(self) -> None:
         """Stop what still runs and give every socket back."""
         if hasattr(self, "_thread") and self._thread.is_alive():
-            self.order_stop()
+            with contextlib.suppress(ControlError):
+                self.order_stop()
             self._thread.join(2 * _QUIET_S)
             if self._thread.is_alive():
                 return  # nothing is taken from under a loop that still runs
+            self._drain()
         self._builder.shutdown(wait=False, cancel_futures=True)
         if hasattr(self, "_port"):
             self._port.close()
@@ -290,11 +307,11 @@ class Server:
             for event in events:
                 if event.kind == "order":
                     self._confirm(event)
-                    self._verbs.player.confirm(event)
+                    self._quietly(partial(self._verbs.player.confirm, event))
                 else:
                     self._say(event.text)
                 self._publish("event", {"kind": event.kind, "seq": event.seq, "text": event.text})
-            self._verbs.player.observe(samples)
+            self._quietly(partial(self._verbs.player.observe, samples))
             self._publish_samples(samples)
 
     def _warn(self, warnings: list[str]) -> None:
@@ -331,12 +348,14 @@ class Server:
         """Answer the caller whose order the loop has carried out.
 
         The loop carries orders out in turn. One from before this has been carried out as
-        well, even where its entry was lost because the log had overflowed.
+        well, even where its entry, and with it its outcome, was lost because the log had
+        overflowed.
         """
         for waiting, caller in list(self._waiting):
             if isinstance(waiting, Confirmed) and waiting.number <= event.number:
                 mine = waiting.number == event.number
-                known = event if mine else replace(event, outcome=0, seq=None)
+                lost = replace(event, outcome=int(Outcome.DROPPED), seq=None)
+                known = event if mine else lost
                 self._finish(waiting, caller, known)
 
     def _answer_built(self) -> None:

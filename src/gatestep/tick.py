@@ -18,7 +18,7 @@ from .compiling import compiled, inner
 from .guard import limited, voltage_fault
 from .inforce import HISTORY, fill_coming, flowed, note_lag
 from .kernel import STATES, current, settle, step
-from .specs import MAX_CONDUCTANCES
+from .specs import MAX_CELLS, MAX_CONDUCTANCES
 from .states import Event, Fault, State, next_state
 from .wire import CLIPPED, GAP, LATE, LIVE, NIL, REFUSED, REPEAT, TRIPPED, read_sample
 
@@ -60,6 +60,7 @@ LOOP = np.dtype(
         ("since_t_us", "f8"),
         ("tick_us", "f8"),  # as the rig's clock shows it; 0 before it is known
         ("tick_wrong", "i8"),
+        ("bank", "i8", (MAX_CELLS,)),  # in force in each cell, as of the last flush
         # What anticipation needs of the rig's reports.
         ("first_seq", "i8"),  # of the session
         ("in_force", "i8"),  # as reported with the sample before

@@ -7,7 +7,7 @@ by itself; the server carries requests in and answers out.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from concurrent.futures import Executor, Future
 from dataclasses import replace
 from pathlib import Path
@@ -21,6 +21,7 @@ from .arithmetic import Floats
 from .choosing import Choice, advice, choose
 from .config import LoadedRig
 from .errors import ControlError
+from .judging import Judge
 from .library import LoadedModel, load_model
 from .orderline import NoRecord, Record, model_meaning
 from .orders import Order, Outcome
@@ -40,10 +41,6 @@ _PARAMETERS = {
     "reversal_mv": (Order.SET_REVERSAL, MAX_REVERSAL_MV),
 }
 _MAX_TEXT = 1000
-
-
-_ALWAYS = {Order.DISARM, Order.RESET, Order.STOP, Order.MARK}
-"""Orders that anyone may give while a plan runs."""
 
 
 def build_model(name: str, rig: LoadedRig, cell: int) -> BuiltModel:
@@ -100,8 +97,7 @@ class Verbs:
         )
         self._busy: dict[int, str] = {}
         self._given_up = False  # the plan that is being prepared
-        self._changed: set[int] = set()
-        self._judging: dict[int, tuple[dict[str, float], Future[Choice]]] = {}
+        self._judge = Judge(rig, shelf, watch, send_order, builder)
         # As the loop has confirmed them, and as it will have them once all orders are done.
         self._parameters: list[dict[str, float]] = [{} for _ in self._names]
         self._ordered_parameters: list[dict[str, float]] = [{} for _ in self._names]
@@ -161,20 +157,32 @@ class Verbs:
     def arm(self, force: bool = False) -> Waiting:
         """Let the model's current flow."""
         _check_force("arm", force)
-        self.refuse_to_ring(force)
+        self.player.refuse_if_busy("arm")
+        self.refuse_to_ring("arm", force)
         return self._ordered(Order.ARM, after=lambda e: self._armed(e, force), forced=force)
 
     def disarm(self) -> Waiting:
-        """Go to 0 pA."""
+        """Go to 0 pA; a plan under way or being prepared ends."""
+        self._end_plan("the loop was disarmed")
         return self._ordered(Order.DISARM)
 
     def reset(self) -> Waiting:
-        """Clear a trip."""
+        """Clear a trip; a plan under way or being prepared ends."""
+        self._end_plan("the loop was reset")
         return self._ordered(Order.RESET)
 
     def stop(self) -> Waiting:
         """Stop the server, with 0 pA as its last answer."""
+        self._end_plan("the server was stopped")
         return self._ordered(Order.STOP)
+
+    def _end_plan(self, why: str) -> bool:
+        """End a plan; whether there was one that had begun."""
+        self._given_up = True
+        if not self.player.busy:
+            return False
+        self.player.halt(why)
+        return True
 
     def mark(self, text: str | None = None) -> Waiting:
         """Put a note at the present sample."""
@@ -200,23 +208,20 @@ class Verbs:
             raise ControlError(f"run: seed is {show(seed)}; it is a whole number from 0")
         in_force = [self._as_set(k) for k in range(len(self._names))]
         self._claim_all("run")
-        self._given_up = False
+        self._given_up, session = False, self._watch.session
         try:
             future = self._builder.submit(prepare_plan, text, Path(path), seed, self._rig, in_force)
         except BaseException:
             self._busy.clear()
             raise
-        return Built(future, lambda built: self._play(built, force))
+        return Built(future, lambda built: self._play(built, force, session))
 
     def halt(self) -> Answer:
         """End the plan under way, at 0 pA."""
-        if "run" in self._busy.values():
-            self._given_up = True
-            return {"ok": True, "plan": None}
-        if not self.player.busy:
+        being_prepared = "run" in self._busy.values()
+        if not self._end_plan("halted") and not being_prepared:
             raise ControlError("halt: no plan is running")
-        self.player.halt("halted")
-        return {"ok": True, "plan": self.player.status()}
+        return {"ok": True, "plan": None if being_prepared else self.player.status()}
 
     def sweeps(self, since: int = 0) -> Answer:
         """The plan under way or the last one, and its sweeps from one of them on."""
@@ -242,6 +247,7 @@ class Verbs:
         """Put the prepared model in force; while armed not one that would ring, unless forced."""
         k = self._cell("swap", cell)
         _check_force("swap", force)
+        self.player.refuse_if_busy("swap")
         ready = self._shelf.prepared[k]
         if ready is None:
             raise ControlError(
@@ -251,21 +257,26 @@ class Verbs:
         if against and not force:
             raise ControlError(f"swap: {against}")
         self._claim("swap", k)
-        return self._ordered(
-            Order.SWAP,
-            k,
-            ready.bank,
-            after=lambda e: self._swapped(k, ready),
-            choice=ready.choice,
-            forced=force,
-            **self._meaning(ready),
-        )
+        try:
+            return self._ordered(
+                Order.SWAP,
+                k,
+                ready.bank,
+                after=lambda e: self._swapped(k, ready),
+                choice=ready.choice,
+                forced=force,
+                **self._meaning(ready),
+            )
+        except BaseException:
+            self._busy.pop(k)
+            raise
 
     def set(
         self, key: str | None = None, value: float | None = None, cell: str | None = None
     ) -> Waiting:
         """Change gmax or reversal of a conductance in force."""
         k = self._cell("set", cell)
+        self.player.refuse_if_busy("set")
         if self._busy.get(k) in {"swap", "run"}:
             raise ControlError(
                 f"set: cell {self._names[k]} has a {self._busy[k]} under way; wait for its "
@@ -280,14 +291,15 @@ class Verbs:
                 f"set: {key} = {show(value)}; it is a number from {-limit:g} to {limit:g}"
             )
         new = float(value)
-        self._ordered_parameters[k][str(key)] = new
-        self._changed.add(k)
 
         def after(_: LoopEvent) -> Answer:
             self._parameters[k][str(key)] = new
             return {"cell": self._names[k], "key": key, "value": new}
 
-        return self._ordered(order, k, index, new, after, event="set", key=key)
+        waiting = self._ordered(order, k, index, new, after, event="set", key=key)
+        self._ordered_parameters[k][str(key)] = new
+        self._judge.note_set(k)
+        return waiting
 
     def put_in_force(self, cell: int, model: LoadedModel, tables: Tables) -> Ready:
         """Prepare a model before the loop runs and count it as in force."""
@@ -301,60 +313,32 @@ class Verbs:
     def _meaning(self, ready: Ready) -> Mapping[str, Any]:
         return model_meaning(ready, self._record)
 
-    def refuse_to_ring(self, force: bool) -> None:
+    def refuse_to_ring(self, verb: str, force: bool, more: Iterable[Choice] = ()) -> None:
         """Refuse to arm a loop that carries less than its model opens, unless forced.
 
         During a swap not even then: the order would meet a model that was not judged.
+        ``more`` are settings that will be in force while the loop is armed.
         """
-        for k, verb in self._busy.items():
-            if verb == "swap":
+        for k, busy in self._busy.items():
+            if busy == "swap":
                 raise ControlError(
-                    f"arm: cell {self._names[k]} has a swap under way; wait for its answer"
+                    f"{verb}: cell {self._names[k]} has a swap under way; wait for its answer"
                 )
-        for k in sorted(self._changed):
-            self._take_choice(k, self._judged(k))
-        choices = [ready.choice for ready in self._ready()]
-        if self._watch.rig_reports_nothing():
-            # Then every tick falls back to the plain loop.
-            choices = [replace(choice, on=False) for choice in choices]
-        against = advice(choices)
+        self._judge.settle(self._ordered_parameters)
+        against = self._judge.against(more)
         if against and not force:
-            raise ControlError(f"arm: {against}")
+            raise ControlError(f"{verb}: {against}")
 
     def _ready(self) -> list[Ready]:
         """The models in force; every cell has one."""
         return [ready for ready in self._shelf.in_force if ready is not None]
 
     def catch_up(self) -> list[str]:
-        """Have cells whose parameters were set judged anew, off every other thread.
-
-        Called every so often by the attending thread. Returns what to warn of: a loop
-        that is armed and now carries less than its model opens.
-        """
-        warnings = []
-        for k in [k for k in self._changed if self._busy.get(k) != "swap"]:
-            if k not in self._judging:
-                given = dict(self._ordered_parameters[k])
-                self._judging[k] = given, self._builder.submit(self._judged, k)
-            given, future = self._judging[k]
-            if future.done():
-                del self._judging[k]
-                if given == self._ordered_parameters[k]:
-                    self._take_choice(k, future.result())
-                    warnings.append(advice([self._ready()[k].choice]))
-        armed = self._watch.state == State.ARMED
-        return [warning for warning in warnings if warning and armed]
-
-    def _judged(self, k: int) -> Choice:
-        """How a cell is to anticipate with the parameters that were set, and its margin."""
-        tables = with_parameters(self._ready()[k].tables, dict(self._ordered_parameters[k]))
-        return choose(self._rig.spec.cell[k], tables, self._rig.spec.loop)
-
-    def _take_choice(self, k: int, choice: Choice) -> None:
-        """Let a cell anticipate as judged from now on."""
-        self._shelf.in_force[k] = replace(self._ready()[k], choice=choice)
-        self._send_order(Order.FORESEE, k, 0, 0.0, choice)
-        self._changed.discard(k)
+        """Warnings of a loop that carries less since a parameter was set."""
+        if self.player.busy:
+            return []
+        busy = [k for k, verb in self._busy.items() if verb in {"swap", "run"}]
+        return self._judge.catch_up(self._ordered_parameters, busy)
 
     def _ordered(
         self,
@@ -366,8 +350,6 @@ class Verbs:
         choice: Choice | None = None,
         **meaning: Any,
     ) -> Confirmed:
-        if order not in _ALWAYS:
-            self.player.refuse_if_busy(order.name.lower())
         number = self._send_order(order, cell, index, value, choice, **meaning)
 
         def finish(event: LoopEvent) -> Answer:
@@ -390,22 +372,22 @@ class Verbs:
         for k in range(len(self._names)):
             self._claim(verb, k)
 
-    def _play(self, built: Future[Prepared], force: bool) -> Answer:
+    def _play(self, built: Future[Prepared], force: bool, session: int) -> Answer:
         """Begin a plan that is prepared, unless a sweep of it would ring."""
         self._busy.clear()
         plan, sweeps = built.result()
         if self._given_up:
             raise ControlError("run: halted while it was prepared; nothing was played")
         choices = {id(one.setting): one.setting.choice for one in sweeps}
-        against = advice(list(choices.values()))
-        if against and not force:
-            raise ControlError(f"run: {against}")
-        return {"ok": True, **self.player.begin(plan, sweeps, force)}
+        self.refuse_to_ring("run", force, choices.values())
+        return {"ok": True, **self.player.begin(plan, sweeps, force, session)}
 
     def _armed(self, event: LoopEvent, force: bool) -> Answer:
         if event.outcome == Outcome.TRIPPED:
             reason = self._watch.summary()["fault"]
             raise ControlError(f"arm: the loop has tripped ({reason}); mend that, then reset")
+        if event.outcome == Outcome.DROPPED:
+            raise ControlError("arm: the loop's log overflowed; see in the status what came of it")
         if event.outcome == Outcome.STOPPING:
             raise ControlError("arm: the server is stopping; start it again")
         if event.outcome == Outcome.WRONG_TICK:
@@ -433,7 +415,7 @@ class Verbs:
         """A model that has just come into force has its file's parameters."""
         self._parameters[k] = parameters_of(ready.tables)
         self._ordered_parameters[k] = parameters_of(ready.tables)
-        self._changed.discard(k)
+        self._judge.note_swap(k)
 
     def _claim(self, verb: str, k: int) -> None:
         """One load or swap a cell at a time: both concern its spare bank."""

@@ -128,7 +128,7 @@ class Watch:
             "state": self.state.name.lower(),
             "fault": self._fault_text(fault, int(loop["fault_cell"])) or None,
             "rig": "connected" if loop["held"] else "none",
-            "seq": int(loop["seq"]) if self._last is not None else None,
+            "seq": self.seq,
             **self.counters(),
             # A clock that stands still shows a tick of 0, which is known to be wrong.
             "tick_us": float(loop["tick_us"]) if loop["tick_us"] or loop["tick_wrong"] else None,
@@ -139,6 +139,11 @@ class Watch:
         }
 
     @property
+    def seq(self) -> int | None:
+        """The newest sample that is known of."""
+        return int(self._loop["seq"]) if self._last is not None else None
+
+    @property
     def held(self) -> bool:
         """Whether a rig holds the loop."""
         return bool(self._loop["held"])
@@ -147,6 +152,15 @@ class Watch:
     def session(self) -> int:
         """How many rigs have taken hold so far."""
         return int(self._loop["session"])
+
+    @property
+    def records_lost(self) -> int:
+        """Entries that the loop's log had no room for."""
+        return int(self._loop["records_lost"])
+
+    def bank(self, k: int) -> int:
+        """The bank that is in force in a cell, by the newest block of the log."""
+        return int(self._loop["bank"][k])
 
     def rig_reports_nothing(self) -> bool:
         """Whether a rig that has long had answers still reports none in force."""

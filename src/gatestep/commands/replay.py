@@ -35,7 +35,9 @@ def replay(path: Path, json_output: bool) -> int:
 
 
 def _print(verdict: Verdict) -> None:
-    if verdict.identical:
+    if verdict.samples and not verdict.compared:
+        print("nothing compared")
+    elif verdict.identical:
         print(f"identical: {verdict.compared:,} of {verdict.samples:,} samples, every bit")
     else:
         print(
@@ -47,7 +49,8 @@ def _print(verdict: Verdict) -> None:
     if verdict.first:
         _print_difference(verdict.first)
     if verdict.stopped:
-        print(f"not compared: {verdict.samples - verdict.compared:,} samples: {verdict.stopped}")
+        left = verdict.samples - verdict.compared
+        print(f"not compared: {left:,} of the samples in it: {verdict.stopped}")
     for note in verdict.notes:
         print(note)
 

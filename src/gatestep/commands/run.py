@@ -3,13 +3,15 @@
 from __future__ import annotations
 
 import json
+import signal
 import sys
 import time
+from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
 from ..control import Control
-from ..errors import ControlError, GatestepError
+from ..errors import ControlError, LinkError
 from ..plans import load_plan
 
 _POLL_S = 0.2
@@ -37,6 +39,8 @@ def run(
         When the plan cannot be read, or the server refuses it.
     """
     plan = load_plan(plan_file)
+    for number in (signal.SIGTERM, signal.SIGHUP):
+        signal.signal(number, signal.default_int_handler)
 
     def connect() -> Control:
         return Control(endpoint, curve_server=curve[0], curve_client=curve[1])
@@ -48,14 +52,34 @@ def run(
         try:
             answer = control.run(plan.text, plan.path, seed, force, timeout_s=_PREPARE_S)
             told = _watch(control, answer, json_output)
-        except KeyboardInterrupt:
-            # A connection of its own: the old one may yet bring the answer to the run.
-            with connect() as other:
-                told = _halt(other)
+        except ControlError:
+            raise  # the server itself refused, or has ended the plan
+        except BaseException as fault:
+            told = _end(connect)
+            if not isinstance(fault, KeyboardInterrupt):
+                raise
             _report(told, recording, json_output)
             return _INTERRUPTED
     _report(told, recording, json_output)
     return 0 if told["why"] == _COMPLETE else 1
+
+
+def _end(connect: Callable[[], Control]) -> dict[str, Any]:
+    """End the plan by a connection of its own, as the old one may yet bring another answer.
+
+    Raises
+    ------
+    LinkError
+        When the server does not answer: then nobody here knows whether the plan still plays.
+    """
+    try:
+        with connect() as control:
+            return _halt(control)
+    except LinkError as fault:
+        raise LinkError(
+            f"{fault}. THE PLAN MAY STILL BE PLAYING: try 'gatestep halt' or 'gatestep stop', and "
+            "look at the rig's output"
+        ) from fault
 
 
 def _introduce(plan: Any, recording: dict[str, Any]) -> None:
@@ -73,7 +97,7 @@ def _watch(control: Control, answer: dict[str, Any], quiet: bool) -> dict[str, A
     from rich.console import Console
     from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
 
-    columns = (TextColumn("{task.description}"), BarColumn(), TimeElapsedColumn())
+    columns = (TextColumn("{task.description}", markup=False), BarColumn(), TimeElapsedColumn())
     console = Console(stderr=quiet, quiet=quiet)
     told: dict[str, Any] = {}
     with Progress(*columns, console=console, transient=True, disable=quiet) as bar:
@@ -82,7 +106,7 @@ def _watch(control: Control, answer: dict[str, Any], quiet: bool) -> dict[str, A
         while True:
             told = _ask_on(control, len(done))
             for sweep in told["done"]:
-                bar.console.print(_line(sweep, answer["sweeps"]), highlight=False)
+                bar.console.print(_line(sweep, answer["sweeps"]), highlight=False, markup=False)
             done += told["done"]
             if told["now"]:
                 bar.update(task, description=_line(told["now"], answer["sweeps"]))
@@ -93,14 +117,8 @@ def _watch(control: Control, answer: dict[str, Any], quiet: bool) -> dict[str, A
 
 
 def _ask_on(control: Control, since: int) -> dict[str, Any]:
-    """The plan's state; a server that is gone says what that means."""
-    try:
-        plan = control.ask("sweeps", since=since)["plan"]
-    except GatestepError as fault:
-        raise ControlError(
-            f"the server went away while the plan ran ({fault}); the rig goes to 0 pA by itself, "
-            "and the journal holds what was played"
-        ) from fault
+    """The plan's state."""
+    plan = control.ask("sweeps", since=since)["plan"]
     if plan is None:
         raise ControlError("the server was started anew while the plan ran; look at its journal")
     return dict(plan)
@@ -153,7 +171,8 @@ def _report(told: dict[str, Any], recording: dict[str, Any], json_output: bool) 
         return
     whole = sum(1 for sweep in done if sweep["complete"])
     if told["why"] == _COMPLETE:
-        print(f"{whole} sweeps played; 0 pA, and the model that was in force before is back")
+        back = "; the model that was in force before is back" if told["restored"] else ""
+        print(f"{whole} sweeps played; 0 pA{back}")
     else:
         print(f"ended after {whole} of {told['sweeps']} sweeps ({told['why']}); 0 pA")
     if path:

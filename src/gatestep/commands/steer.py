@@ -78,6 +78,7 @@ def print_status(status: dict[str, Any]) -> None:
         console.print(
             f"plan: {plan['title']}; {plan['ended']} of {plan['sweeps']} sweeps ended",
             highlight=False,
+            markup=False,
         )
     for setting in status.get("host", []):
         if not setting["applied"]:
