@@ -30,6 +30,9 @@ endpoint = "{control}"
 [feed]
 endpoint = "{feed}"
 
+[record]
+on = false                              # what it costs is measured by journal_kill.py
+
 [limits]
 silence_ms = 600000                     # a rig is silent while others have their turn
 late_run = 1000000

@@ -14,7 +14,8 @@ from typing import Any, TypeVar
 from pydantic import BaseModel, ValidationError
 
 from .errors import FileError
-from .specs import Spec, StandardRate
+from .specbase import Spec
+from .specs import StandardRate
 
 MAX_BYTES = 1_000_000
 

@@ -27,7 +27,7 @@ from .journalfacts import model_payload, start_now
 from .journalout import Out, sync_folder
 from .journalqueue import Batch, Dropped, Expected, Item, Model, Note, Waiting
 from .library import LoadedModel
-from .specs import RecordSpec
+from .recordspecs import RecordSpec
 from .tables import Tables
 
 BLOCK_BYTES = 1 << 20

@@ -15,7 +15,7 @@ from . import __version__
 from .errors import JournalError
 from .files import parse
 from .journalfile import Event, JournalFile
-from .specs import SessionSpec, SubjectSpec
+from .recordspecs import SessionSpec, SubjectSpec
 
 NOT_STATED = "not stated in the rig file"
 

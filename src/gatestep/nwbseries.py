@@ -18,7 +18,7 @@ from .journalfile import JournalFile
 from .nwbfacts import NOT_STATED, plain
 from .nwbrecordings import Progress, Recording, ticks_of
 from .nwbtables import Stretch, model_at, stimulus_of, sweep_name
-from .specs import SessionSpec
+from .recordspecs import SessionSpec
 from .units import US_PER_MS
 from .wire import NIL
 
@@ -182,7 +182,7 @@ class Series:
             **common,
         )
         found = [Column(voltage, "v_mv", k), Column(injected, "i_pa", k)]
-        if recording.span.planned:
+        if recording.span.planned and recording.span.fields.get("cell") in {None, k, cell}:
             stimulus = CurrentClampStimulusSeries(
                 name=f"{name}_{cell}_stimulus",
                 description=(

@@ -13,7 +13,8 @@ from typing import Annotated, Any, Literal, Self
 
 from pydantic import BeforeValidator, Field, model_validator
 
-from .specs import MAX_CURRENT_PA, MAX_GMAX_NS, MAX_REVERSAL_MV, Finite, Name, Spec
+from .specbase import Finite, Name, Spec
+from .specs import MAX_CURRENT_PA, MAX_GMAX_NS, MAX_REVERSAL_MV
 
 MAX_SWEEPS = 10_000
 LONGEST_NOISE_SD = 8.6

@@ -8,17 +8,16 @@ from __future__ import annotations
 
 import ipaddress
 import re
-from typing import Annotated, Literal, Self
+from typing import Literal, Self
 
 from pydantic import (
-    BaseModel,
-    ConfigDict,
     Field,
-    StringConstraints,
     field_validator,
     model_validator,
 )
 
+from .recordspecs import RecordSpec, SessionSpec, SubjectSpec
+from .specbase import Celsius, Cpu, Finite, Formula, Name, Positive, Spec
 from .units import nernst_mv, q10_factor
 
 MAX_CELLS = 8
@@ -30,20 +29,6 @@ MAX_CURRENT_PA = 1e6
 MAX_PEERS = 62
 """Peers on the list; with loopback's two addresses the direct lane keeps 64."""
 USUAL_PRIORITY = 50
-
-Name = Annotated[str, StringConstraints(pattern=r"^[A-Za-z][A-Za-z0-9_\-]{0,31}$")]
-Formula = Annotated[str, StringConstraints(min_length=1, max_length=500)]
-Text = Annotated[str, StringConstraints(min_length=1, max_length=2000)]
-Finite = Annotated[float, Field(allow_inf_nan=False)]
-Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
-Celsius = Annotated[float, Field(ge=-5, le=60)]
-Cpu = Annotated[int, Field(ge=0, le=1023)]
-
-
-class Spec(BaseModel):
-    """Base of all descriptions: no unknown keys, no later change."""
-
-    model_config = ConfigDict(frozen=True, extra="forbid", str_strip_whitespace=True)
 
 
 class StandardRate(Spec):
@@ -217,44 +202,6 @@ class FeedSpec(Spec):
 
     endpoint: str = "tcp://127.0.0.1:5792"
     every: int = Field(default=50, ge=1, le=1_000_000)
-
-
-class RecordSpec(Spec):
-    """The record: one journal a run of the server, in ``folder`` beside the rig file."""
-
-    on: bool = True
-    folder: str = Field(default="records", min_length=1, max_length=1000)
-    flush_ms: float = Field(default=200.0, ge=1, le=60_000)
-    sync_s: float = Field(default=1.0, ge=0, le=86_400)
-    queue_mb: float = Field(default=256.0, ge=1, le=65_536)
-    tables: bool = True
-
-
-class SubjectSpec(Spec):
-    """Facts of the animal or tissue, as the record's export names them; none is invented."""
-
-    subject_id: Text | None = None
-    species: Text | None = None
-    strain: Text | None = None
-    genotype: Text | None = None
-    sex: Literal["M", "F", "U", "O"] | None = None
-    age: Text | None = None
-    weight: Text | None = None
-    description: Text | None = None
-
-
-class SessionSpec(Spec):
-    """Facts of the session, likewise."""
-
-    description: Text | None = None
-    experimenter: tuple[Text, ...] = Field(default=(), max_length=50)
-    lab: Text | None = None
-    institution: Text | None = None
-    experiment: Text | None = None
-    slices: Text | None = None
-    pharmacology: Text | None = None
-    electrode: Text | None = None
-    notes: Text | None = None
 
 
 class NetworkSpec(Spec):
