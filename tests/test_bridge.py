@@ -2,32 +2,27 @@
 
 from __future__ import annotations
 
-import json
 import math
 import os
-import signal
 import socket
-import subprocess
-import sys
 import time
 from contextlib import contextmanager
 
 import numpy as np
 import pytest
 import zmtp_reference as rfc
-from conftest import RawRig, make_rig, running, wait_until
+from conftest import RawRig, running, wait_until
 from framed_host import ANSWER, BYE, HELLO, SAMPLE, WELCOME, encode
 from hypothesis import given
 from hypothesis import strategies as st
 from numba import typeof
-from serial_device import CDevice, FakeDevice, Pty, bench, pack
+from serial_device import CDevice, bench, pack
 from test_hot import FORBIDDEN, NATIVE, calls_through_pointers, code_of, outside
 
 from gatestep import bridgehost
 from gatestep.bridge import carry, make_memory
 from gatestep.bridgefigures import BINS, note, percentiles, upper_nsec
 from gatestep.bridgehost import Expected, read_hello
-from gatestep.cli import main
 
 SAMPLES = 2000
 SERVER_GONE, HOST_STOPS = 3, 4
@@ -100,6 +95,33 @@ def check_latency(bridge, figures, trips_nsec, elapsed_nsec):
         values = list(figures["added_nsec"][way].values())
         assert list(figures["added_nsec"][way]) == ["p50", "p90", "p99", "p99.9", "max"]
         assert values == sorted(values)
+
+
+def test_samples_that_wait_for_nothing(tmp_path):
+    """A device that samples by its clock: the server gets all, the device the newest of answers."""
+    with armed(tmp_path / "a") as server:
+        wanted = {r.seq: r.i_pa for r in reference(server, [(voltage(k),) for k in range(SAMPLES)])}
+    with armed(tmp_path / "b") as server, bench(tmp_path, loop_of(server)) as made:
+        made.device.join()
+        found = {}
+        for k in range(SAMPLES):
+            made.device.sample(k, voltage(k))
+            while (frame := made.device.hear(0.0)) is not None:
+                if frame.kind == ANSWER:
+                    found[frame.items[0]] = frame.items[3:]
+        while SAMPLES - 1 not in found:
+            items = made.device.wait(ANSWER)
+            found[items[0]] = items[3:]
+        figures = wait_until(
+            lambda: (f := made.bridge.figures())["answers"] == len(found) and f, "all is counted"
+        )
+        wait_until(lambda: server.control.status()["answered"] == SAMPLES, "all is counted")
+        status = server.control.status()
+    assert list(found) == sorted(found)
+    assert found == {k: wanted[k] for k in found}
+    assert (figures["samples"], figures["dropped"]) == (SAMPLES, 0)
+    assert len(found) + figures["overtaken"] == SAMPLES
+    assert status["missed"] == 0
 
 
 @pytest.mark.parametrize("tcp", [False, True], ids=["ipc", "tcp"])
@@ -425,72 +447,3 @@ def test_its_loop_never_meets_the_interpreter():
     assert {"ppoll", "read", "write", "recv", "send"} <= outside(code)
     assert FORBIDDEN.findall(code) == []
     assert calls_through_pointers(code) == []
-
-
-def test_from_the_command_line(tmp_path):
-    """``gatestep bridge``: a second told on stderr, the report as JSON, ended by a signal."""
-    pty = Pty(tmp_path)
-    device = FakeDevice(pty)
-    with armed(tmp_path / "a") as server:
-        command = [sys.executable, "-m", "gatestep", "bridge", str(pty.path)]
-        command += ["--server", loop_of(server)]
-        ends = {}
-        for way, options in (("words", []), ("json", ["--json"])):
-            process = subprocess.Popen(
-                command + options, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
-            )
-            device.join()
-            end = time.monotonic() + 1.5
-            k = 0
-            while time.monotonic() < end:
-                assert device.ask(k, -65.0)[0] == k
-                k += 1
-            process.send_signal(signal.SIGTERM)
-            ends[way] = (*process.communicate(timeout=30), process.returncode, k)
-            assert device.wait(BYE) == [HOST_STOPS]
-    pty.close()
-    out, err, status, k = ends["words"]
-    assert status == 0
-    assert f"{k} to the server" in out
-    assert "added so far in µs: to the server p50" in err
-    out, err, status, k = ends["json"]
-    assert status == 0
-    assert "added so far" not in err
-    assert json.loads(out)["answers"] == k
-
-
-@pytest.mark.parametrize(
-    ("arguments", "words"),
-    [
-        (["/dev/no-such-device"], "no such device; is it plugged in?"),
-        (["."], "is no serial device"),
-        (["/dev/null"], "is it a serial device?"),
-        (["/dev/null", "--rig", "nowhere.toml"], "nowhere.toml"),
-        (["/dev/null", "--server", "localhost"], "is not tcp://ADDRESS:PORT"),
-    ],
-)
-def test_wrong_arguments_are_errors_in_words(arguments, words, monkeypatch, capsys):
-    """One line, no traceback, status 1."""
-    monkeypatch.setattr(sys, "argv", ["gatestep", "bridge", *arguments])
-    with pytest.raises(SystemExit) as ended:
-        main()
-    told = capsys.readouterr().err
-    assert ended.value.code == 1
-    assert words in told
-    assert told.count("\n") == 1
-
-
-def test_the_rig_file_gives_endpoint_and_cells(tmp_path):
-    """What the command takes from a rig file."""
-    from gatestep.commands.bridge import ENDPOINT, _expectations
-
-    spec = make_rig(tmp_path).spec
-    path = tmp_path / "rig.toml"
-    path.write_text(
-        f'[loop]\nendpoint = "ipc://{tmp_path}/x"\ninterval_us = 25\n'
-        '[[cell]]\nname = "a"\nmodel = "leak"\n'
-    )
-    assert spec.cell[0].name == "a"
-    assert _expectations(None, path) == (f"ipc://{tmp_path}/x", Expected(1, 25.0))
-    assert _expectations("tcp://127.0.0.1:9", path)[0] == "tcp://127.0.0.1:9"
-    assert _expectations(None, None) == (ENDPOINT, None)
