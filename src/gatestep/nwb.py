@@ -135,6 +135,7 @@ def export(
             made = _write(opened, part, sha256, verdict, progress)
             progress("validating", 0, 1)
             _validate(part, out)
+            progress("validating", 1, 1)
             _put(part, out, overwrite)
     size = out.stat().st_size
     return ExportResult(
@@ -322,8 +323,10 @@ def _write(
     for name, (text, what) in provenance(journal, sha256, verdict).items():
         file.add_scratch(text, name=name, description=plain(what))
     with _hdf5(part) as (nwb, check):
+        progress("laying out", 0, 1)
         nwb.write(file)
         check()
+        progress("laying out", 1, 1)
 
         def tell(done: int, of: int) -> None:
             check()
