@@ -36,6 +36,7 @@ from serial_device import FakeDevice, Pty, pack
 
 from gatestep.bridgeline import Line
 from gatestep.bridgemodel import Supervisor, Trace, read_trace
+from gatestep.commands.supervise import _written
 from gatestep.errors import ControlError, LinkError, MissingExtraError
 
 NAMES = ["K.gmax_ns", "K.reversal_mv", "trace.every_ticks"]
@@ -199,6 +200,14 @@ def test_a_device_that_is_unplugged_ends_the_supervision(tmp_path):
         there.line.pty.unplug()
         with pytest.raises(LinkError, match="is gone"):
             supervisor.attend(PATIENCE_S)
+
+
+def test_a_device_that_is_not_there_leaves_no_log(tmp_path):
+    """The next attempt may write to the same file."""
+    log = tmp_path / "log.csv"
+    with pytest.raises(LinkError, match="no such device"), _written(log):
+        Line(str(tmp_path / "device"), 9600)
+    assert not log.exists()
 
 
 def test_without_pyserial_the_extra_is_named(tmp_path, monkeypatch):

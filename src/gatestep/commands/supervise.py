@@ -140,8 +140,15 @@ def _written(path: Path | None) -> Iterator[_Log]:
         raise FileError(f"{path}: exists; choose another name for --trace") from fault
     except OSError as fault:
         raise FileError(f"{path}: cannot be written ({fault.strerror})") from fault
+    log = _Log(file)
     with file:
-        yield _Log(file)
+        try:
+            yield log
+        except BaseException:
+            # A device that could not be reached leaves no empty file in the next one's way.
+            if not log.count:
+                path.unlink(missing_ok=True)
+            raise
 
 
 def _listen() -> tuple[queue.SimpleQueue[str], list[int]]:
@@ -150,7 +157,7 @@ def _listen() -> tuple[queue.SimpleQueue[str], list[int]]:
     asked: list[int] = []
 
     def read() -> None:
-        for text in sys.stdin:
+        for text in sys.stdin or ():
             orders.put(text.strip())
 
     def ask(number: int, _frame: FrameType | None) -> None:
