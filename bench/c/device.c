@@ -1,20 +1,29 @@
 /* A rig on the device library that times round trips, with a plain stream socket.
  *
  *   device ENDPOINT VOLTAGES CELLS [spin]
+ *   device pty:LINK VOLTAGES CELLS
+ *
+ * With pty:LINK it makes a pty, puts a symbolic link to it at LINK, and speaks serial frames
+ * to whoever opens that, which it awaits for a minute.
  *
  * Arguments, stdin and stdout as of client.c. A trip is one whole turn of the library: the
  * clock read, the sample made, encoded, framed and sent, the answer received, deframed,
  * decoded, judged, limited and written to a converter that is not there. It sleeps in the
  * system until an answer comes; with `spin` it never does.
  */
-#define _POSIX_C_SOURCE 200809L
+#define _XOPEN_SOURCE 700
+#include <errno.h>
+#include <fcntl.h>
+#include <poll.h>
 #include <stdint.h>
 #include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
 #include <sys/socket.h>
 #include <sys/time.h>
+#include <termios.h>
 #include <time.h>
+#include <unistd.h>
 
 #include "gatestep_bridge.h"
 #include "posix_stream.h"
@@ -27,7 +36,7 @@ struct rig {
     const double *v_mv;
     long voltages;
     uint64_t tick;
-    int spin, asleep;
+    int spin, asleep, serial;
     float injected_pa[GSB_CELLS_MAX];
     uint8_t in[512], out[1024];
     struct gsb_taken taken[TAKEN];
@@ -60,8 +69,45 @@ static int write_current(void *context, const float *i_pa, uint32_t cells)
     return 0;
 }
 
+/* A pty's own end as a line, and a link to the other end. */
+static int open_pty(struct rig *rig, const char *link)
+{
+    struct termios raw;
+    int fd = posix_openpt(O_RDWR | O_NOCTTY | O_NONBLOCK), other;
+
+    if (fd < 0 || grantpt(fd) || unlockpt(fd) || symlink(ptsname(fd), link))
+        return -1;
+    /* Held open, so that the line is up before anybody else opens it; raw, as a line is. */
+    other = open(ptsname(fd), O_RDWR | O_NOCTTY);
+    if (other < 0 || tcgetattr(other, &raw))
+        return -1;
+    raw.c_iflag = raw.c_oflag = raw.c_lflag = 0;
+    rig->stream.fd = fd;
+    return tcsetattr(other, TCSANOW, &raw);
+}
+
+static int send_line(int fd, const uint8_t *bytes, size_t size)
+{
+    ssize_t sent = write(fd, bytes, size);
+    return sent >= 0 ? (int)sent : errno == EAGAIN ? 0 : -1;
+}
+
+static int receive_line(struct rig *rig, uint8_t *bytes, size_t room)
+{
+    struct pollfd entry = {rig->stream.fd, POLLIN, 0};
+    ssize_t got;
+
+    if (rig->asleep && poll(&entry, 1, 60000) <= 0)
+        return -1;
+    rig->asleep = 0;
+    got = read(rig->stream.fd, bytes, room);
+    return got >= 0 ? (int)got : errno == EAGAIN ? 0 : -1;
+}
+
 static int send_bytes(void *context, const uint8_t *bytes, size_t size)
 {
+    if (((struct rig *)context)->serial)
+        return send_line(((struct rig *)context)->stream.fd, bytes, size);
     return posix_stream_send(&((struct rig *)context)->stream, bytes, size);
 }
 
@@ -71,6 +117,8 @@ static int receive_bytes(void *context, uint8_t *bytes, size_t room)
     struct rig *rig = context;
     ssize_t got;
 
+    if (rig->serial)
+        return receive_line(rig, bytes, room);
     if (!rig->asleep)
         return posix_stream_receive(&rig->stream, bytes, room);
     rig->asleep = 0;
@@ -103,12 +151,14 @@ static int open_rig(struct rig *rig, const char *endpoint, uint32_t cells)
         config.cell[k].window_high_mv = 200;
     }
     port.context = rig;
-    if (gsb_link_init(&link, &gsb_zmtp, cells, rig->in, sizeof rig->in, rig->out,
-                      sizeof rig->out) ||
+    rig->serial = strncmp(endpoint, "pty:", 4) == 0;
+    if (gsb_link_init(&link, rig->serial ? &gsb_serial : &gsb_zmtp, cells, rig->in,
+                      sizeof rig->in, rig->out, sizeof rig->out) ||
         gsb_device_init(&rig->device, &config, &port, &link, rig->taken, TAKEN) ||
-        posix_stream_open(&rig->stream, endpoint))
+        (rig->serial ? open_pty(rig, endpoint + 4) : posix_stream_open(&rig->stream, endpoint)))
         return -1;
-    setsockopt(rig->stream.fd, SOL_SOCKET, SO_RCVTIMEO, &patience, sizeof patience);
+    if (!rig->serial)
+        setsockopt(rig->stream.fd, SOL_SOCKET, SO_RCVTIMEO, &patience, sizeof patience);
     /* As the other clients: from here on a sequence number takes four bytes. */
     rig->device.rig.next_seq = FIRST_SEQ;
     gsb_device_connect(&rig->device);
