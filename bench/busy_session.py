@@ -1,6 +1,7 @@
 """A long recorded session in which everything happens, and its replay.
 
     python busy_session.py [--minutes 10] [--seed 1] [--folder DIR] [--json]
+    python busy_session.py --sweeps 1000
 
 A server and the simulated rig in lockstep: a noisy cell, lost and jittering answers, two
 minutes at a time with anticipation and without. Meanwhile models are loaded and swapped,
@@ -9,6 +10,9 @@ which is reset and armed again. Then a rig that leaves ticks out, sends samples 
 measures NaN. At the end the journal is replayed. Prints what was in it and whether the
 replay is identical; the exit status is 1 if it is not.
 
+With ``--sweeps`` it plays so many sweeps instead, two models in turn, and says how many
+ticks were missed and how many sweeps began where the plan had them.
+
 The cell, its models and everything that happens to it are gatestep's own inventions.
 """
 
@@ -16,6 +20,7 @@ from __future__ import annotations
 
 import argparse
 import contextlib
+import itertools
 import json
 import random
 import sys
@@ -233,17 +238,78 @@ def play(folder: Path, seconds: float, seed: int, anticipate: bool) -> Session:
     return Session(path, meddler.done)
 
 
+ALTERNATING = """
+title = "Two models in turn"
+[plan]
+order = "interleaved"
+repeats = {repeats}
+pause_ms = 0
+[[sweep]]
+name = "squid"
+duration_ms = {ms}
+model = "squid-axon"
+[[sweep]]
+name = "cortical"
+duration_ms = {ms}
+model = "fast-spiking-cortical"
+"""
+SWEEP_MS = 250.0
+
+
+def alternate(folder: Path, sweeps: int) -> dict[str, object]:
+    """Play sweeps of two models in turn without a rest; what became of their boundaries."""
+    rig = rig_of(folder, True)
+    plan = folder / "alternating.toml"
+    plan.write_text(ALTERNATING.format(repeats=sweeps // 2, ms=SWEEP_MS), encoding="utf-8")
+    over = threading.Event()
+
+    def live() -> None:
+        with SimRig(rig.spec, rig.folder) as there:
+            while not over.is_set():
+                there.run(PIECE_S)
+
+    with served(rig) as control:
+        thread = threading.Thread(target=live)
+        thread.start()
+        while control.status()["seq"] is None:
+            time.sleep(0.1)
+        control.run(plan.read_text(encoding="utf-8"), plan, force=True, timeout_s=60.0)
+        while control.ask("sweeps")["plan"]["running"]:
+            time.sleep(0.2)
+        status = control.status()
+        over.set()
+        thread.join()
+    with open_journal(status["recording"]["path"]) as journal:
+        verdict = compare(journal)
+        rests = [b.start - a.stop for a, b in itertools.pairwise(journal.sweeps)]
+        return {
+            "sweeps": len(journal.sweeps),
+            "missed": status["missed"],
+            "with_their_model_from_the_first_tick": sum(
+                journal.in_force(sweep.start)[0].name == sweep.fields["model"]
+                for sweep in journal.sweeps
+            ),
+            "touching": sum(rest == 0 for rest in rests),
+            "late_starts": sum(rest > 0 for rest in rests),
+            "replay": "identical" if verdict.identical and verdict.complete else "NOT identical",
+        }
+
+
 def main() -> int:
     """Play sessions with and without anticipation and replay each."""
     parser = argparse.ArgumentParser(description=__doc__.partition("\n")[0])
     parser.add_argument("--minutes", type=float, default=10.0)
     parser.add_argument("--seed", type=int, default=1)
     parser.add_argument("--folder", type=Path)
+    parser.add_argument("--sweeps", type=int)
     parser.add_argument("--json", action="store_true")
     given = parser.parse_args()
     identical = True
     with tempfile.TemporaryDirectory(prefix="gatestep-") as temporary:
         folder = given.folder or Path(temporary)
+        if given.sweeps:
+            print(json.dumps(alternate(folder, given.sweeps)))
+            return 0
         for anticipate in (True, False):
             seconds = given.minutes * 30.0
             session = play(folder / str(anticipate), seconds, given.seed, anticipate)
