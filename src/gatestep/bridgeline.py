@@ -7,15 +7,15 @@ import select
 import stat
 import termios
 import time
-from types import TracebackType
-from typing import Any, Self
+from typing import Any
 
+from .closing import Closing
 from .errors import LinkError, MissingExtraError
 
 _WRITE_S = 0.2
 
 
-class Line:
+class Line(Closing):
     """An open serial line, eight bits, no parity, one stop bit, raw.
 
     Two descriptors of one line. Reading blocks, with VMIN 1, so that a reading of nothing
@@ -96,17 +96,6 @@ class Line:
         """Let go of the line."""
         os.close(self.writing)
         self._port.close()
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self,
-        kind: type[BaseException] | None,
-        fault: BaseException | None,
-        trace: TracebackType | None,
-    ) -> None:
-        self.close()
 
 
 def _open(device: str, baud: int) -> Any:

@@ -3,18 +3,18 @@
 from __future__ import annotations
 
 from pathlib import Path
-from types import TracebackType
-from typing import Any, Self
+from typing import Any
 
 import msgpack
 import zmq
 
+from .closing import Closing
 from .errors import ControlError, FileError, LinkError
 
 DEFAULT_ENDPOINT = "tcp://127.0.0.1:5791"
 
 
-class Control:
+class Control(Closing):
     """A connection to a server's control socket.
 
     Parameters
@@ -49,17 +49,6 @@ class Control:
         except BaseException:
             self.close()
             raise
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self,
-        kind: type[BaseException] | None,
-        fault: BaseException | None,
-        trace: TracebackType | None,
-    ) -> None:
-        self.close()
 
     def close(self) -> None:
         """Close the connection."""

@@ -16,6 +16,7 @@ from typing import Any
 
 import numpy as np
 
+from .closing import Closing
 from .errors import JournalError
 from .journalbytes import Kind, dtype_from_json, unpack_json, unpack_model
 from .journalfacts import JournalModel, model_of
@@ -70,7 +71,7 @@ class InForce:
     reversal_mv: dict[str, float]
 
 
-class JournalFile:
+class JournalFile(Closing):
     """A journal, opened for reading; also a context manager.
 
     Attributes
@@ -107,12 +108,6 @@ class JournalFile:
         self.closing = self._index.closing
         self.closed = self.closing is not None
         self.samples = Samples(self._disk, self._index, dtype, self.path)
-
-    def __enter__(self) -> JournalFile:
-        return self
-
-    def __exit__(self, *_: object) -> None:
-        self.close()
 
     def close(self) -> None:
         """Give the file back; what was read stays."""

@@ -13,13 +13,12 @@ import threading
 import time
 from collections.abc import Callable
 from dataclasses import dataclass
-from types import TracebackType
-from typing import Self
 
 import numpy as np
 import numpy.typing as npt
 
 from .burners import usable_cores
+from .closing import Closing
 from .dealer import connect
 from .errors import LinkError
 from .probe import (
@@ -118,7 +117,7 @@ class Run:
         return int(np.sum((self.flags > 0) & (self.flags & LIVE != 0)))
 
 
-class Probe:
+class Probe(Closing):
     """A measuring client, connected to a loop socket.
 
     Parameters
@@ -264,17 +263,6 @@ class Probe:
     def close(self) -> None:
         """End the connection; the loop is then free for another rig."""
         self._socket.close()
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self,
-        kind: type[BaseException] | None,
-        fault: BaseException | None,
-        trace: TracebackType | None,
-    ) -> None:
-        self.close()
 
 
 def _keep_exact_time() -> None:

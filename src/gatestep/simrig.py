@@ -12,12 +12,13 @@ import time
 from collections.abc import Callable
 from math import ceil
 from pathlib import Path
-from typing import Any, Self
+from typing import Any
 
 import numpy as np
 import zmq
 from pydantic import ValidationError
 
+from .closing import Closing
 from .control import use_curve
 from .errors import FileError, LinkError
 from .simcell import make_cells
@@ -42,7 +43,7 @@ Progress = Callable[[int, int], None]
 """Called with ticks done and ticks to do."""
 
 
-class SimRig:
+class SimRig(Closing):
     """A simulated rig, connected to the server at the rig file's loop endpoint.
 
     Parameters
@@ -355,12 +356,6 @@ class SimRig:
         self._loop.rig[0].socket = 0
         self._socket.close(linger=0)
         self._context.term()
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(self, *_: object) -> None:
-        self.close()
 
 
 def with_changes(spec: RigSpec, changes: dict[str, Any]) -> SimulatedSpec:
