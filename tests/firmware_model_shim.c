@@ -85,11 +85,24 @@ static uint32_t clock_us(void *context)
     return board.now_us;
 }
 
+static const struct gsb_port port = {0, read_voltage_mv, write_current_pa, send_bytes,
+                                     receive_bytes, clock_us};
+
+/* A device whose converter holds 99 pA from before, and takes no write or has no line. */
+int shim_start_badly(int write, int linked)
+{
+    const struct gsm_config config = {GSM_INTERVAL_US, 800.0f, 2e4f, -150.0f, 100.0f, 5000u, 20u};
+
+    memset(&board, 0, sizeof board);
+    board.i_pa = 99.0f;
+    board.write = write;
+    gsb_link_init(&line, &gsb_serial, 1u, line_in, sizeof line_in, line_out, sizeof line_out);
+    return gsm_device_init(&device, &config, &port, linked ? &line : 0);
+}
+
 int shim_start(float interval_us, float current_pa, float slew_pa_per_ms, float low_mv,
                float high_mv, uint32_t silence_us, uint32_t gap_ticks)
 {
-    const struct gsb_port port = {0, read_voltage_mv, write_current_pa, send_bytes,
-                                  receive_bytes, clock_us};
     struct gsm_config config;
     int outcome;
 
@@ -118,6 +131,8 @@ int shim_tick(float v_mv, int read, int write, uint32_t now_us)
     return gsm_device_tick(&device);
 }
 
+static int polled;
+
 /* Bytes in; what was sent stands in out, and its size is returned. */
 uint32_t shim_poll(const uint8_t *bytes, uint32_t size, uint8_t *out)
 {
@@ -127,9 +142,26 @@ uint32_t shim_poll(const uint8_t *bytes, uint32_t size, uint8_t *out)
     do {
         gsm_device_poll(&device);
     } while (board.in_size != 0u && !device.token_open);
-    gsm_device_poll(&device);
+    polled = gsm_device_poll(&device);
     memcpy(out, board.out, board.out_size);
     return board.out_size;
+}
+
+/* What the last poll returned. */
+int shim_polled(void)
+{
+    return polled;
+}
+
+/* Time passes without a tick. */
+void shim_wait(uint32_t now_us)
+{
+    board.now_us = now_us;
+}
+
+int shim_connect(void)
+{
+    return gsm_device_connect(&device);
 }
 
 void shim_stop(void)

@@ -12,39 +12,6 @@
 #define SPAN_TICKS 1024u
 #define SPAN_SHARE 0.01f
 
-int gsm_device_init(struct gsm_device *device, const struct gsm_config *config,
-                    const struct gsb_port *port, struct gsb_link *link)
-{
-    const float zero = 0.0f;
-
-    memset(device, 0, sizeof *device);
-    device->port = *port;
-    if (device->port.write_current_pa(device->port.context, &zero, 1u) < 0) {
-        return GSB_ERROR_OUTPUT;
-    }
-    device->slew_pa = config->slew_pa_per_ms * (config->interval_us * 1e-3f);
-    /* Written so that NaN fails. */
-    if (!(config->interval_us >= GSM_INTERVAL_US && config->interval_us <= GSM_INTERVAL_US) ||
-        !(config->current_pa > 0.0f && gsb_is_finite(config->current_pa)) ||
-        !(device->slew_pa > 0.0f && gsb_is_finite(device->slew_pa)) ||
-        !(config->window_low_mv >= GSM_LOW_MV && config->window_high_mv <= GSM_HIGH_MV) ||
-        !(config->window_low_mv < config->window_high_mv) || config->silence_us > 0x7fffffffu ||
-        config->gap_ticks < 1u || link->type != &gsb_serial || link->cells != 1u) {
-        return GSB_ERROR_ARGUMENT;
-    }
-    device->config = *config;
-    device->with = gsm_usual;
-    device->link = link;
-    link->interval_us = config->interval_us;
-    link->features = FEATURE_MODEL;
-    return GSB_OK;
-}
-
-void gsm_device_stop(struct gsm_device *device)
-{
-    device->releases = device->releases + 1u;
-}
-
 static int fault(struct gsm_device *device, int error)
 {
     device->fault = error;
@@ -54,6 +21,50 @@ static int fault(struct gsm_device *device, int error)
         device->counters.trips++;
     }
     return error;
+}
+
+/* Put the current on the converter; while that fails, 0 pA is tried at every tick. */
+static int put(struct gsm_device *device, float i_pa)
+{
+    if (device->port.write_current_pa(device->port.context, &i_pa, 1u) < 0) {
+        device->i_pa = 0.0f;
+        device->unwritten = 1u;
+        return fault(device, GSB_ERROR_OUTPUT);
+    }
+    device->i_pa = i_pa;
+    device->unwritten = 0u;
+    return GSB_OK;
+}
+
+int gsm_device_init(struct gsm_device *device, const struct gsm_config *config,
+                    const struct gsb_port *port, struct gsb_link *link)
+{
+    int outcome;
+
+    memset(device, 0, sizeof *device);
+    device->port = *port;
+    outcome = put(device, 0.0f);
+    device->slew_pa = config->slew_pa_per_ms * (config->interval_us * 1e-3f);
+    /* Written so that NaN fails. */
+    if (!(config->interval_us >= GSM_INTERVAL_US && config->interval_us <= GSM_INTERVAL_US) ||
+        !(config->current_pa > 0.0f && gsb_is_finite(config->current_pa)) ||
+        !(device->slew_pa > 0.0f && gsb_is_finite(device->slew_pa)) ||
+        !(config->window_low_mv >= GSM_LOW_MV && config->window_high_mv <= GSM_HIGH_MV) ||
+        !(config->window_low_mv < config->window_high_mv) || config->silence_us > 0x7fffffffu ||
+        config->gap_ticks < 1u || !link || link->type != &gsb_serial || link->cells != 1u) {
+        return GSB_ERROR_ARGUMENT;
+    }
+    device->config = *config;
+    device->with = gsm_usual;
+    device->link = link;
+    link->interval_us = config->interval_us;
+    link->features = FEATURE_MODEL;
+    return outcome;
+}
+
+void gsm_device_stop(struct gsm_device *device)
+{
+    device->releases = device->releases + 1u;
 }
 
 static int32_t arm(struct gsm_device *device)
@@ -110,7 +121,9 @@ static void obey(struct gsm_device *device)
     if (order->kind == GSB_KIND_PARAMETER) {
         device->order_result = set(device, order->index, order->value);
     } else if (order->kind == GSB_KIND_ARM) {
-        device->order_result = arm(device);
+        /* A stop, or a line that was lost, since it was given is the last word. */
+        device->order_result =
+            order->releases == device->released ? arm(device) : GSB_ERROR_LINK;
     } else {
         device->state = GSM_DISARMED;
         device->order_result = GSB_OK;
@@ -218,17 +231,6 @@ static void trace(struct gsm_device *device, float v_mv)
     device->traces_put = device->traces_put + 1u;
 }
 
-/* Put the current on the converter; while that fails, 0 pA is tried at every tick. */
-static int put(struct gsm_device *device, float i_pa)
-{
-    if (device->port.write_current_pa(device->port.context, &i_pa, 1u) < 0) {
-        device->i_pa = 0.0f;
-        return fault(device, GSB_ERROR_OUTPUT);
-    }
-    device->i_pa = i_pa;
-    return GSB_OK;
-}
-
 /* Whether the supervisor has been away for too long. The difference is signed: it may have
  * been heard a moment after this tick's clock was read. */
 static int alone(const struct gsm_device *device, uint32_t now_us)
@@ -244,7 +246,12 @@ int gsm_device_tick(struct gsm_device *device)
     uint32_t now_us, ticks;
     int found, clipped = 0;
 
+    device->beats = device->beats + 1u;
     if (!device->link) {
+        /* Nothing was started, but what the converter was left with must not stay. */
+        if (device->port.write_current_pa && put(device, 0.0f) != GSB_OK) {
+            return GSB_ERROR_OUTPUT;
+        }
         return GSB_ERROR_ARGUMENT;
     }
     now_us = device->port.now_us(device->port.context);

@@ -18,9 +18,13 @@
  *     gsm_device_poll    as often as possible: in the main loop
  *
  * The tick may interrupt the poll, never the other way round, on one core. They share
- * memory by volatile words of which each has one writer. The tick alone calls
- * read_voltage_mv and write_current_pa; the poll alone send_bytes and receive_bytes; both
- * call now_us.
+ * memory by volatile words of which each has one writer, but for `releases`, which says
+ * why it may have more. The tick alone calls read_voltage_mv and write_current_pa; the
+ * poll alone send_bytes and receive_bytes; both call now_us.
+ *
+ * When ticks end, the last current stays, for nothing writes another. The poll then says
+ * GSB_ERROR_CLOCK; a relay that the main loop opens, and a watchdog that is kicked only
+ * when tick and poll have both run, are what ends the current.
  */
 #ifndef GSM_DEVICE_H
 #define GSM_DEVICE_H
@@ -76,6 +80,7 @@ struct gsm_counters {
 /* An order on its way from the poll to the tick. */
 struct gsm_order {
     volatile uint32_t kind, index;
+    volatile uint32_t releases; /* those before it: one that came since is newer */
     volatile float value;
 };
 
@@ -106,11 +111,16 @@ struct gsm_device {
     struct gsm_order order;
     volatile uint32_t orders_put;
     volatile uint32_t heard_us;  /* when the supervisor was last heard */
-    volatile uint32_t releases;  /* raised to disarm, whatever else goes on */
+    /* Raised to disarm, whatever else goes on. Where an interrupt raises it while the poll
+     * does, one of the two may be lost, but no order can be put in between, and so the
+     * other takes all to 0 pA that both could. */
+    volatile uint32_t releases;
 
     /* From tick to poll. */
     volatile uint32_t orders_done;
     volatile int32_t order_result;
+    volatile uint32_t beats;     /* calls of the tick */
+    volatile uint8_t unwritten;  /* whether the converter did not take what was last written */
     uint32_t released;
     struct gsm_trace trace[GSM_TRACES];
     volatile uint32_t traces_put, traces_sent;
@@ -118,6 +128,8 @@ struct gsm_device {
     /* The poll's own. */
     struct gsb_link *link;
     uint32_t greeted_us;
+    uint32_t seen_beats, seen_us; /* when the tick was last seen to have run */
+    uint8_t watching;             /* whether seen_us counts */
     uint64_t token;        /* of the last order */
     int32_t token_result;  /* what came of it */
     uint8_t token_known;   /* whether there was one */
@@ -127,8 +139,9 @@ struct gsm_device {
 };
 
 /* Make a device, disarmed, and write 0 pA. `link` is gsb_serial, of one cell, initialised
- * by gsb_link_init; it stays the caller's memory. Sets its features and tick.
- * GSB_OK, GSB_ERROR_ARGUMENT, or GSB_ERROR_OUTPUT when 0 pA could not be written. */
+ * by gsb_link_init; it stays the caller's memory. Sets its features and tick. GSB_OK;
+ * GSB_ERROR_ARGUMENT, and then all that it does at a tick is to write 0 pA; or
+ * GSB_ERROR_OUTPUT when 0 pA could not be written, which every tick tries again. */
 int gsm_device_init(struct gsm_device *device, const struct gsm_config *config,
                     const struct gsb_port *port, struct gsb_link *link);
 
@@ -138,12 +151,16 @@ int gsm_device_connect(struct gsm_device *device);
 /* A tick. GSB_OK, or the fault it met; see gsb_error.h. */
 int gsm_device_tick(struct gsm_device *device);
 
-/* Read orders, answer them, send what waits. GSB_OK, or GSB_ERROR_LINK: open the line anew
- * and call gsm_device_connect; other errors are told once and need nothing. */
+/* Read orders, answer them, send what waits. GSB_OK; GSB_ERROR_CLOCK, at every call while
+ * no tick has run for longer than gap_ticks: disconnect the output, do not kick the
+ * watchdog; or GSB_ERROR_LINK: open the line anew and call gsm_device_connect. Other errors
+ * are told once and need nothing. */
 int gsm_device_poll(struct gsm_device *device);
 
-/* Disarm at the next tick, for a stop button; from where the poll is called. An alarm in the
- * tick's place lets read_voltage_mv fail, which trips. */
+/* Disarm at the next tick, and refuse an order to arm that was given before; for a stop
+ * button. From anywhere on this core. Called before gsm_device_tick in the tick's own
+ * interrupt for as long as the button is held, it works with a main loop that hangs, and
+ * nothing can arm meanwhile. */
 void gsm_device_stop(struct gsm_device *device);
 
 #ifdef __cplusplus

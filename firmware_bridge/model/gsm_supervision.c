@@ -59,6 +59,7 @@ static void take_order(struct gsm_device *device)
     device->order.kind = device->link->kind;
     device->order.index = index < GSM_PARAMETERS ? (uint32_t)index : GSM_PARAMETERS;
     device->order.value = value;
+    device->order.releases = device->releases;
     device->token_open = 1u;
     /* Last: the tick may come at any moment after. */
     device->orders_put = device->orders_put + 1u;
@@ -259,13 +260,30 @@ int gsm_device_connect(struct gsm_device *device)
     return gsb_link_open(device->link);
 }
 
+/* Whether no tick has run for longer than a gap that it would forgive. */
+static int ticks_have_ended(struct gsm_device *device)
+{
+    /* Before the clock: a tick in between must not be missed. */
+    const uint32_t beats = device->beats;
+    const uint32_t now_us = device->port.now_us(device->port.context);
+    const float most_us = ((float)device->config.gap_ticks + 1.0f) * device->config.interval_us;
+
+    if (!device->watching || beats != device->seen_beats) {
+        device->watching = 1u;
+        device->seen_beats = beats;
+        device->seen_us = now_us;
+    }
+    return (float)(now_us - device->seen_us) > most_us;
+}
+
 int gsm_device_poll(struct gsm_device *device)
 {
-    int found, worst;
+    int found, worst, ended;
 
     if (!device->link) {
         return GSB_ERROR_ARGUMENT;
     }
+    ended = ticks_have_ended(device);
     finish_order(device);
     worst = receive(device);
     found = feed(device);
@@ -277,7 +295,7 @@ int gsm_device_poll(struct gsm_device *device)
     found = send(device);
     if (found == GSB_ERROR_LINK || worst == GSB_ERROR_LINK) {
         gsm_device_stop(device);
-        return GSB_ERROR_LINK;
+        worst = GSB_ERROR_LINK;
     }
-    return worst;
+    return ended ? GSB_ERROR_CLOCK : worst;
 }
