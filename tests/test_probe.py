@@ -170,7 +170,10 @@ def flowing(run, row, apply, interval_nsec):
 
 @pytest.mark.parametrize("apply", ["next-tick", "on-arrival"])
 def test_in_force_and_lag_tell_what_a_rig_would_have_done(routing, tmp_path, apply):
-    """With answers 0 to 6 ticks late, each sample names the answer that flowed before it."""
+    """With answers 0 to 6 ticks late, each sample names the answer that flowed before it.
+
+    Where the machine held the client up for over a tick, it and the samples after are left out.
+    """
     delays_s = [0.0, 0.0024, 0.0061, 0.0007, 0.0013]
 
     def late(sample):
@@ -180,8 +183,12 @@ def test_in_force_and_lag_tell_what_a_rig_would_have_done(routing, tmp_path, app
     with Probe(router.endpoint, spec(tmp_path, apply=apply)) as probe:
         run = probe.paced(60)
     assert run.status == Status.DONE
+    tick = int(TICK_US * 1000)
+    held_up = [r for r in range(60) if run.sent_nsec[r] > run.start_nsec + (r + 1) * tick]
     for sample in router.samples:
-        in_force, lag_us = flowing(run, sample[0], apply, int(TICK_US * 1000))
+        if any(0 <= sample[0] - row <= 3 for row in held_up):
+            continue
+        in_force, lag_us = flowing(run, sample[0], apply, tick)
         assert sample[2] == in_force
         # On the wire in whole microseconds.
         assert sample[3] is lag_us or abs(sample[3] - lag_us) <= 0.51

@@ -56,8 +56,8 @@ class Desk:
         for k in range(len(cells)):
             self.verbs.put_in_force(k, model, build_tables(model.spec))
 
-    def send(self, *order, **_meaning):
-        self.orders.append(order[:4])
+    def send(self, kind, cell=0, index=0, value=0.0, *_, **_meaning):
+        self.orders.append((kind, cell, index, value))
         return len(self.orders)
 
     def ask(self, verb, /, **arguments):

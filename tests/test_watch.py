@@ -15,7 +15,7 @@ from gatestep.states import FAULT_TEXTS, Fault, State
 from gatestep.tick import LOOP
 from gatestep.watch import Durations, Watch
 
-COUNTERS = [name for name, _ in LOOP.descr if name in set(Watch(["a"]).counters())]
+COUNTERS = [name for name, *_ in LOOP.descr if name in set(Watch(["a"]).counters())]
 BIN = 2.0 ** (1 / 16)
 
 
