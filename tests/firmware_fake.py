@@ -18,6 +18,7 @@ from firmware_build import NOW, READ, SEND, STATES, Config, Limits, Port, librar
 from firmware_naive import Setting, frame, unframe
 
 WRAP = 2**32
+CLOCK_RATES = (0.0, 0.1, 0.7, 0.999, 1.0, 1.0, 1.00005, 1.01, 3.0)
 RAIL = math.nan  # what gsb_adc_mv gives at either end of the range
 
 
@@ -39,6 +40,8 @@ class Rates:
     lost_link: float = 0.0
     stall: float = 0.0
     """Share of sends that take nothing."""
+    odd_clock: float = 0.0
+    """Share of ticks from which on the device's clock runs at another rate, or stands still."""
 
 
 class Converter:
@@ -209,11 +212,16 @@ class Host:
 
 
 class Board:
-    """The C library on a fake board. ``log`` is what its callbacks saw in the last call."""
+    """The C library on a fake board. ``log`` is what its callbacks saw in the last call.
+
+    ``now`` is the true time; the device sees its own clock, which ``set_clock`` makes run at
+    another rate.
+    """
 
     def __init__(self, setting: Setting, rng: random.Random, rates: Rates, now: int) -> None:
         self.setting, self.rng, self.rates = setting, rng, rates
         self.now, self.start, self.log = now, now, []  # type: ignore[var-annotated]
+        self.rate, self._clock_from = 1.0, (now, 0)
         self.fault: BaseException | None = None
         self.converter = Converter(rng, rates, setting.cells)
         self.line = Line(rng, rates, setting)
@@ -227,13 +235,14 @@ class Board:
             READ(self._guard(self._write)),
             SEND(self._guard(self._send)),
             SEND(self._guard(self._receive)),
-            NOW(self._guard(lambda _: self.now % WRAP)),
+            NOW(self._guard(lambda _: (self.start + self.age) % WRAP)),
         )
         self._make()
 
     def _make(self) -> None:
         setting, c = self.setting, self._c
-        config = Config(setting.cells, setting.interval_us, setting.on_arrival, setting.silence_us)
+        config = Config(setting.cells, setting.interval_us, setting.on_arrival)
+        config.silence_us, config.greeting_us = setting.silence_us, setting.greeting_us
         for k in range(setting.cells):
             config.cell[k] = Limits(
                 setting.limit_pa[k], setting.slew_pa_per_ms[k], *setting.window_mv
@@ -319,7 +328,13 @@ class Board:
     @property
     def age(self) -> int:
         """Its clock without the wrap, from when it was made."""
-        return self.now - self.start
+        from_now, from_age = self._clock_from
+        return from_age + int((self.now - from_now) * self.rate)
+
+    def set_clock(self, rate: float) -> None:
+        """From now on its clock runs at so many times the true rate."""
+        self._clock_from = self.now, self.age
+        self.rate = rate
 
     @property
     def state(self) -> str:

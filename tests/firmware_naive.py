@@ -37,10 +37,16 @@ class Setting:
     window_mv: tuple[float, float]
     room: int
     ring: int
+    greeting_us: int = 0
 
     @property
     def cells(self) -> int:
         return len(self.limit_pa)
+
+    @property
+    def silence_ticks(self) -> int:
+        """Ticks without a valid answer that are no silence yet."""
+        return -(-self.silence_us // self.interval_us) + 1
 
 
 def cobs(data: bytes) -> bytes:
@@ -99,9 +105,12 @@ class Naive:
         self.state, self.broken, self.opened = IDLE, True, False
         self.taken: dict[int, int] = {}
         self.next_seq, self.valid_from, self.newest = 0, 0, -1
-        self.first_us: int | None = None
+        self.due_nsec: int | None = None
+        self.ticked: int | None = None
+        self.unanswered = 0
+        self.since = 0
         self.i_pa = [F32(0)] * setting.cells
-        self.waiting: tuple[int, list[np.float32]] | None = None
+        self.waiting: tuple[int, list[np.float32] | None] | None = None
         self.applied: int | None = None
         self.changed, self.heard, self.greeted = 0, 0, now
         self.in_force: int | None = None
@@ -122,12 +131,16 @@ class Naive:
     def fault(self, what: str) -> None:
         self.zero()
         if what in ENDS_LINK:
+            self.since = self.now
             self.state, self.broken, self.opened = IDLE, True, False
 
-    def apply(self, seq: int, currents: list[np.float32]) -> None:
+    def apply(self, seq: int, currents: list[np.float32] | None) -> None:
+        """Let an answer flow; one without currents is not live and waits for no slew limit."""
         span = F32(min(self.now - self.changed, self.set.interval_us))
         clipped = False
-        for k, asked in enumerate(currents):
+        if currents is None:
+            self.i_pa = [F32(0)] * self.set.cells
+        for k, asked in enumerate(currents or []):
             step = F32(self.set.slew_pa_per_ms[k]) * span * F32(1e-3)
             limit, last = F32(self.set.limit_pa[k]), self.i_pa[k]
             low, high = max(last - step, -limit), min(last + step, limit)
@@ -177,6 +190,7 @@ class Naive:
         self.begin(now, log)
         self.zero()
         self.state, self.broken, self.opened = GREETING, False, False
+        self.since = now
         self.stream, self.phase, self.greeted = b"", "greeting", now
         self.out = b""
         if self.set.serial:
@@ -190,16 +204,16 @@ class Naive:
 
     def tick(self, now: int, v_mv: list[float], log: list[Any]) -> None:
         self.begin(now, log)
-        self.check_silence()
-        if self.first_us is None:
-            self.first_us = now
-        # The nearest tick of a clock that began with the first one; later halves go up.
-        by_clock = (2 * (now - self.first_us) + self.set.interval_us) // (2 * self.set.interval_us)
-        seq = max(self.next_seq, by_clock)
+        sample = [0, now, self.in_force, self.lag_us, *(float(F32(v)) for v in v_mv)]
+        self.unanswered += 1
+        self.check_time()
+        seq = sample[0] = self.count(now)
         self.next_seq, self.taken[seq] = seq + 1, now
-        sample = [seq, now, self.in_force, self.lag_us, *(float(F32(v)) for v in v_mv)]
+        still, self.ticked = self.ticked == now, now
         low, high = self.set.window_mv
-        if not all(low <= v <= high for v in v_mv):
+        if still:
+            self.fault("clock")
+        elif not all(low <= v <= high for v in v_mv):
             self.fault("voltage")
         elif self.waiting and self.state == RUNNING:
             self.apply(*self.waiting)
@@ -214,9 +228,20 @@ class Naive:
                 self.send()
         self.end()
 
+    def count(self, now: int) -> int:
+        """The number of a tick: the nearest of a schedule that goes after the clock."""
+        interval = 1000 * self.set.interval_us
+        if self.due_nsec is None:
+            self.due_nsec = 1000 * now
+        past = max(0, (1000 * now - self.due_nsec + interval // 2) // interval)
+        off = 1000 * now - (self.due_nsec + past * interval)
+        # An eighth of what the tick is off, to the whole nanosecond towards 0.
+        self.due_nsec += (past + 1) * interval + (off // 8 if off > 0 else -(-off // 8))
+        return self.next_seq + past
+
     def poll(self, now: int, log: list[Any]) -> None:
         self.begin(now, log)
-        self.check_silence()
+        self.check_time()
         self.write()
         while not self.broken and self.log and self.log[0][0] in ("received", "gone"):
             kind, data = self.log.popleft()
@@ -285,7 +310,7 @@ class Naive:
             self.opened = False
             self.hello()
             self.zero()
-            self.state = GREETING
+            self.state, self.since = GREETING, self.now
 
     def welcome(self, payload: bytes) -> None:
         """Only sound ones are sent here, or those of another number of cells."""
@@ -295,11 +320,11 @@ class Naive:
             self.run()
         else:
             self.fault("another number of cells")
-            self.state = GREETING
+            self.state, self.since = GREETING, self.now
 
     def run(self) -> None:
         self.zero()
-        self.state, self.heard = RUNNING, self.now
+        self.state, self.heard, self.unanswered = RUNNING, self.now, 0
 
     def zmtp_step(self) -> bool:
         if self.phase == "greeting":
@@ -323,10 +348,13 @@ class Naive:
 
     # ---- answers ----
 
-    def check_silence(self) -> None:
-        if self.state == RUNNING and self.now - self.heard >= self.set.silence_us:
+    def check_time(self) -> None:
+        late = self.now - self.heard >= self.set.silence_us
+        if self.state == RUNNING and (late or self.unanswered > self.set.silence_ticks):
             self.state = SILENT
             self.fault("silence")
+        elif self.state == GREETING and 0 < self.set.greeting_us <= self.now - self.since:
+            self.fault("greeting")
 
     def answer(self, data: bytes) -> None:
         found = read_answer(data, self.set.cells)
@@ -334,19 +362,19 @@ class Naive:
             self.fault("message")
             return
         seq, flags, currents = found
-        self.check_silence()
+        self.check_time()
         if self.state not in (RUNNING, SILENT):
             return
         if seq is None:
             self.fault("rejected")
-        elif not all(np.isfinite(i) for i in currents):
+        elif flags & LIVE and not all(np.isfinite(i) for i in currents):
             self.fault("not finite")
         elif seq >= self.next_seq:
             self.fault("sequence")
         elif seq > self.newest and seq >= self.valid_from:
-            self.newer(seq, currents if flags & LIVE else [F32(0)] * self.set.cells)
+            self.newer(seq, currents if flags & LIVE else None)
 
-    def newer(self, seq: int, currents: list[np.float32]) -> None:
+    def newer(self, seq: int, currents: list[np.float32] | None) -> None:
         if self.next_seq - seq > self.set.ring:
             return
         if seq not in self.taken:
@@ -354,8 +382,10 @@ class Naive:
             return
         if self.now - self.taken[seq] >= self.set.silence_us:
             return
-        self.newest, self.heard, self.state = seq, self.now, RUNNING
-        if self.set.on_arrival:
+        if self.next_seq - seq > self.set.silence_ticks:
+            return
+        self.newest, self.heard, self.state, self.unanswered = seq, self.now, RUNNING, 0
+        if self.set.on_arrival or (currents is None and any(self.i_pa)):
             self.apply(seq, currents)
         else:
             self.waiting = (seq, currents)

@@ -14,7 +14,7 @@ from itertools import pairwise
 import msgpack
 import numpy as np
 import pytest
-from firmware_fake import WRAP, Board, Rates
+from firmware_fake import CLOCK_RATES, WRAP, Board, Rates
 from firmware_naive import Naive, Setting, frame
 from hypothesis import Phase, given, settings
 from hypothesis import strategies as st
@@ -31,6 +31,17 @@ class Watch:
         self.last = [0.0] * setting.cells
         self.seen = 0
         self.heard_us = 0
+        self.ticks, self.ticked_us = 0, -1
+
+    def check_tick(self, board: Board, begun_us: int) -> None:
+        """After a tick as well: none that no time has led up to, nor one too many, lets flow."""
+        self.ticks += 1
+        self.check(board, begun_us)
+        if begun_us == self.ticked_us:
+            assert not any(self.last), "a current by a clock that stands still"
+        if self.ticks > self.set.silence_us / self.set.interval_us + 2:
+            assert not any(self.last), "a current after as many ticks as the silence has"
+        self.ticked_us = begun_us
 
     def check(self, board: Board, begun_us: int) -> None:
         """After each call: limits, slew, and no current after the silence."""
@@ -44,7 +55,7 @@ class Watch:
             self.last = i_pa
         self.seen = len(board.written)
         if came:
-            self.heard_us = board.age
+            self.heard_us, self.ticks = board.age, 0
         elif begun_us - self.heard_us >= self.set.silence_us:
             assert not any(self.last), "a current after the silence time-out"
         if board.state != "running":
@@ -72,6 +83,8 @@ def _play(setting: Setting, rates: Rates, seed: int, ticks: int = TICKS) -> tupl
     connect()
     due = board.now + setting.interval_us
     for _ in range(ticks):
+        if rates.odd_clock and rng.random() < rates.odd_clock:
+            board.set_clock(rng.choice(CLOCK_RATES))
         if rng.random() < rates.missed_tick:
             due += setting.interval_us * rng.choice([1, 2, 5, 4000 // setting.interval_us])
             due += 130_000 * (rng.random() < 0.05)
@@ -83,7 +96,7 @@ def _play(setting: Setting, rates: Rates, seed: int, ticks: int = TICKS) -> tupl
         begun = board.age
         log = board.tick()
         model.tick(begun, board.v_mv, log)
-        watch.check(board, begun)
+        watch.check_tick(board, begun)
         due += setting.interval_us
         board.line.gone = board.line.gone or rng.random() < rates.lost_link / 4
         if board.broken and rng.random() < 0.4:
@@ -105,6 +118,7 @@ def _settings(draw):
         window_mv=(-120.0, 90.0),
         room=draw(st.sampled_from([256, 2048])),
         ring=draw(st.sampled_from([4, 64])),
+        greeting_us=draw(st.sampled_from([0, 0, interval_us * 3])),
     )
 
 
@@ -122,6 +136,7 @@ _RATES = st.builds(
     missed_tick=_SHARES,
     lost_link=_SHARES,
     stall=_SHARES,
+    odd_clock=_SHARES,
 )
 
 
@@ -168,7 +183,7 @@ def test_a_sound_loop_reports_what_the_wire_promises(serial, on_arrival, behind)
 
 def test_the_faults_do_happen():
     """Over some seeds every counter moves, currents flow, and all four states are seen."""
-    rates = Rates(*[0.03] * 11)
+    rates = Rates(*[0.03] * 12)
     counted, flowed, states = Counter(), 0, set()  # type: ignore[var-annotated]
     for seed in range(12):
         for serial in (False, True):

@@ -22,12 +22,19 @@ struct gsb_converter {
 /* GSB_OK, or GSB_ERROR_ARGUMENT for bits, gain or offset that cannot be. */
 int gsb_converter_check(const struct gsb_converter *converter);
 
+/* Whether a DAC can give every current up to current_pa, of both signs, within one code, and
+ * has a code for 0 pA: GSB_OK or GSB_ERROR_ARGUMENT. Ask before anything is connected, with
+ * the limit of the cell: a current beyond the converter's range would be cut in silence, and
+ * samples would name an answer of which less flowed. */
+int gsb_dac_check(const struct gsb_converter *dac, float current_pa);
+
 /* An ADC's code in mV. A code at either end of the range means that the voltage is not
  * known: NaN, so that the rig goes to 0 pA. A code beyond the range likewise. */
 float gsb_adc_mv(const struct gsb_converter *adc, uint32_t code);
 
-/* The DAC's code nearest to a current, held within its range. NaN or infinite: the code
- * nearest to 0 pA. */
+/* The DAC's code nearest to a current, held within its range. NaN or infinite, or a
+ * converter that gsb_converter_check refuses: the code nearest to 0 pA; the middle one when
+ * even code_at_zero is no number. */
 uint32_t gsb_dac_code(const struct gsb_converter *dac, float i_pa);
 
 /* The current that a code gives, pA: what truly flows after rounding and saturation. */

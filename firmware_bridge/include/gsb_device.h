@@ -48,6 +48,7 @@ struct gsb_device {
     uint64_t now_us;
     uint32_t clock_us;       /* the port's clock when last read */
     uint64_t greeted_us;     /* when hello was last said */
+    uint8_t stopped;         /* whether it was stopped and has not been released */
 };
 
 /* How often a hello is repeated, us. */
@@ -60,19 +61,26 @@ int gsb_device_init(struct gsb_device *device, const struct gsb_rig_config *conf
                     const struct gsb_port *port, const struct gsb_link *link,
                     struct gsb_taken *taken, uint32_t count);
 
-/* The stream under the callbacks has just been opened: greet. Call again after it was lost. */
+/* The stream under the callbacks has just been opened: greet. Call again after it was lost.
+ * GSB_OK, or an error; GSB_ERROR_STOPPED from a stop to its release, and nothing is sent. */
 int gsb_device_connect(struct gsb_device *device);
 
 /* A tick: measure, write what now flows, send the sample. GSB_OK, or the last fault. */
 int gsb_device_tick(struct gsb_device *device);
 
-/* Receive, send what waits, watch the time. GSB_OK, or the last fault; GSB_ERROR_LINK,
- * GSB_ERROR_PROTOCOL, GSB_ERROR_PEER and GSB_ERROR_GREETING leave the device idle: open the
- * stream anew and call gsb_device_connect. */
+/* Receive, send what waits, watch the time. GSB_OK, or the last fault. After either call,
+ * device->link.broken tells that the device is idle: open the stream anew and call
+ * gsb_device_connect. */
 int gsb_device_poll(struct gsb_device *device);
 
-/* Take everything to 0 pA and go idle, for a stop button or an alarm of one's own. */
+/* Take everything to 0 pA and go idle, for a stop button or an alarm of one's own. It holds
+ * until the release: a program that connects again whenever the link is gone does not undo
+ * it. Call it from where tick and poll are called. GSB_OK, or GSB_ERROR_OUTPUT when the
+ * converter did not take the 0 pA, which is tried again at every call. */
 int gsb_device_stop(struct gsb_device *device);
+
+/* Let gsb_device_connect work again, by a deliberate act of whoever stopped the device. */
+void gsb_device_release(struct gsb_device *device);
 
 #ifdef __cplusplus
 }

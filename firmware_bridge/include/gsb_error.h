@@ -18,7 +18,7 @@ enum gsb_error {
     GSB_ERROR_ARGUMENT = -1,
     /* A buffer is too small, or the link is so far behind that a sample did not fit. The
      * codecs have no output and write nothing; from a device, the sample was not sent.
-     * Output: 0 pA. */
+     * Output: 0 pA; idle as well where the link can say no more (ZMTP's READY or PONG). */
     GSB_ERROR_ROOM = -2,
     /* What came is no answer, or one for another number of cells. Output: 0 pA. */
     GSB_ERROR_MESSAGE = -3,
@@ -44,14 +44,17 @@ enum gsb_error {
     /* The port could not write its converter. Output: 0 pA is ordered and the write is
      * tried again at every call; what truly flows only the wiring can bound. */
     GSB_ERROR_OUTPUT = -12,
-    /* No valid answer for the silence time-out. Output: 0 pA, state silent. */
+    /* No valid answer for the silence time-out, by the clock or by the count of ticks.
+     * Output: 0 pA, state silent. */
     GSB_ERROR_SILENCE = -13,
     /* The handshake was not finished in time. Output: 0 pA, state idle. */
     GSB_ERROR_GREETING = -14,
-    /* The clock went backwards. Output: 0 pA. */
+    /* The clock went backwards, or stood still from one tick to the next. Output: 0 pA. */
     GSB_ERROR_CLOCK = -15,
     /* The server called a sample malformed ([nil, 128, 0]). Output: 0 pA. */
-    GSB_ERROR_REJECTED = -16
+    GSB_ERROR_REJECTED = -16,
+    /* The program stopped the device and has not released it. Output: 0 pA, idle. */
+    GSB_ERROR_STOPPED = -17
 };
 
 #endif

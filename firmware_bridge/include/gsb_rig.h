@@ -1,15 +1,19 @@
 /* The rig: which current flows, and what a sample may say of it. No link, no converter.
  *
- *   idle ------ the stream is open ------> greeting     0 pA
- *   greeting -- the handshake is done ---> running      0 pA
- *   running --- silence_us no answer ----> silent       current of the answers
- *   silent ---- a valid answer ----------> running      0 pA
- *   any ------- the link is lost --------> idle
- *   any ------- the host says goodbye ---> greeting
+ *   state       what ends it                    the next      output while in the state
+ *   idle        the stream is open              greeting      0 pA
+ *   greeting    the handshake is done           running       0 pA
+ *   running     no valid answer: silence_us     silent        the answers' current
+ *   silent      a valid answer                  running       0 pA
+ *   any         the link is lost                idle
+ *   any         the host says goodbye           greeting
  *
  * Current flows in `running` alone. Whatever a fault is, it takes every cell to 0 pA at
- * once, and only the answer to a sample taken after the fault brings current back. Time is
- * the caller's microseconds and must not go backwards.
+ * once, and only the answer to a sample taken after the fault brings current back. An
+ * answer that is not live takes every cell to 0 pA at once as well.
+ *
+ * Time is the caller's microseconds. It must not go backwards, nor stand still from one
+ * tick to the next: either is a fault. A clock that is slow is held against the ticks.
  */
 #ifndef GSB_RIG_H
 #define GSB_RIG_H
@@ -26,7 +30,8 @@ enum gsb_state { GSB_IDLE = 0, GSB_GREETING = 1, GSB_RUNNING = 2, GSB_SILENT = 3
 struct gsb_cell_limits {
     float current_pa;     /* largest magnitude, pA; above 0, finite */
     float slew_pa_per_ms; /* fastest change, pA/ms; above 0, finite. A tick that is late, or
-                             answers that are missing, allow no more than one tick's change */
+                             answers that are missing, allow no more than one tick's change.
+                             It slows live answers only; everything else is at 0 at once */
     float window_low_mv;  /* a voltage below this is a fault; inside the converter's range */
     float window_high_mv; /* a voltage above this is a fault */
 };
@@ -35,7 +40,8 @@ struct gsb_rig_config {
     uint32_t cells;       /* 1 to GSB_CELLS_MAX; as many as the server's rig file has */
     float interval_us;    /* tick of the sample clock, us; 1 to 1e6, the server's interval_us */
     uint32_t on_arrival;  /* 0: an answer flows from the next tick; 1: from its arrival */
-    uint32_t silence_us;  /* no valid answer for this long: 0 pA; 1 to 1e7 us */
+    uint32_t silence_us;  /* no valid answer for this long, or for as many ticks as it has and
+                             one more, whatever the clock says: 0 pA; 1 to 1e7 us */
     uint32_t greeting_us; /* a handshake longer than this fails; 0: it may take for ever */
     struct gsb_cell_limits cell[GSB_CELLS_MAX];
 };
@@ -62,6 +68,8 @@ struct gsb_rig {
     struct gsb_rig_config config;
     struct gsb_taken *taken;
     uint32_t taken_mask;
+    uint32_t silence_ticks; /* ticks without a valid answer that are no silence yet */
+    uint32_t unanswered;    /* ticks since the last valid answer */
     int32_t last_error;     /* the newest fault (enum gsb_error), 0 before the first */
     uint8_t state;          /* enum gsb_state */
     uint8_t started;        /* whether a tick has been */
@@ -72,6 +80,7 @@ struct gsb_rig {
     uint64_t since_us;      /* when the state was entered */
     uint64_t heard_us;      /* the last valid answer */
     uint64_t changed_us;    /* when i_pa was last decided */
+    uint64_t ticked_us;     /* the last tick */
     uint64_t due_us;        /* the next tick by the sample clock */
     uint32_t due_nsec;      /* and its fraction, 0 to 999 */
     int64_t next_seq;
@@ -94,19 +103,28 @@ struct gsb_rig {
 int gsb_rig_init(struct gsb_rig *rig, const struct gsb_rig_config *config,
                  struct gsb_taken *taken, uint32_t count);
 
-/* The stream has been opened; the handshake is done; the link has ended or begins again. */
+/* The stream has been opened; the handshake is done; something failed, and the rig goes on;
+ * the link has ended, whatever the error, and the rig is idle. */
 int gsb_rig_greet(struct gsb_rig *rig, uint64_t now_us);
 int gsb_rig_run(struct gsb_rig *rig, uint64_t now_us);
 int gsb_rig_fault(struct gsb_rig *rig, uint64_t now_us, int error);
+int gsb_rig_lose(struct gsb_rig *rig, uint64_t now_us, int error);
 
 /* A tick of the sample clock: makes the sample to send from the voltages just measured,
- * and with next-tick lets the waiting answer flow from now on. seq follows the clock:
- * ticks that it went past are counted and left out. GSB_OK, or a fault; the sample is to be
- * sent in either case while the rig is running or silent. */
+ * and with next-tick lets the waiting answer flow from now on. What the sample says of the
+ * current is what flowed when the voltages were measured.
+ *
+ * seq follows the clock: ticks that it went past are counted and left out. The schedule
+ * that a tick is held against moves by an eighth of what each is off, so that neither
+ * jitter nor the drift of two oscillators ever adds up to a tick.
+ *
+ * GSB_OK, or a fault; GSB_ERROR_CLOCK when no time has passed since the tick before. The
+ * sample is to be sent in either case while the rig is running or silent. */
 int gsb_rig_tick(struct gsb_rig *rig, uint64_t now_us, const float *v_mv,
                  struct gsb_sample *sample);
 
-/* An answer has come. GSB_OK, GSB_IGNORED or a fault. */
+/* An answer has come. GSB_OK, GSB_IGNORED or a fault, among them those of gsb_rig_poll. One
+ * that is not live is obeyed at once, by a rig with next-tick also, where a current flows. */
 int gsb_rig_answer(struct gsb_rig *rig, uint64_t now_us, const struct gsb_answer *answer);
 
 /* Nothing has come: call it as often as possible. GSB_OK, or GSB_ERROR_SILENCE or

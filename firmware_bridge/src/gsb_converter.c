@@ -8,7 +8,7 @@
 
 static uint32_t top_code(const struct gsb_converter *converter)
 {
-    return ((uint32_t)1 << converter->bits) - 1;
+    return ((uint32_t)1 << (converter->bits < BITS_MAX ? converter->bits : BITS_MAX)) - 1;
 }
 
 int gsb_converter_check(const struct gsb_converter *converter)
@@ -46,12 +46,11 @@ static uint32_t nearest(const struct gsb_converter *dac, float place)
 
 uint32_t gsb_dac_code(const struct gsb_converter *dac, float i_pa)
 {
-    float place;
-
-    if (gsb_converter_check(dac))
-        return 0;
-    place = gsb_is_finite(i_pa) ? i_pa / dac->per_code + dac->code_at_zero : dac->code_at_zero;
-    return nearest(dac, place);
+    if (!gsb_is_finite(dac->code_at_zero))
+        return top_code(dac) / 2;
+    if (gsb_converter_check(dac) || !gsb_is_finite(i_pa))
+        return nearest(dac, dac->code_at_zero);
+    return nearest(dac, i_pa / dac->per_code + dac->code_at_zero);
 }
 
 float gsb_dac_pa(const struct gsb_converter *dac, uint32_t code)
@@ -59,4 +58,22 @@ float gsb_dac_pa(const struct gsb_converter *dac, uint32_t code)
     if (gsb_converter_check(dac))
         return 0.0f;
     return value_of(dac, code < top_code(dac) ? code : top_code(dac));
+}
+
+/* Whether what flows for a current is that current, to one code. */
+static int given(const struct gsb_converter *dac, float i_pa)
+{
+    float off = gsb_dac_pa(dac, gsb_dac_code(dac, i_pa)) - i_pa;
+    float code = dac->per_code < 0.0f ? -dac->per_code : dac->per_code;
+
+    return off <= code && off >= -code;
+}
+
+int gsb_dac_check(const struct gsb_converter *dac, float current_pa)
+{
+    if (gsb_converter_check(dac) || !(current_pa > 0.0f) || !gsb_is_finite(current_pa) ||
+        dac->code_at_zero < 0.0f || dac->code_at_zero > (float)top_code(dac) ||
+        !given(dac, current_pa) || !given(dac, -current_pa))
+        return GSB_ERROR_ARGUMENT;
+    return GSB_OK;
 }

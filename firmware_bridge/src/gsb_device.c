@@ -48,11 +48,18 @@ static int fail(struct gsb_device *device, int error)
 }
 
 /* A link that is gone is of no use until the stream is opened anew. */
-static int lose(struct gsb_device *device, int error)
+static void shut(struct gsb_device *device)
 {
     device->link.opened = 0;
     device->link.broken = 1;
-    return fail(device, error);
+}
+
+static int lose(struct gsb_device *device, int error)
+{
+    shut(device);
+    gsb_rig_lose(&device->rig, now(device), error);
+    write_out(device);
+    return error;
 }
 
 static int send_out(struct gsb_device *device)
@@ -97,8 +104,13 @@ int gsb_device_init(struct gsb_device *device, const struct gsb_rig_config *conf
 
 int gsb_device_connect(struct gsb_device *device)
 {
-    int outcome = gsb_rig_greet(&device->rig, now(device));
+    int outcome;
 
+    if (device->stopped) {
+        write_out(device);
+        return GSB_ERROR_STOPPED;
+    }
+    outcome = gsb_rig_greet(&device->rig, now(device));
     if (outcome == GSB_OK)
         outcome = gsb_link_open(&device->link);
     device->greeted_us = device->now_us;
@@ -110,8 +122,20 @@ int gsb_device_connect(struct gsb_device *device)
 
 int gsb_device_stop(struct gsb_device *device)
 {
-    lose(device, GSB_ERROR_LINK);
+    device->stopped = 1;
+    lose(device, GSB_ERROR_STOPPED);
     return gsb_rig_write_due(&device->rig) ? GSB_ERROR_OUTPUT : GSB_OK;
+}
+
+void gsb_device_release(struct gsb_device *device)
+{
+    device->stopped = 0;
+}
+
+/* Whether the rig has given up the handshake, of which the link cannot know. */
+static int timed_out(const struct gsb_device *device)
+{
+    return gsb_rig_state(&device->rig) == GSB_IDLE && !device->link.broken;
 }
 
 static int send_sample(struct gsb_device *device, const struct gsb_sample *sample)
@@ -144,6 +168,8 @@ int gsb_device_tick(struct gsb_device *device)
         device->rig.last_error = GSB_ERROR_INPUT;
         outcome = GSB_ERROR_INPUT;
     }
+    if (timed_out(device))
+        shut(device);
     written = write_out(device);
     if (device->link.opened)
         sent = send_sample(device, &sample);
@@ -237,8 +263,8 @@ int gsb_device_poll(struct gsb_device *device)
     int timely = gsb_rig_poll(&device->rig, now(device));
     int came, written, sent;
 
-    if (timely == GSB_ERROR_GREETING)
-        lose(device, timely);
+    if (timed_out(device))
+        shut(device);
     written = write_out(device);
     came = receive(device);
     greet_again(device);

@@ -43,7 +43,7 @@ struct software_rig {
     struct posix_stream stream;
     double v_mv, decay, injected_pa, command_pa;
     double t_ms;
-    uint64_t tick, start_us;
+    uint64_t tick, start_us, ticked_us;
     double opened_us; /* virtual: the handshake took a tick, so that time has passed by then */
     uint8_t in[512], out[2048];
     struct gsb_taken taken[TAKEN];
@@ -245,9 +245,13 @@ static void hold(struct software_rig *rig, int *held)
 static void wait_for_tick(struct software_rig *rig)
 {
     double due_us = (double)rig->tick * rig->settings.interval_us;
+    uint64_t now_us = posix_now_us();
 
-    while ((double)(posix_now_us() - rig->start_us) < due_us)
+    /* Ticks that are made up for follow one another, but never in the same microsecond. */
+    while ((double)(now_us - rig->start_us) < due_us || now_us == rig->ticked_us) {
         gsb_device_poll(&rig->device);
+        now_us = posix_now_us();
+    }
 }
 
 static int run(struct software_rig *rig)
@@ -263,6 +267,7 @@ static int run(struct software_rig *rig)
         if (s->real > 0)
             wait_for_tick(rig);
         gsb_device_tick(&rig->device);
+        rig->ticked_us = posix_now_us();
         if (rig->device.link.broken ||
             (s->real <= 0 && !await_answers(rig, (uint32_t)rig->tick + 1)))
             return 0;
@@ -275,7 +280,7 @@ int main(int argc, char **argv)
 {
     static struct software_rig rig;
     const struct gsb_counters *n = &rig.device.rig.counters;
-    int whole;
+    int whole, error;
 
     if (argc < 2 || settle(&rig.settings, argc, argv)) {
         fprintf(stderr, "usage: posix_rig ENDPOINT [KEY=VALUE ...]; see posix_rig.c\n");
@@ -284,10 +289,10 @@ int main(int argc, char **argv)
     if (make(&rig, argv[1]))
         return 2;
     whole = open_loop(&rig) && run(&rig);
+    error = whole ? 0 : rig.device.rig.last_error;
     gsb_device_stop(&rig.device);
     posix_stream_close(&rig.stream);
     printf("end samples %u answers %u skipped %u ignored %u clipped %u faults %u error %d\n",
-           n->samples, n->answers, n->skipped, n->ignored, n->clipped, n->faults - 1,
-           whole ? 0 : rig.device.rig.last_error);
+           n->samples, n->answers, n->skipped, n->ignored, n->clipped, n->faults - 1, error);
     return whole ? 0 : 1;
 }
