@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import re
-import shutil
 import subprocess
 import threading
 import time
@@ -14,17 +13,13 @@ from pathlib import Path
 
 import pytest
 from conftest import wait_until
-from firmware_build import run
-from firmware_model_build import folder
 from test_firmware_m4f import (
-    EXAMPLE,
     LONGEST_S,
-    MODEL,
     check_exchange,
     command,
     image,
     serve,
-    tools,
+    variant,
 )
 
 from gatestep.bridgehost import Bridge
@@ -33,19 +28,12 @@ from gatestep.bridgemodel import EVERY, Supervisor, Trace
 from gatestep.errors import ControlError
 
 
-def patient(made: Path) -> Path:
+def patient() -> Path:
     """The supervised image with a silence time-out that no load of this machine reaches.
 
     Its clock runs ahead of ours, so that its own half second may be over in no time.
     """
-    copy = made / "cortex_m4f"
-    shutil.copytree(EXAMPLE, copy)
-    source = (copy / "supervised.c").read_text()
-    assert source.count("500000u,") == 1
-    (copy / "supervised.c").write_text(source.replace("500000u,", "1000000000u,"))
-    settings = [f"MODEL={folder(MODEL)}", f"BUILD={made}", f"CROSS={tools()[0]}"]
-    run(["make", "-s", "-C", copy, *settings, made / "supervised.elf"])
-    return made / "supervised.elf"
+    return variant("patient", "500000u,", "1000000000u,")
 
 
 @contextmanager
@@ -98,7 +86,7 @@ def settled(supervisor: Supervisor, traces: list[Trace], state: int, count: int 
     return traces[-1]
 
 
-def test_a_model_on_the_device_is_supervised(tmp_path):
+def test_a_model_on_the_device_is_supervised():
     """Its parameters are read and set, it is armed, watched and disarmed, over the same line.
 
     Its cell is 9 nS of leak at -54.387 mV. With the squid axon's conductances it rests near
@@ -106,7 +94,7 @@ def test_a_model_on_the_device_is_supervised(tmp_path):
     """
     traces: list[Trace] = []
     with (
-        on_a_pty(patient(tmp_path), "-icount", "shift=0,sleep=off") as (device, _),
+        on_a_pty(patient(), "-icount", "shift=0,sleep=off") as (device, _),
         Line(device, 115_200) as line,
         Supervisor(line, traces.append) as supervisor,
     ):

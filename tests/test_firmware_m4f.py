@@ -77,6 +77,21 @@ def image(name: str, model: str = MODEL, contract: str = "off") -> Path:
     return target
 
 
+def variant(tag: str, old: str, new: str) -> Path:
+    """The supervised image with a line of its source changed."""
+    usual = image("supervised").parent
+    copy, build = usual.parent / f"cortex_m4f-{tag}", usual.parent / f"build-{tag}"
+    shutil.copytree(EXAMPLE, copy)
+    shutil.copytree(usual / "objects", build / "objects")
+    (build / "objects" / "supervised.o").unlink()
+    source = (copy / "supervised.c").read_text("utf-8")
+    assert source.count(old) == 1
+    (copy / "supervised.c").write_text(source.replace(old, new), "utf-8")
+    settings = [f"MODEL={folder(MODEL)}", f"BUILD={build}", f"CROSS={tools()[0]}"]
+    run(["make", "-s", "-C", copy, *settings, build / "supervised.elf"])
+    return build / "supervised.elf"
+
+
 def command(path: Path, link: str = "null", clock: tuple[str, ...] = ()) -> list[str]:
     """How to run an image: the link's line where it is told, the console on stdout."""
     _, qemu = tools()
@@ -319,6 +334,32 @@ def test_a_host_supervises_the_model_on_the_device():
         assert host.order(ARM) == 0
         silent = next(f for f in host.frames() if f.kind == TRACE and f.items[2] == 0)
         assert silent.items[4] == 0.0
+
+
+SYSTICK_OFF = "*(volatile uint32_t *)0xE000E010u = 0u;"
+ENDS = {
+    "ticks": ("    ticked = 1u;\n", f"    ticked = 1u;\n    if (device.beats > 99u) {SYSTICK_OFF}\n"),
+    "loop": ("        turn();\n", "        while (device.beats > 100u) {}\n        turn();\n"),
+}
+
+
+@pytest.mark.parametrize("what", ENDS)
+def test_the_watchdog_ends_what_hangs(what):
+    """Without ticks or without the main loop it opens the relay and then resets the board."""
+    built = command(variant(f"without-{what}", *ENDS[what]), clock=("-icount", "shift=0"))
+    process = subprocess.Popen(built, stdout=subprocess.PIPE, text=True)
+    watch = threading.Timer(LONGEST_S, process.kill)
+    watch.start()
+    try:
+        assert process.stdout is not None
+        told = [process.stdout.readline().split(" ")[0] for _ in range(3)]
+    finally:
+        watch.cancel()
+        process.kill()
+        process.communicate()
+    assert told.count("model") >= 2
+    # While the emulated processor sleeps, its two time-outs may pass as one.
+    assert what == "ticks" or told == ["model", "watchdog:", "model"]
 
 
 def _alpha_n(v: float) -> float:

@@ -1,6 +1,6 @@
-/* Start-up, serial lines, clock and tick of the MPS2 board with the AN386 image.
+/* Start-up, serial lines, clock, tick and watchdog of the MPS2 board with the AN386 image.
  *
- * Registers: Arm, Cortex-M System Design Kit TRM (UART) and Armv7-M Architecture Reference
+ * Registers: Arm, Cortex-M System Design Kit TRM (UART, watchdog) and Armv7-M Architecture Reference
  * Manual (SysTick, FPU, vectors); addresses: Arm application note AN386.
  */
 #include "board.h"
@@ -17,6 +17,16 @@
 #define TX_FULL 1u
 #define RX_FULL 2u
 #define BOTH_ON 3u
+
+#define WATCHDOG_LOAD REGISTER(0x40008000u)
+#define WATCHDOG_CTRL REGISTER(0x40008008u)
+#define WATCHDOG_CLEAR REGISTER(0x4000800Cu)
+#define WATCHDOG_LOCK REGISTER(0x40008C00u)
+#define WATCHDOG_KEY 0x1ACCE551u
+#define BARK_AND_RESET 3u
+
+#define LEDS REGISTER(0x40028000u)
+#define BUTTONS REGISTER(0x40028008u)
 
 #define SYST_CSR REGISTER(0xE000E010u)
 #define SYST_RVR REGISTER(0xE000E014u)
@@ -69,6 +79,15 @@ static void board_systick(void)
     tick_function();
 }
 
+/* The watchdog's first time-out, which nothing masks; its second is the reset. */
+static void board_bark(void)
+{
+    board_relay(0);
+    board_text("watchdog: relay open\n");
+    for (;;) {
+    }
+}
+
 typedef void (*vector)(void);
 
 __attribute__((section(".vectors"), used)) static const struct {
@@ -76,7 +95,7 @@ __attribute__((section(".vectors"), used)) static const struct {
     vector handlers[15];
 } board_vectors = {
     board_stack_top,
-    {board_reset, board_fault, board_fault, board_fault, board_fault, board_fault, 0, 0, 0, 0,
+    {board_reset, board_bark, board_fault, board_fault, board_fault, board_fault, 0, 0, 0, 0,
      board_fault, board_fault, 0, board_fault, board_systick}};
 
 void board_start(void)
@@ -187,6 +206,35 @@ uint32_t board_now_us(void)
                        (counts_per_tick - 1u - left)) /
                       (BOARD_HZ / 1000000u));
 }
+
+/* ---- relay, button, watchdog ---- */
+
+void board_relay(int closed)
+{
+    LEDS = closed ? 1u : 0u;
+}
+
+int board_stop_is_held(void)
+{
+    return (BUTTONS & 1u) != 0u;
+}
+
+void board_watchdog_start(uint32_t counts)
+{
+    WATCHDOG_LOCK = WATCHDOG_KEY;
+    WATCHDOG_LOAD = counts;
+    WATCHDOG_CTRL = BARK_AND_RESET;
+    WATCHDOG_LOCK = 0u;
+}
+
+void board_watchdog_kick(void)
+{
+    WATCHDOG_LOCK = WATCHDOG_KEY;
+    WATCHDOG_CLEAR = 1u;
+    WATCHDOG_LOCK = 0u;
+}
+
+/* ---- rest ---- */
 
 void board_rest(void)
 {

@@ -34,6 +34,17 @@ uint32_t board_counts(void);
 void board_tick_every(uint32_t counts, void (*tick)(void));
 uint32_t board_now_us(void);
 
+/* The relay between DAC and amplifier, open from reset on; here LED 0 of the board. */
+void board_relay(int closed);
+
+/* Whether the stop button, here button 0 of the board, is held. */
+int board_stop_is_held(void);
+
+/* Start the watchdog. Not kicked for so many counts it opens the relay, and after as many
+ * again it resets the board, whatever the program does meanwhile. */
+void board_watchdog_start(uint32_t counts);
+void board_watchdog_kick(void);
+
 /* Wait for an interrupt. */
 void board_rest(void);
 

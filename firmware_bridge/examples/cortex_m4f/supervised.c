@@ -3,6 +3,10 @@
  *
  * The tick runs in the timer's interrupt, the poll in the main loop. The cell is a
  * capacitance and a leak; on a board, the two callbacks at the top reach the converters.
+ *
+ * What ends the current when either stops: with the main loop hung, the tick goes on, obeys
+ * the stop button, and disarms after silence_us; with the ticks gone, the poll says so and
+ * the relay opens; and without both of them the watchdog opens it and resets the board.
  */
 #include "board.h"
 #include "gsm_device.h"
@@ -10,11 +14,14 @@
 #define LEAK_NS 9.0f
 #define LEAK_MV (-54.387f)
 #define PER_PF (1.0f / 32.0f)
+/* 10 ms: many ticks, and short beside what a cell can stand. */
+#define WATCHDOG_COUNTS (BOARD_HZ / 100u)
 
 static struct gsm_device device;
 static struct gsb_link link;
 static uint8_t in[GSB_LINK_IN_MIN], out[GSB_LINK_OUT_MIN];
 static float v_mv = LEAK_MV;
+static volatile uint32_t ticked;
 
 static int read_voltage_mv(void *context, float *into_mv, uint32_t cells)
 {
@@ -60,7 +67,27 @@ static uint32_t clock_us(void *context)
 
 static void tick(void)
 {
+    /* Here, so that it works with a main loop that hangs. */
+    if (board_stop_is_held()) {
+        gsm_device_stop(&device);
+    }
     gsm_device_tick(&device);
+    ticked = 1u;
+}
+
+/* A turn of the main loop: serve the line, and let current out only while all is well. */
+static void turn(void)
+{
+    const int outcome = gsm_device_poll(&device);
+
+    board_relay(outcome != GSB_ERROR_CLOCK && device.state == GSM_ARMED && !device.unwritten);
+    if (outcome == GSB_ERROR_LINK) {
+        gsm_device_connect(&device);
+    }
+    if (ticked != 0u) {
+        ticked = 0u;
+        board_watchdog_kick();
+    }
 }
 
 int main(void)
@@ -87,10 +114,9 @@ int main(void)
     }
     board_text("model " GSM_MODEL_NAME " " GSM_MODEL_SHA256 "\n");
     board_tick_every((uint32_t)(GSM_INTERVAL_US * (BOARD_HZ / 1000000u)), tick);
+    board_watchdog_start(WATCHDOG_COUNTS);
     for (;;) {
-        if (gsm_device_poll(&device) == GSB_ERROR_LINK) {
-            gsm_device_connect(&device);
-        }
-        board_rest(); /* until the next tick at the latest */
+        turn();
+        board_rest(); /* until the next tick; when none comes, until the watchdog's reset */
     }
 }
