@@ -98,25 +98,73 @@ def test_dac_codes_are_the_nearest_in_range(dac, i_pa):
 
 
 @pytest.mark.parametrize(
-    "wrong",
+    ("wrong", "nearest_to_zero"),
     [
-        (0, 1.0, 0.0),
-        (25, 1.0, 0.0),
-        (12, 0.0, 0.0),
-        (12, math.nan, 0.0),
-        (12, math.inf, 0.0),
-        (12, 1.0, math.nan),
+        ((0, 1.0, 0.0), 0),
+        ((25, 1.0, 0.0), 0),
+        ((25, 1.0, 2048.0), 2048),
+        ((12, 0.0, 0.0), 0),
+        ((12, 0.0, 2048.0), 2048),
+        ((12, math.nan, 2047.75), 2048),
+        ((12, math.inf, 5000.0), 4095),
+        ((12, 1.0, math.nan), 2047),
+        ((12, 1.0, math.inf), 2047),
     ],
 )
-def test_converters_that_cannot_be_are_refused(wrong):
-    """An error; and used all the same, no voltage and the lowest code, never more."""
+def test_converters_that_cannot_be_are_refused(wrong, nearest_to_zero):
+    """An error; and used all the same, no voltage and the code nearest to 0 pA."""
     c, converter = library(), Converter(*wrong)
     assert c.gsb_converter_check(ctypes.byref(converter)) == ARGUMENT
     assert math.isnan(c.gsb_adc_mv(ctypes.byref(converter), ctypes.c_uint32(5)))
-    assert c.gsb_dac_code(ctypes.byref(converter), _f(5.0)) == 0
+    for i_pa in (5.0, -1e6, math.nan):
+        assert c.gsb_dac_code(ctypes.byref(converter), _f(i_pa)) == nearest_to_zero
+    assert c.gsb_dac_check(ctypes.byref(converter), _f(1e-3)) == ARGUMENT
     assert c.gsb_dac_pa(ctypes.byref(converter), ctypes.c_uint32(5)) == 0.0
     sound = Converter(12, 1.0, 2048.0)
     assert c.gsb_converter_check(ctypes.byref(sound)) == 0
+
+
+@given(_converters(), st.floats(2.0**-8, 2.0**30, width=32))
+def test_a_dac_is_taken_if_it_can_give_every_current_of_the_limit(dac, current_pa):
+    """Refused where a current within the limit would be cut by the range; else within a code.
+
+    By the range in float64; a case at its very edge, to a code and float32's rounding, is
+    left open.
+    """
+    c = library()
+    ends = [(code - dac.code_at_zero) * dac.per_code for code in (0, 2**dac.bits - 1)]
+    spare = min(max(ends), -min(ends)) - current_pa
+    taken = c.gsb_dac_check(ctypes.byref(dac), _f(current_pa)) == 0
+    edge = abs(dac.per_code) + 1e-6 * (current_pa + max(map(abs, ends)))
+    if abs(spare) > edge:
+        assert taken == (spare > 0)
+    if taken:
+        for i_pa in (current_pa, -current_pa, current_pa / 3):
+            code = c.gsb_dac_code(ctypes.byref(dac), _f(i_pa))
+            assert abs(c.gsb_dac_pa(ctypes.byref(dac), code) - i_pa) <= edge
+
+
+@pytest.mark.parametrize(
+    ("dac", "current_pa"),
+    [
+        ((12, 1.0, -1.0), 1.0),
+        ((12, 1.0, 4096.0), 1.0),
+        ((12, 1.0, 0.0), 500.0),
+        ((12, 1.0, 2048.0), 2050.0),
+        ((12, -1.0, 2048.0), 3000.0),
+        ((12, 1.0, 2048.0), 0.0),
+        ((12, 1.0, 2048.0), -5.0),
+        ((12, 1.0, 2048.0), math.nan),
+        ((12, 1.0, 2048.0), math.inf),
+    ],
+)
+def test_a_dac_that_cannot_give_the_limit_is_refused(dac, current_pa):
+    """No code for 0 pA, one sign only, too narrow, or a limit that is none."""
+    c = library()
+    assert c.gsb_dac_check(ctypes.byref(Converter(*dac)), _f(current_pa)) == ARGUMENT
+    for per_code in (1.0, -1.0):
+        sound = Converter(12, per_code, 2048.0)
+        assert c.gsb_dac_check(ctypes.byref(sound), _f(2000.0)) == 0
 
 
 def _config(**changes):

@@ -160,6 +160,7 @@ static void device(const struct gsb_link_type *type, const uint8_t *bytes, size_
     config.interval_us = 50;
     config.on_arrival = size & 1;
     config.silence_us = 400;
+    config.greeting_us = size & 2 ? 3000 : 0;
     for (int k = 0; k < CELLS; k++) {
         config.cell[k].current_pa = LIMIT_PA;
         config.cell[k].slew_pa_per_ms = 4000;

@@ -83,7 +83,7 @@ static void configure(struct gsb_rig_config *config)
     config->silence_us = 10000;   /* 0 pA when no answer has come for 10 ms */
     config->greeting_us = 0;      /* a serial line may wait for its host for ever */
     config->cell[0].current_pa = 1000.0f;
-    config->cell[0].slew_pa_per_ms = 2000.0f; /* next-tick: twice the server's; README.md */
+    config->cell[0].slew_pa_per_ms = 2000.0f; /* see README.md, Slew */
     config->cell[0].window_low_mv = -150.0f;
     config->cell[0].window_high_mv = 100.0f;
 }
