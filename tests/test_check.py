@@ -15,6 +15,8 @@ from hypothesis import strategies as st
 from gatestep import hostfacts, remedies
 from gatestep.cli import main
 from gatestep.commands import check as command
+from gatestep.commands.check_record import record_finding
+from gatestep.config import load_rig
 from gatestep.hostfacts import FACTS, Finding, Host, host_findings
 from gatestep.specs import HostSpec
 
@@ -316,6 +318,10 @@ def test_the_command_exits_0_however_weak_the_host(tmp_path):
         "real-time throttling", "real-time policy", "locked memory", "idle states",
         "huge pages", "machine", "load",
     ]  # fmt: skip
+    [record] = found["record"]
+    # 56 bytes and 24 for each of two cells, every tick.
+    assert record["bytes_per_s"] == pytest.approx(104 * 1e6 / 50.0)
+    assert record["hours"] == pytest.approx(record["free_bytes"] / record["bytes_per_s"] / 3600)
     known, unknown = found["stability"]
     assert (known["cell"], known["verdict"]) == ("a", "ok")
     assert known["plain_limit_ns"] == pytest.approx(540.0, rel=0.02)
@@ -341,7 +347,7 @@ def test_the_table_for_people_has_verdicts_and_whole_remedies(tmp_path, monkeypa
     rig = write_rig(tmp_path, 'name = "a"\nmodel = "leak"\ncapacitance_pf = 30.0')
     assert run(monkeypatch, "check", str(rig)) == 0
     shown = capsys.readouterr().out
-    for heading in ("Files", "Host", "Stability and fidelity of the loop"):
+    for heading in ("Files", "Record", "Host", "Stability and fidelity of the loop"):
         assert f"\n{heading}" in f"\n{shown}"
     assert "6.12.9-rt, PREEMPT_RT" in shown
     assert "  locked memory: in the rig file: [host] lock_memory = true\n" in shown
@@ -373,6 +379,24 @@ def test_a_faulty_rig_file_exits_1_with_its_faults(tmp_path, monkeypatch, capsys
     said = capsys.readouterr()
     assert said.out == ""
     assert f'gatestep: {rig}: cell "a": capacitance_pf: found -1.0' in said.err
+
+
+@pytest.mark.parametrize(
+    ("text", "verdict", "words"),
+    [
+        ("on = false", "weak", "off"),
+        ('folder = "a-file/records"', "missing", "cannot be written"),
+        ('folder = "new/records"', "ok", "hours"),
+    ],
+)
+def test_the_record_is_judged_before_it_is_needed(tmp_path, text, verdict, words):
+    """Off, a file in the folder's way, a folder that is yet to be made."""
+    (tmp_path / "a-file").write_text("x", "utf-8")
+    rig = write_rig(tmp_path, f'name = "a"\nmodel = "leak"\n\n[record]\n{text}')
+    finding = record_finding(load_rig(rig))
+    assert finding.verdict == verdict
+    assert words in finding.found
+    assert (finding.remedy is None) == (verdict == "ok")
 
 
 def test_another_section_can_be_added(tmp_path, monkeypatch, capsys):

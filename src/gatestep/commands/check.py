@@ -133,6 +133,13 @@ def files_section(checked: Checked) -> Section:
     return Section("files", "Files", checked.files)
 
 
+def record_section(checked: Checked) -> Section:
+    """The journal that a server will keep."""
+    from .check_record import record_finding
+
+    return Section("record", "Record", [record_finding(checked.rig)])
+
+
 def host_section(checked: Checked) -> Section:
     """The host, a real-time policy tried on a thread included."""
     from .. import hosttune
@@ -178,6 +185,7 @@ def _stability(rig: LoadedRig, index: int, tables: Tables) -> Finding:
 
 SECTIONS: tuple[Callable[[Checked], Section], ...] = (
     files_section,
+    record_section,
     host_section,
     stability_section,
 )
