@@ -11,7 +11,7 @@ from contextlib import contextmanager
 import numpy as np
 import pytest
 import zmtp_reference as rfc
-from conftest import RawRig, running, wait_until
+from conftest import PATIENCE_S, RawRig, running, wait_until
 from framed_host import ANSWER, BYE, HELLO, SAMPLE, WELCOME, encode
 from hypothesis import given
 from hypothesis import strategies as st
@@ -235,6 +235,23 @@ def test_hellos_are_not_answered_with_a_flood(tmp_path):
                 goodbyes += 1
                 made.device.hello()
     assert 1 <= goodbyes <= 7
+
+
+def test_a_goodbye_that_is_lost_is_said_again(tmp_path):
+    """A device that goes on sampling is told until it says hello, four times a second at most."""
+    with armed(tmp_path / "a") as server, bench(tmp_path, loop_of(server)) as made:
+        lost = 0
+        begun = time.monotonic()
+        while lost < 3:  # it has not heard them
+            assert time.monotonic() < begun + PATIENCE_S
+            made.device.sample(lost, -65.0)
+            frame = made.device.hear(0.01)
+            assert frame is None or frame.kind == BYE
+            lost += frame is not None
+        assert time.monotonic() - begun > 0.4
+        made.device.join()
+        assert made.device.ask(7, -65.0)[0] == 7
+        assert made.bridge.figures()["samples"] == server.control.status()["answered"] == 1
 
 
 @pytest.mark.parametrize(

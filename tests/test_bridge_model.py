@@ -45,11 +45,12 @@ NAMES = ["K.gmax_ns", "K.reversal_mv", "trace.every_ticks"]
 class ModelDevice(threading.Thread):
     """The device's end from SPEC.md alone, on a thread; it can lose what it hears and says."""
 
-    def __init__(self, pty, hello=(1, 0, 1, 20.0, 2), lossy=False):
+    def __init__(self, pty, hello=(1, 0, 1, 20.0, 2), lossy=False, deaf=0):
         super().__init__(daemon=True)
+        self.deaf = deaf  # goodbyes that it does not hear, running from before
         self.line, self.hello, self.lossy = FakeDevice(pty), list(hello), lossy
         self.values = [12.5, -77.0, 0.0]
-        self.armed, self.open, self.over = False, False, threading.Event()
+        self.armed, self.open, self.over = False, deaf > 0, threading.Event()
         self.done, self.last, self.seq, self.heard = [], None, 0, []
         self.orders = 0
 
@@ -59,7 +60,8 @@ class ModelDevice(threading.Thread):
 
     def run(self):
         greeted = 0.0
-        while not self.over.is_set():
+        frame = None
+        while frame is not None or not self.over.is_set():
             if not self.open and time.monotonic() - greeted > 0.1:
                 greeted = time.monotonic()
                 self.line.write(b"\0" + encode(HELLO, self.hello))
@@ -76,6 +78,8 @@ class ModelDevice(threading.Thread):
         if kind == WELCOME:
             assert items == self.hello[:3]
             self.open = True
+        elif kind == BYE and self.deaf:
+            self.deaf -= 1
         elif kind == BYE:
             self.armed = self.open = False
             self.line.send(HELLO, self.hello)
@@ -157,6 +161,14 @@ def test_parameters_arming_and_samples(tmp_path, lossy):
     assert armed[-1].i_pa == (float(np.float32(36.1)) * 0.5,)
     assert there.heard.count(ALIVE) >= 3
     assert BYE in there.heard[2:]  # and not only at the start
+
+
+def test_a_goodbye_that_is_lost_is_said_again(tmp_path):
+    """A device that runs from before says hello only to a bye: the first may be lost."""
+    with supervised(tmp_path, deaf=2) as (there, supervisor, _):
+        supervisor.set("K.gmax_ns", 3.0)
+    assert there.heard[:4] == [BYE, BYE, BYE, WELCOME]
+    assert there.values[0] == 3.0
 
 
 def test_what_the_device_refuses_is_an_error_in_words(tmp_path):

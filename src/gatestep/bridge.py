@@ -243,9 +243,6 @@ def _forward(m: Any) -> None:
     """[hot] Put the sample that has just come on its way to the server."""
     bridge, unframer = m.bridge[0], m.unframer[0]
     size = unframer.length - 3
-    if bridge.server < 0 or not bridge.welcomed:
-        bridge.unserved += 1
-        return
     if bridge.stuck and bridge.held_sample:
         bridge.dropped += 1
     _copy(bridge.sample, unframer.bytes, np.int64(1), size)
@@ -272,8 +269,11 @@ def _carry_samples(m: Any) -> int:
         if found != WHOLE:
             break
         kind = np.int64(unframer.bytes[0])
-        if kind == _SAMPLE:
+        if kind == _SAMPLE and bridge.server >= 0 and bridge.welcomed:
             _forward(m)
+        elif kind == _SAMPLE:
+            bridge.unserved += 1
+            status = _CONTROL
         elif kind == _HELLO or kind == _BYE:
             status = _CONTROL
         else:
@@ -439,9 +439,9 @@ def _serve_server(m: Any, now: int) -> int:
 def carry(m: Any) -> int:
     """[hot] Carry samples and answers until the caller is needed; a :class:`Status`.
 
-    ``CONTROL``: a hello or goodbye of the device stands in ``unframer``; call again for
-    what came after it. ``SERVER_GONE`` may come after the frames it came with were read:
-    take the server away before calling again.
+    ``CONTROL``: a hello or goodbye of the device stands in ``unframer``, or a sample of one
+    that is not welcome; call again for what came after it. ``SERVER_GONE`` may come after
+    the frames it came with were read: take the server away before calling again.
     """
     bridge = m.bridge[0]
     status = _carry_samples(m)

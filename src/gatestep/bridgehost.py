@@ -105,7 +105,7 @@ class Bridge:
         self._memory = make_memory()
         self._line: Line | None = Line(device, baud)
         self._server: socket.socket | None = None
-        self._attempt_s = self._welcomed_s = -1e9
+        self._attempt_s = self._welcomed_s = self._goodbye_s = -1e9
         self._told = ""
         self._state, self.openings, self.connections = "greeting", 0, 0
         self._fault: BaseException | None = None
@@ -191,7 +191,7 @@ class Bridge:
         self.openings += 1
         self._state = "greeting"
         take_line(self._memory, line.reading, line.writing)
-        self._put(b"\0" + encode_frame(Kind.BYE))
+        self._say_goodbye(None)
         while True:
             status = Status(carry(self._memory))
             if status == Status.CONTROL:
@@ -223,20 +223,20 @@ class Bridge:
         self._close_server()
         self._say(f"{self.endpoint}: the server is gone; the device is told to go to 0 pA")
         self._state, self._told = "no server", ""
-        self._put(_goodbye(Reason.SERVER_GONE))
+        self._say_goodbye(Reason.SERVER_GONE)
 
     def _control(self) -> None:
-        """A hello or a goodbye has come."""
+        """A hello or a goodbye has come, or a sample of a device that is not welcome."""
         unframer = self._memory.unframer[0]
         body = unframer.bytes[: unframer.length - 2].tobytes()
-        if body[0] == Kind.BYE:
+        if body[0] == Kind.SAMPLE:
+            self._repeat_goodbye()
+        elif body[0] == Kind.BYE:
             if self._server is not None:
                 self._say("the device said goodbye; its connection to the server ends")
             self._close_server()
             self._state = "greeting"
-            return
-        hello = read_hello(body[1:])
-        if hello is None:
+        elif (hello := read_hello(body[1:])) is None:
             self._say_once("the device's hello cannot be read")
         elif (refusal := self._refusal(hello)) is not None:
             self._refuse(*refusal)
@@ -269,7 +269,17 @@ class Bridge:
             return
         self._say_once(f"refused: {why}")
         self._close_server()
-        self._put(_goodbye(reason))
+        self._say_goodbye(reason)
+
+    def _repeat_goodbye(self) -> None:
+        """The last one was lost, or its samples are older: without a bye it never says hello."""
+        if time.monotonic() - self._goodbye_s >= _BETWEEN_ATTEMPTS_S:
+            self._say_goodbye(None)
+
+    def _say_goodbye(self, reason: Reason | None) -> None:
+        """A goodbye on its way, after a 0 that ends what was damaged before it."""
+        self._goodbye_s = time.monotonic()
+        self._put(b"\0" + (encode_frame(Kind.BYE) if reason is None else _goodbye(reason)))
 
     def _may_try(self) -> bool:
         now = time.monotonic()
@@ -306,7 +316,7 @@ class Bridge:
         except (LinkError, ValueError, OverflowError) as fault:  # the last two: of its address
             self._state = "no server"
             self._say_once(f"{fault}; tried again at each hello of the device")
-            self._put(_goodbye(Reason.SERVER_GONE))
+            self._say_goodbye(Reason.SERVER_GONE)
             return False
         self._server.setsockopt(socket.SOL_SOCKET, socket.SO_SNDBUF, SEND_BUFFER)
         take_server(self._memory, self._server.fileno())

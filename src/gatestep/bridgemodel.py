@@ -28,11 +28,13 @@ ALIVE_S = 0.03
 EVERY = "trace.every_ticks"
 _MODEL = 2
 _GREETING_S = 5.0
+_BETWEEN_GOODBYES_S = 0.25
 _ANSWER_S = 0.25
 _TRIES = 8
 _CODES = {
     1: "no such parameter, or a value that it cannot have",
     3: "what was ordered cannot be read",
+    7: "it was stopped, or the line was lost, before it could",
     10: "the voltage is outside its window",
     11: "its converter cannot be read",
     12: "its converter cannot be written",
@@ -137,9 +139,13 @@ class Supervisor:
             self._line.write(b"\0" + _frame(Kind.BYE, int(Reason.HOST_STOPS)))
 
     def _greet(self) -> Hello:
-        self._line.write(b"\0" + encode_frame(Kind.BYE))
         end = time.monotonic() + _GREETING_S
-        while time.monotonic() < end:
+        said_s = 0.0
+        while (now := time.monotonic()) < end:
+            # A device that runs from before says hello only to a bye, and one may be lost.
+            if now - said_s >= _BETWEEN_GOODBYES_S:
+                self._line.write(b"\0" + encode_frame(Kind.BYE))
+                said_s = now
             for frame in self._frames(0.1):
                 hello = read_hello(frame.payload) if frame.kind == Kind.HELLO else None
                 if hello is not None:
