@@ -23,6 +23,8 @@ if TYPE_CHECKING:
 
 _LOOK_S = 0.05
 _FLUSH_S = 1.0
+_USUAL_US = 100_000.0
+"""Between samples of a device that sent none: how soon a trip is known of."""
 
 
 def supervise(
@@ -47,7 +49,8 @@ def supervise(
     assignments : list of str
         Parameters to set first, as ``K.gmax_ns=120``.
     every : int, optional
-        One sample in so many ticks is sent; 0 for none. As it is, if not given.
+        One sample in so many ticks is sent; 0 for none, and then nothing tells of a trip. If
+        not given, as it is, or one in about 100 ms where it is 0.
     arm : bool
         Arm at once.
     trace_file : Path, optional
@@ -82,8 +85,10 @@ def supervise(
     ):
         for name, value in sets:
             supervisor.set(name, value)
+        if EVERY not in dict(sets):
+            _have_samples(supervisor)
         print(_shown(supervisor), file=sys.stderr, flush=True)
-        if arm:
+        if arm and not asked:
             supervisor.arm()
             _say("armed")
         _attend(supervisor, orders, asked, seconds)
@@ -179,7 +184,7 @@ def _attend(
     end = time.monotonic() + seconds if seconds is not None else float("inf")
     while not asked and time.monotonic() < end:
         supervisor.attend(min(_LOOK_S, max(0.0, end - time.monotonic())))
-        while not orders.empty():
+        while not asked and not orders.empty():
             order = orders.get()
             if order == "stop":
                 return
@@ -187,6 +192,15 @@ def _attend(
                 _carry_out(supervisor, order)
             except ControlError as fault:
                 _say(str(fault))
+
+
+def _have_samples(supervisor: Supervisor) -> None:
+    """Only samples tell of a trip: ask for a few where the device sends none."""
+    from ..bridgemodel import EVERY
+
+    every = supervisor.parameters.get(EVERY)
+    if every is not None and every.value == 0.0:
+        supervisor.set(EVERY, max(1.0, round(_USUAL_US / supervisor.hello.interval_us)))
 
 
 def _carry_out(supervisor: Supervisor, order: str) -> None:
