@@ -338,7 +338,10 @@ def test_a_host_supervises_the_model_on_the_device():
 
 SYSTICK_OFF = "*(volatile uint32_t *)0xE000E010u = 0u;"
 ENDS = {
-    "ticks": ("    ticked = 1u;\n", f"    ticked = 1u;\n    if (device.beats > 99u) {SYSTICK_OFF}\n"),
+    "ticks": (
+        "    ticked = 1u;\n",
+        f"    ticked = 1u;\n    if (device.beats > 99u) {SYSTICK_OFF}\n",
+    ),
     "loop": ("        turn();\n", "        while (device.beats > 100u) {}\n        turn();\n"),
 }
 
