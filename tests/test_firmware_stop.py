@@ -21,7 +21,7 @@ from test_firmware_device import (
     armed,
 )
 
-OVERTAKEN = 7  # GSB_ERROR_LINK
+OVERTAKEN = 17  # GSB_ERROR_STOPPED
 GAP_TICKS = 20
 
 

@@ -123,7 +123,7 @@ static void obey(struct gsm_device *device)
     } else if (order->kind == GSB_KIND_ARM) {
         /* A stop, or a line that was lost, since it was given is the last word. */
         device->order_result =
-            order->releases == device->released ? arm(device) : GSB_ERROR_LINK;
+            order->releases == device->released ? arm(device) : GSB_ERROR_STOPPED;
     } else {
         device->state = GSM_DISARMED;
         device->order_result = GSB_OK;

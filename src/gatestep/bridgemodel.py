@@ -34,11 +34,11 @@ _TRIES = 8
 _CODES = {
     1: "no such parameter, or a value that it cannot have",
     3: "what was ordered cannot be read",
-    7: "it was stopped, or the line was lost, before it could",
     10: "the voltage is outside its window",
     11: "its converter cannot be read",
     12: "its converter cannot be written",
     15: "its clock is not right",
+    17: "it was stopped, or the line was lost, before it could",
 }
 
 
