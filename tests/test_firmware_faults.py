@@ -101,11 +101,12 @@ def test_silence_is_found_by_a_slow_clock_too(on_arrival, rate):
 def test_an_answer_from_long_ago_is_ignored_by_a_slow_clock_too():
     """Its age is counted in ticks as well."""
     rig = _Rig()
-    for k in range(30):
-        assert rig.tick(10 + 2 * k) == 0
-        rig.answer(10 + 2 * k, k - 22 if k > 25 else k - 1)
-    assert rig.answer(70, 7) == IGNORED
-    assert rig.answer(70, 28) == 0
+    for k in range(40):
+        assert rig.tick(2 * k) == 0
+        if 15 <= k < 30:
+            assert rig.answer(2 * k, k - 15) == 0
+    assert rig.answer(80, 18) == IGNORED  # 22 ticks, 44 us by its clock
+    assert rig.answer(80, 19) == 0
 
 
 class _Rig:
