@@ -33,7 +33,7 @@ def test_from_the_command_line(tmp_path):
                 command + options, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
             )
             device.join()
-            end = time.monotonic() + 1.5
+            end = time.monotonic() + 1.1
             k = 0
             while time.monotonic() < end:
                 assert device.ask(k, -65.0)[0] == k

@@ -311,18 +311,18 @@ def test_a_configuration_that_cannot_be_starts_nothing(wrong):
     assert (c.shim_current_pa(), c.shim_state()) == (0.0, DISARMED)
 
 
-def test_a_million_damaged_streams_under_the_sanitizers(tmp_path):
+def test_damaged_streams_under_the_sanitizers(tmp_path):
     """Frames in any order, bits flipped, streams cut: no memory fault, no current out of bounds."""
     made = folder(MODEL)
     target = tmp_path / "fuzz"
     include = ["-I", made, "-I", made / "library", "-I", FUZZ.parent]
     flags = [*STRICT, *SANITIZED, "-ffp-contract=off"]
     run([*compiler(), *flags, *include, "-o", target, FUZZ, *sources(made)])
-    said = run([target, 1_000_000, 1]).stdout
+    said = run([target, 100_000, 1]).stdout
     streams, armed_at, current_at, faults = map(int, re.findall(r"\d+", said))
-    assert streams == 1_000_000
-    assert armed_at > current_at > 100_000
-    assert faults > 1000
+    assert streams == 100_000
+    assert armed_at > current_at > 10_000
+    assert faults > 100
 
 
 def test_thinned_samples_carry_what_was(device):

@@ -6,12 +6,13 @@ machine's compiler, as C99 and as C++ with warnings as errors.
 
 from __future__ import annotations
 
+import io
 import itertools
 import json
 import re
 import shutil
-import subprocess
 import sys
+from contextlib import redirect_stderr, redirect_stdout
 
 import numpy as np
 import pytest
@@ -20,6 +21,7 @@ from firmware_model_build import TICK_US, folder, library, same_bits, sources, t
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from gatestep.cli import main
 from gatestep.errors import FirmwareError
 from gatestep.firmware import INTERVAL_US, LOW_MV, ROWS, SPAN_MV, device_tables
 from gatestep.firmware_errors import (
@@ -283,9 +285,14 @@ def test_another_tick_or_grid_is_another_model():
 
 def asked(*arguments: object) -> tuple[int, str, str]:
     """Status, stdout and stderr of ``gatestep firmware``."""
-    command = [sys.executable, "-m", "gatestep", "firmware", *map(str, arguments)]
-    done = subprocess.run(command, capture_output=True, text=True, check=False)
-    return done.returncode, done.stdout, done.stderr
+    out, err, status = io.StringIO(), io.StringIO(), 0
+    with pytest.MonkeyPatch.context() as patch, redirect_stdout(out), redirect_stderr(err):
+        patch.setattr(sys, "argv", ["gatestep", "firmware", *map(str, arguments)])
+        try:
+            main()
+        except SystemExit as ended:
+            status = int(ended.code or 0)
+    return status, out.getvalue(), err.getvalue()
 
 
 def test_it_prints_what_each_number_of_rows_misses(tmp_path):

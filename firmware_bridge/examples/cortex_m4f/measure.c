@@ -8,7 +8,9 @@
 
 #include <string.h>
 
+#ifndef STEPS
 #define STEPS 20000u
+#endif
 #define COUNTED 1000u
 #define COUNT_NSEC 40u /* of the clock; an instruction is 1 ns */
 
