@@ -261,13 +261,13 @@ def test_links_lead_somewhere(path):
 def test_the_rig_loop_of_the_readme_runs(serving):
     """README's example, run against a server: armed, its cell is pulled to the leak's reversal.
 
-    A leak of 3 nS at -65 mV and a virtual one of 1 nS at -60 mV meet at -63.75 mV (circuit law).
+    A leak of 3 nS at -75 mV and a virtual one of 1 nS at -60 mV meet at -71.25 mV (circuit law).
     """
     server = serving(loop={"interval_us": 50.0}, cell=[{"name": "cell", "model": "leak"}])
     server.control.set("leak.reversal_mv", -60.0)
     server.control.arm()
     example = re.search(r"```python\n(.*?)```", README, re.DOTALL)[1]
-    assert example.count("\n") <= 22
+    assert example.count("\n") <= 23
     names: dict[str, object] = {}
     example = example.replace("tcp://127.0.0.1:5790", server.server.endpoints()["loop"])
     exec(example.replace("TIMEOUT_MS = 50, 100", "TIMEOUT_MS = 50, 20_000"), names)
@@ -279,7 +279,7 @@ def test_the_rig_loop_of_the_readme_runs(serving):
         time.sleep(0.01)
     assert status["late"] == status["missed"] == status["malformed"] == 0
     assert status["answered"] == 20_000
-    assert names["v_mv"] == pytest.approx(-63.75, abs=1e-6)
+    assert names["v_mv"] == pytest.approx(-71.25, abs=1e-6)
 
 
 PACKAGE = ROOT / "src" / "gatestep"

@@ -479,7 +479,7 @@ def test_arming_a_tripped_loop(desk):
 def test_arming_with_a_wrong_tick(desk, tick_us):
     """The refusal names both ticks; a clock that stands still shows one of 0."""
     show_loop(desk, tick_us=tick_us, tick_wrong=1)
-    refused(desk.do("arm", Outcome.WRONG_TICK), "arm", f"{tick_us:g} us", "20")
+    refused(desk.do("arm", Outcome.WRONG_TICK), "arm", f"{tick_us:g} µs", "20")
 
 
 def test_arming_while_stopping(desk):

@@ -37,3 +37,7 @@ def __getattr__(name: str) -> Any:
     if name in _HOMES:
         return getattr(import_module(f".{_HOMES[name]}", __name__), name)
     raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+
+
+def __dir__() -> list[str]:
+    return sorted(__all__)

@@ -75,3 +75,24 @@ CurveClient = Annotated[
     Path | None, typer.Option("--curve-client", help="Our secret CURVE certificate.")
 ]
 CONTROL = "tcp://127.0.0.1:5791"
+
+
+def _show_version(wanted: bool) -> None:
+    if wanted:
+        from . import __version__
+
+        print(f"gatestep {__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def options(
+    version: Annotated[
+        bool,
+        typer.Option("--version", callback=_show_version, is_eager=True, help="Show the version."),
+    ] = False,
+) -> None:
+    """Give a live cell a conductance it does not have.
+
+    A measured voltage in, a model's current out, in real time.
+    """

@@ -105,8 +105,11 @@ def compare(
         for stretch in replay.run(limit):
             _compare(verdict, stretch, journal)
             progress(replay.position, len(journal.samples))
-    except JournalError as fault:
-        verdict.stopped = str(fault)
+    except JournalError:
+        verdict.stopped = (
+            f"the record is damaged from sample {replay.position} on, and the gates of all that "
+            "followed depend on what is missing"
+        )
     verdict.unlike = replay.unlike
     if limit is not None and verdict.stopped is None:
         verdict.stopped = (

@@ -21,7 +21,7 @@ class Piece(NamedTuple):
 
 
 class Samples:
-    """The samples of a journal, as a sequence; slices are structured arrays.
+    """The samples of a journal, as a sequence: slices are structured arrays, a name is a column.
 
     Parameters
     ----------
@@ -43,8 +43,10 @@ class Samples:
     @overload
     def __getitem__(self, at: int) -> np.void: ...
     @overload
-    def __getitem__(self, at: slice) -> np.ndarray: ...
-    def __getitem__(self, at: int | slice) -> Any:
+    def __getitem__(self, at: slice | str) -> np.ndarray: ...
+    def __getitem__(self, at: int | slice | str) -> Any:
+        if isinstance(at, str):
+            return self.column(at)
         if isinstance(at, slice):
             start, stop, step = at.indices(len(self))
             if step < 0:

@@ -298,6 +298,8 @@ def _let_go(m: Any, fault: int, now: int) -> None:
         _log_event(m, _TRIP, loop.fault, loop.fault_cell, now)
     loop.held = 0
     loop.running = 0
+    loop.tick_us = 0.0
+    loop.tick_wrong = 0
     m.desk[0].holder_size = 0
     _clear_agenda(m, now)
     _log_event(m, _RELEASE, loop.session, NIL, now)

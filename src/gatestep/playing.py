@@ -132,6 +132,9 @@ class Player:
         seq = self._watch.seq
         if not self._watch.held or seq is None:
             raise ControlError("run: no rig holds the loop; start the rig, then run the plan")
+        if self._watch.state == State.TRIPPED:
+            fault = self._watch.summary()["fault"]
+            raise ControlError(f"run: the loop has tripped ({fault}); mend that, then reset")
         if self._watch.session != session:
             raise ControlError("run: another rig has come meanwhile; run the plan again")
         before = [ready for ready in self._shelf.in_force if ready is not None]
@@ -416,6 +419,7 @@ class Player:
             "sweep": place,
             "name": one.sweep.name,
             "condition": one.sweep.condition,
+            "current_pa": one.sweep.step["current_pa"] if one.sweep.step else None,
             "start": played.start,
             "ticks": one.ticks,
             "ticks_done": played.samples,

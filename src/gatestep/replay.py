@@ -221,6 +221,7 @@ class Replay:
             begin_session(loop, self._m.cells, self._m.past)
         elif event.kind == "release":
             loop.running = 0
+            loop.tick_wrong = 0
         elif event.kind == "trip":
             self._trip(event)
         elif event.kind == "in_force":

@@ -284,7 +284,7 @@ class Server:
         notice = threading.Timer(
             _QUIET_S,
             self._say,
-            ["compiling the loop; only the first start on a machine does this"],
+            ["compiling the loop, as the first start of an installation does"],
         )
         notice.start()
         try:

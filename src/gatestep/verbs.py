@@ -393,7 +393,7 @@ class Verbs:
         if event.outcome == Outcome.WRONG_TICK:
             tick = self._watch.summary()["tick_us"]
             raise ControlError(
-                f"arm: the rig's clock shows a tick of {tick:.6g} us and loop.interval_us is "
+                f"arm: the rig's clock shows a tick of {tick:.6g} µs and loop.interval_us is "
                 f"{self._rig.spec.loop.interval_us:g}; make them agree"
             )
         return {"forced": force}

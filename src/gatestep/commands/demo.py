@@ -128,7 +128,7 @@ def demo(seconds: float, out: Path, json_output: bool) -> int:
     rig_file = write_rig(out / "rig.toml", INTERVAL_US, _CELLS)
     plan_file = write_file(out / "plan.toml", _plan(scenario(seconds)))
     with _bar(not json_output) as progress:
-        progress("starting; the first start on a machine compiles", None)
+        progress("starting; the first start of an installation compiles", None)
         played = _play(rig_file, plan_file, progress)
         proof = _prove(out, progress)
         progress("replaying and reporting", None)
@@ -343,8 +343,9 @@ def _bar(shown: bool) -> Iterator[Any]:
 
         def show(phase: str, fraction: float | None) -> None:
             if fraction is None:
-                bar.update(task, description=phase)
+                bar.update(task, description=phase, total=None)
             else:
-                bar.update(task, description=phase, total=1.0, completed=fraction)
+                # Never quite whole: the clock of a task that is done stands still.
+                bar.update(task, description=phase, total=1.0, completed=min(fraction, 0.99))
 
         yield show

@@ -125,7 +125,7 @@ def row_of(made: Measured, cells: Sequence[str]) -> Row:
         "rest_mv": fired.rest_mv,
         "spikes": len(fired.spikes),
         "spikes_outside": fired.outside,
-        "rate_hz": fired.rate_hz,
+        "rate_hz": fired.rate_hz if made.complete else None,
         "steady_hz": fired.steady_hz,
         "latency_ms": fired.latency_ms,
         "peak_mv": first.peak_mv if first else None,
@@ -242,9 +242,10 @@ def _table(
     table.add_column("condition", overflow="fold", min_width=10)
     for _, heading, _ in columns:
         table.add_column(heading, justify="right", no_wrap=True)
-    for row in rows:
-        named = [str(row["index"]), f"{row['sweep']} {row['repeat'] + 1}"]
-        named += [row["cell"]] * cells + [row["condition"]]
+    for number, row in enumerate(rows, 1):
+        named = [str(number), f"{row['sweep']} {row['repeat'] + 1}"]
+        cut = "" if row["complete"] else " (cut short)"
+        named += [row["cell"]] * cells + [row["condition"] + cut]
         table.add_row(*named, *(_shown(row.get(key), form) for key, _, form in columns))
     return table
 
@@ -261,7 +262,7 @@ def notes_of(result: Row) -> list[str]:
     """What a reader of the tables must know, as far as it applies."""
     rows = result["sweeps"]
     notes = []
-    cut = [str(row["index"]) for row in rows if not row["complete"]]
+    cut = [str(number) for number, row in enumerate(rows, 1) if not row["complete"]]
     if cut:
         notes.append(f"not complete: {', '.join(cut)}; not in the rates against current")
     for key, words in (

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import shlex
 import signal
 import sys
 import time
@@ -16,6 +17,7 @@ from ..plans import load_plan
 
 _POLL_S = 0.2
 _PREPARE_S = 600.0
+_RIG_S = 15.0
 _INTERRUPTED = 130
 _COMPLETE = "complete"
 
@@ -46,7 +48,7 @@ def run(
         return Control(endpoint, curve_server=curve[0], curve_client=curve[1])
 
     with connect() as control:
-        recording = control.status()["recording"]
+        recording = _wait_for_rig(control, json_output)["recording"]
         if not json_output:
             _introduce(plan, recording)
         try:
@@ -80,6 +82,19 @@ def _end(connect: Callable[[], Control]) -> dict[str, Any]:
             f"{fault}. THE PLAN MAY STILL BE PLAYING: try 'gatestep halt' or 'gatestep stop', and "
             "look at the rig's output"
         ) from fault
+
+
+def _wait_for_rig(control: Control, quiet: bool) -> dict[str, Any]:
+    """The status once a rig samples, or after some seconds without one."""
+    until, told = time.monotonic() + _RIG_S, quiet
+    while (status := control.status())["seq"] is None or status["rig"] == "none":
+        if time.monotonic() > until:
+            return status
+        if not told:
+            print("waiting for a rig", file=sys.stderr)
+            told = True
+        time.sleep(_POLL_S)
+    return status
 
 
 def _introduce(plan: Any, recording: dict[str, Any]) -> None:
@@ -133,9 +148,10 @@ def _line(sweep: dict[str, Any], count: int) -> str:
     end = "" if sweep["complete"] is not False else "  cut short"
     late = f"  {sweep['late']} late" if sweep["late"] else ""
     clipped = f"  {sweep['clipped']} clipped" if sweep["clipped"] else ""
+    step = "" if sweep["current_pa"] is None else f"{sweep['current_pa']:g} pA  "
     return (
         f"{sweep['sweep'] + 1:4d}/{count}  {sweep['name']}  {sweep['condition']}  "
-        f"{sweep['spikes']} spikes{late}{clipped}{end}"
+        f"{step}{sweep['spikes']} spike{'' if sweep['spikes'] == 1 else 's'}{late}{clipped}{end}"
     )
 
 
@@ -175,5 +191,5 @@ def _report(told: dict[str, Any], recording: dict[str, Any], json_output: bool) 
         print(f"{whole} sweeps played; 0 pA{back}")
     else:
         print(f"ended after {whole} of {told['sweeps']} sweeps ({told['why']}); 0 pA")
-    if path:
-        print(f"gatestep report {path}")
+    if path and done:
+        print(f"gatestep report {shlex.quote(path)}")

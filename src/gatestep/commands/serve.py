@@ -95,7 +95,13 @@ class Speaker:
 def _announce(endpoints: dict[str, str], record: dict[str, Any], json_output: bool) -> None:
     if json_output:
         print(
-            json.dumps({"ready": True, "endpoints": endpoints, "journal": record["path"]}),
+            json.dumps(
+                {
+                    "ready": True,
+                    "endpoints": endpoints,
+                    "journal": record["path"] if record["state"] == "on" else None,
+                }
+            ),
             flush=True,
         )
         return
@@ -110,5 +116,7 @@ def _close_report(summary: dict[str, Any], record: dict[str, Any], json_output: 
         return
     counts = ("answered", "late", "missed", "clipped", "trips")
     print("stopped at 0 pA: " + ", ".join(f"{summary[k]} {k}" for k in counts), flush=True)
-    if record["path"]:
+    if record["state"] == "failed":
+        print(f"journal: FAILED: {record['reason']}", flush=True)
+    elif record["path"]:
         print(f"journal: {record['path']}, {record['samples']} samples", flush=True)

@@ -137,7 +137,12 @@ def _text(figures: dict[str, Any]) -> str:
     if trips["p50"] is not None:
         shown = ", ".join(f"{k} {v:.0f}" for k, v in trips.items())
         lines.append(f"round trip     {shown} µs (host time)")
-    if figures.get("live", 0) == 0:
+    if figures.get("tripped", 0):
+        lines.append(
+            "note           the loop had tripped: 'gatestep status' says why, 'gatestep reset' "
+            "clears it"
+        )
+    elif figures.get("live", 0) == 0:
         lines.append("note           no answer was live: the server is not armed (gatestep arm)")
     if figures.get("refused", 0):
         lines.append("note           answers were refused: another rig holds or held the loop")
