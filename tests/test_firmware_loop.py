@@ -96,7 +96,7 @@ def _squid(serving, **loop):
 
 @pytest.mark.parametrize(
     ("current_ua_cm2", "rate_hz"),
-    [(7.0, 58.33), (10.0, 68.32), (15.0, 78.65), (20.0, 86.47), (40.0, 108.61)],
+    [(7.0, 58.33), (15.0, 78.65), (40.0, 108.61)],
 )
 def test_squid_axon_fires_at_its_steady_rate(serving, current_ua_cm2, rate_hz):
     """Rates within 1 % of the equations of Hodgkin and Huxley 1952, through the C library.
@@ -108,17 +108,17 @@ def test_squid_axon_fires_at_its_steady_rate(serving, current_ua_cm2, rate_hz):
     server.control.arm()
     step = (0, 1000, current_ua_cm2 * PA_PER_UA_CM2)
     endpoint = server.server.endpoints()["loop"]
-    keys = {"interval_us": 10, "seconds": 0.5, "limit_pa": 200_000}
-    with c_rig(endpoint, steps=[step], holds=[499.9], **keys) as rig:
+    keys = {"interval_us": 10, "seconds": 0.4, "limit_pa": 200_000}
+    with c_rig(endpoint, steps=[step], holds=[399.9], **keys) as rig:
         assert rig.until_hold()
         # Asked while the rig is there: one that leaves an armed loop trips it.
-        wait_until(lambda: server.control.status()["answered"] == 49_990, "all are counted")
+        wait_until(lambda: server.control.status()["answered"] == 39_990, "all are counted")
         status = server.control.status()
         rig.go_on()
         assert rig.finish() == 0
     steady = np.asarray(rig.spikes)[np.asarray(rig.spikes) > 200.0]
     assert 1000.0 / np.mean(np.diff(steady)) == pytest.approx(rate_hz, rel=0.01)
-    assert (rig.end["samples"], rig.end["answers"], rig.end["faults"]) == (50_000, 50_000, 0)
+    assert (rig.end["samples"], rig.end["answers"], rig.end["faults"]) == (40_000, 40_000, 0)
     assert status["state"] == "armed"
     assert (status["missed"], status["malformed"], status["repeats"]) == (0, 0, 0)
     assert server.server.rig.spec.loop.lane in ("auto", "direct")

@@ -77,7 +77,7 @@ static void configure(struct gsb_rig_config *config)
 {
     config->cells = 1;
     /* The server's loop.interval_us. A sample and its answer must fit in it: 1,000 us for a
-     * UART at 921,600 baud, 50 or 100 us for TCP or fast USB (README.md). */
+     * UART at 921,600 baud, 500 for high-speed USB, 50 to 100 for TCP (README.md). */
     config->interval_us = 1000.0f;
     config->on_arrival = 0;       /* the server's loop.apply: 0 next-tick, 1 on-arrival */
     config->silence_us = 10000;   /* 0 pA when no answer has come for 10 ms */
