@@ -19,8 +19,8 @@
 /* How long the answer takes by the cell's clock, us. */
 #define LAG_US 10u
 /* Between polls, us, by the processor's clock; and polls until the other end counts as gone. */
-#define POLL_US 100u
-#define PATIENCE 600000u
+#define POLL_US 300u
+#define PATIENCE 200000u
 
 #define LEAK_NS 9.0f
 #define LEAK_MV (-54.387f)
