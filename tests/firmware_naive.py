@@ -151,8 +151,10 @@ class Naive:
         self.applied = None if clipped else seq
 
     def write(self) -> None:
-        """Follow the log's writes: one at least for what is new, and more if they fail."""
-        while self.due and (self.fresh or (self.log and self.log[0][0] == "write")):
+        """Follow the log's writes: one at least for what is new, and one more if it fails."""
+        for _ in range(2):
+            if not (self.due and (self.fresh or (self.log and self.log[0][0] == "write"))):
+                return
             kind, i_pa, after, sound = self.take("write")
             self.fresh = False
             if [F32(i) for i in i_pa] != self.i_pa:
@@ -300,6 +302,7 @@ class Naive:
         found = unframe(between)
         if found is None:
             self.fault("frame")
+            self.write()
             return
         kind, payload = found
         if kind == 0x11 and self.opened:
@@ -360,6 +363,7 @@ class Naive:
         found = read_answer(data, self.set.cells)
         if found is None:
             self.fault("message")
+            self.write()
             return
         seq, flags, currents = found
         self.check_time()
