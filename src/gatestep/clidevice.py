@@ -44,7 +44,12 @@ def supervise(
     ] = None,
     every: Annotated[
         int | None,
-        typer.Option("--every", metavar="TICKS", min=0, help="One sample in so many; 0: none."),
+        typer.Option(
+            "--every",
+            metavar="TICKS",
+            min=0,
+            help="One sample in so many; 0: none. Else about ten a second.",
+        ),
     ] = None,
     arm: Annotated[bool, typer.Option("--arm", help="Arm at once.")] = False,
     trace: Annotated[
