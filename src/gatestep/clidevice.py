@@ -48,7 +48,7 @@ def supervise(
             "--every",
             metavar="TICKS",
             min=0,
-            help="One sample in so many; 0: none. Else about ten a second.",
+            help="One sample in so many; 0: none; else ten a second.",
         ),
     ] = None,
     arm: Annotated[bool, typer.Option("--arm", help="Arm at once.")] = False,
