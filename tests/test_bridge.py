@@ -98,7 +98,11 @@ def check_latency(bridge, figures, trips_nsec, elapsed_nsec):
 
 
 def test_samples_that_wait_for_nothing(tmp_path):
-    """A device that samples by its clock: the server gets all, the device the newest of answers."""
+    """A device that samples by its clock: the server gets all, the device the newest of answers.
+
+    Where the machine holds the server up so long that its socket is full, the newest sample
+    takes the place of those that wait, which is counted and which the server meets as a gap.
+    """
     with armed(tmp_path / "a") as server:
         wanted = {r.seq: r.i_pa for r in reference(server, [(voltage(k),) for k in range(SAMPLES)])}
     with armed(tmp_path / "b") as server, bench(tmp_path, loop_of(server)) as made:
@@ -115,13 +119,15 @@ def test_samples_that_wait_for_nothing(tmp_path):
         figures = wait_until(
             lambda: (f := made.bridge.figures())["answers"] == len(found) and f, "all is counted"
         )
-        wait_until(lambda: server.control.status()["answered"] == SAMPLES, "all is counted")
+        given = SAMPLES - figures["dropped"]
+        wait_until(lambda: server.control.status()["answered"] == given, "all is counted")
         status = server.control.status()
     assert list(found) == sorted(found)
-    assert found == {k: wanted[k] for k in found}
-    assert (figures["samples"], figures["dropped"]) == (SAMPLES, 0)
-    assert len(found) + figures["overtaken"] == SAMPLES
-    assert status["missed"] == 0
+    if not figures["dropped"]:
+        assert found == {k: wanted[k] for k in found}
+    assert figures["samples"] == given > SAMPLES // 2
+    assert len(found) + figures["overtaken"] == given
+    assert status["missed"] == figures["dropped"]
 
 
 @pytest.mark.parametrize("tcp", [False, True], ids=["ipc", "tcp"])
