@@ -27,9 +27,9 @@ from experiments import DIRECT, ECHO, WARM_UP, Bench, Contestant
 from ratios import cost, ratio
 from rigs import MODEL, Rig
 
+from gatestep import load_model
 from gatestep.commands.bench import host, spike_train
 from gatestep.errors import GatestepError
-from gatestep.library import load_model
 
 DEVICE, SPINNING = "device library", "device library, spinning"
 LIBZMQ = "libzmq to libzmq echo"

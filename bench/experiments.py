@@ -22,10 +22,10 @@ from ratios import Cost, Growth, Ratio, Rounds, cost, growth, ratio
 from rigs import INTERVAL_US, MODEL, Rig, copies
 from swapper import Swapper
 
+from gatestep import library, load_model
 from gatestep.burners import Burners, usable_cores
 from gatestep.commands.bench import Stepped, alternate
 from gatestep.errors import GatestepError
-from gatestep.library import load_model, shipped_folder
 from gatestep.specs import USUAL_PRIORITY
 
 DIRECT, LIBZMQ = "gatestep direct lane", "gatestep libzmq lane"
@@ -124,7 +124,7 @@ def swaps(bench: Bench, client: str, every_ms: float, real_time: bool = False) -
     """One server of the direct lane, in every second turn with swaps."""
     rig = Rig(real_time=real_time)
     copy = bench.folder / "copy.toml"
-    copy.write_bytes((shipped_folder() / f"{MODEL}.toml").read_bytes())
+    copy.write_bytes((library.shipped_folder() / f"{MODEL}.toml").read_bytes())
     with ExitStack() as stack:
         folder = Path(tempfile.mkdtemp(dir=bench.folder))
         quiet = _start(stack, bench, "tcp", client, rig, folder)

@@ -11,6 +11,7 @@ from contextlib import contextmanager
 import numpy as np
 import pytest
 from conftest import PATIENCE_S, RawRig, running, wait_until
+from test_loop import LEAK
 
 from gatestep.comparison import compare
 from gatestep.control import Control
@@ -20,15 +21,6 @@ from gatestep.wire import CLIPPED, GAP, LIVE
 
 TICK_US = 20.0
 V_MV = -60.0
-LEAK = """
-title = "leak"
-source = "Ohm's law"
-temperature_c = 22.0
-[[conductance]]
-name = "leak"
-gmax_ns = {g}
-reversal_mv = {e}
-"""
 
 
 def leak(folder, g: float, e: float) -> str:
