@@ -16,8 +16,8 @@ import msgpack
 import numpy as np
 import zmq
 
+from gatestep import load_model
 from gatestep.kernel import BANK, STATES, current, records, settle, step
-from gatestep.library import load_model
 from gatestep.tables import build_tables
 from gatestep.wire import LIVE
 

@@ -26,9 +26,9 @@ from experiments import CLIENTS, Bench, Group
 from report import as_json, as_text, draw
 from rigs import MODEL
 
+from gatestep import load_model
 from gatestep.commands.bench import host, spike_train
 from gatestep.errors import GatestepError
-from gatestep.library import load_model
 from gatestep.specs import MAX_CELLS, MAX_CONDUCTANCES
 
 TRANSPORTS = ("tcp", "ipc")

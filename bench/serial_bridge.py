@@ -29,9 +29,9 @@ from experiments import WARM_UP, Bench, Contestant
 from ratios import cost, ratio
 from rigs import MODEL, Rig
 
+from gatestep import load_model
 from gatestep.commands.bench import host, spike_train
 from gatestep.errors import GatestepError
-from gatestep.library import load_model
 
 STRAIGHT, BRIDGED = "device at the server", "device at a bridge"
 _LINK_S = 10.0
